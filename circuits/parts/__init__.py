@@ -1,0 +1,1 @@
+"""Netlist parts installed with polewise."""

@@ -1,0 +1,1 @@
+"""polewise: averaged netlists of power-conversion systems, checked, solved and judged."""

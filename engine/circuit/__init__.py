@@ -1,0 +1,1 @@
+"""The checked, flat, instance-expanded circuit and how text becomes one."""

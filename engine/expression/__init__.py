@@ -1,0 +1,1 @@
+"""The expression graph, exact derivatives and the flat tape."""

@@ -1,0 +1,1 @@
+"""Compiled code: tapes, sparse factors, steps. Plain arrays in, status numbers out."""

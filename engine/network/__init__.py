@@ -1,0 +1,1 @@
+"""The circuit as a graph: islands, trees, loops, cut-sets, chokes."""

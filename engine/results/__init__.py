@@ -1,0 +1,1 @@
+"""Kept quantities, records on disk, verdicts and figures."""

@@ -1,0 +1,1 @@
+"""Numerics around the kernels: operating point, events, transient."""

@@ -1,0 +1,1 @@
+"""The netlist language: text to syntax tree and back."""
