@@ -45,6 +45,8 @@ class Status(IntEnum):
     BUFFER_FULL = 1  # record buffer full: empty it and call again
     EVENT = 2  # a watched switch flipped at the present time
     TICK_AT_STOP = 3  # unused by kernels that stop before shared instants
+    HISTORY_FULL = 4  # the ring of history pieces is too small for the longest delay: workspace.grow, then call again
+    FACTORS_FULL = 5  # the factors need more room: workspace.grow, then call again
     STEP_TOO_SMALL = 10  # error control or Newton drove the step below its limit
     NO_CONVERGENCE = 11  # Newton did not converge in a restart
     SINGULAR = 12  # the iteration matrix is singular
