@@ -9,6 +9,7 @@ from typing import Literal
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar.units import Dimension
 
+SlotForm = Literal["voltage", "current", "nonlinear", "resistance", "flux", "charge", "winding"]
 SettingRole = Literal["varying", "constant", "condition", "part", "inductors", "word"]
 
 
@@ -59,13 +60,16 @@ SettingValue = Node | PartValue | str | tuple[str, ...]
 
 @dataclass(frozen=True, slots=True)
 class BranchSlot:
-    """A branch that a device brings. form "voltage": its v is given by an equation; "current": its i; "flux": v = d/dt of an expression;
-    "charge": i = d/dt of an expression; "either": a linear or non-linear relation that can be read both ways, given as a current."""
+    """A branch that a device brings.
+
+    form says what its law expresses: "voltage" its v; "current" its i, from elsewhere; "nonlinear" its i as a function of its own v;
+    "resistance" v / i; "flux" v = d/dt of it; "charge" i = d/dt of it; "winding" v or i, as the network stage chooses (ideal transformer).
+    """
 
     suffix: str  # "" for the only branch of a two-terminal device
     left: str  # terminal
     right: str
-    form: Literal["voltage", "current", "flux", "charge"]
+    form: SlotForm
 
 
 @dataclass(frozen=True, slots=True)
@@ -105,6 +109,7 @@ class DeviceContext:
         settings: values as nodes, parts or words; defaults filled in; missing optional ones absent.
         potential: terminal → node of its potential; absent terminals ("unconnected") are missing.
         branch_v, branch_i: slot suffix → symbol of the branch's voltage and current.
+        forms: slot suffix → the form its law must have; differs from the slot's own only for "winding" ("voltage" or "current").
         latches: latch name → symbol.
         choke: for poles, what faces mid, else None.
         power_scale: node, 1 in a run; the operating-point search ramps constant powers with it.
@@ -117,6 +122,7 @@ class DeviceContext:
     potential: Mapping[str, Node]
     branch_v: Mapping[str, Node]
     branch_i: Mapping[str, Node]
+    forms: Mapping[str, SlotForm]
     latches: Mapping[str, Node]
     choke: ChokeView | None
     power_scale: Node
@@ -127,6 +133,11 @@ class DeviceContext:
         value = self.settings[setting]
         assert isinstance(value, int)
         return value
+
+    def optional(self, setting: str) -> Node | None:
+        """A setting that may be absent."""
+        value = self.settings.get(setting)
+        return value if isinstance(value, int) else None
 
     def part(self, setting: str) -> PartValue:
         """A setting that is a part."""
