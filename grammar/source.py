@@ -16,7 +16,7 @@ class SourceText:
     """
 
     name: str
-    text: str
+    text: str = field(repr=False)
     line_starts: tuple[int, ...] = field(init=False, repr=False)
 
     def __post_init__(self) -> None:

@@ -47,7 +47,7 @@ class Reference:
 
 @dataclass(frozen=True, slots=True)
 class Number:
-    """A number with or without a unit. `number` is as written, `unit` its unit; SI is number * unit.factor + unit.offset."""
+    """A number with or without a unit. `number` is as written, `text` its digits, `unit` its unit; SI is number * unit.factor + unit.offset."""
 
     span: Span
     number: float
@@ -57,7 +57,7 @@ class Number:
     @property
     def value(self) -> float:
         """In SI."""
-        return self.number if self.unit is None else self.number * self.unit.factor + self.unit.offset
+        return self.number if self.unit is None else self.unit.to_si(self.number)
 
 
 @dataclass(frozen=True, slots=True)
