@@ -36,9 +36,9 @@ TRANSISTOR = register_part(
         name="transistor",
         parameters=(
             SettingSpec("resistance", units.RESISTANCE, "varying", 0.0, document="on-resistance, both current directions"),
-            SettingSpec("turn_on", units.ENERGY, "constant", 0.0, document="turn-on energy at the datasheet point"),
-            SettingSpec("turn_off", units.ENERGY, "constant", 0.0, document="turn-off energy at the datasheet point"),
-            SettingSpec("recovery", units.ENERGY, "constant", 0.0, document="reverse-recovery energy of its own diode at the datasheet point"),
+            SettingSpec("turn_on", units.ENERGY, "constant", document="turn-on energy at the datasheet point"),
+            SettingSpec("turn_off", units.ENERGY, "constant", document="turn-off energy at the datasheet point"),
+            SettingSpec("recovery", units.ENERGY, "constant", document="reverse-recovery energy of its own diode at the datasheet point"),
             SettingSpec("at_voltage", units.VOLTAGE, "constant", document="voltage of the datasheet point"),
             SettingSpec("at_current", units.CURRENT, "constant", document="current of the datasheet point"),
             SettingSpec("reverse_drop", units.VOLTAGE, "constant", 0.0, document="forward voltage of its own diode, seen during dead time"),
@@ -53,7 +53,7 @@ DIODE_PART = register_part(
         parameters=(
             SettingSpec("drop", units.VOLTAGE, "varying", 0.0, document="forward voltage at no current"),
             SettingSpec("resistance", units.RESISTANCE, "varying", 0.0, document="slope resistance"),
-            SettingSpec("recovery", units.ENERGY, "constant", 0.0, document="reverse-recovery energy at the datasheet point"),
+            SettingSpec("recovery", units.ENERGY, "constant", document="reverse-recovery energy at the datasheet point"),
             SettingSpec("at_voltage", units.VOLTAGE, "constant", document="voltage of the datasheet point"),
             SettingSpec("at_current", units.CURRENT, "constant", document="current of the datasheet point"),
         ),
@@ -99,15 +99,10 @@ def _check(settings: Mapping[str, SettingValue]) -> tuple[str, str] | None:
         return f"`{given[0]}` is the duty of a diode", "write `duty = …`: it belongs to the pole's only transistor"
     for name, part in (("upper", settings["upper"]), ("lower", settings["lower"])):
         assert isinstance(part, PartValue)
-        energies = [k for k in ("turn_on", "turn_off", "recovery") if part.values.get(k) is not None and k in _stated(part)]
+        energies = [k for k in ("turn_on", "turn_off", "recovery") if part.values.get(k) is not None]
         if energies and (part.values.get("at_voltage") is None or part.values.get("at_current") is None):
             return f"`{energies[0]}` of the {name} device has no datasheet point", "add `at_voltage = …, at_current = …`"
     return None
-
-
-def _stated(part: PartValue) -> set[str]:
-    """Parameters with a node other than a missing one; zero energies are folded away later."""
-    return {name for name, node in part.values.items() if node is not None}
 
 
 @dataclass(frozen=True, slots=True)
