@@ -260,15 +260,14 @@ def curve(grid: StepGrid, value: FloatArray) -> Curve:
 def _through(u: FloatArray, y: FloatArray) -> FloatArray:
     """Coefficients in powers of u of the polynomials through the points of each row; shapes (k, n). Newton's divided differences."""
     n = u.shape[1]
-    with np.errstate(all="ignore"):
-        table = y.copy()
+    table, coefficient = y.copy(), np.zeros_like(y)
+    with np.errstate(all="ignore"):  # what is not finite stays so and is found by whoever reads it
         for order in range(1, n):
             table[:, order:] = (table[:, order:] - table[:, order - 1 : -1]) / (u[:, order:] - u[:, :-order])
-    coefficient = np.zeros_like(y)
-    coefficient[:, 0] = table[:, n - 1]
-    for j in range(n - 2, -1, -1):  # p <- p * (u - u_j) + table_j
-        coefficient[:, 1:] = coefficient[:, :-1] - u[:, j : j + 1] * coefficient[:, 1:]
-        coefficient[:, 0] = table[:, j] - u[:, j] * coefficient[:, 0]
+        coefficient[:, 0] = table[:, n - 1]
+        for j in range(n - 2, -1, -1):  # p <- p * (u - u_j) + table_j
+            coefficient[:, 1:] = coefficient[:, :-1] - u[:, j : j + 1] * coefficient[:, 1:]
+            coefficient[:, 0] = table[:, j] - u[:, j] * coefficient[:, 0]
     return coefficient
 
 

@@ -133,11 +133,16 @@ def _judge_one(one: Judged, recording: Recording, planned_end_s: float, reached_
         finding = _unseen(f"the study stopped at {_time(reached_s)}, before the window opened at {_time(begin_s)}")
     else:
         finding = _judge_window(one, recording, begin_s, seen_s)
-        if not whole and (finding.passed or requirement.measure not in ("value", "condition")):
-            finding = _unseen(f"the study stopped at {_time(reached_s)}, before the window's end at {_time(wanted_end_s)}")
-        elif wanted_end_s > planned_end_s * (1.0 + 1e-12):
-            finding = _unseen(f"its window ends at {_time(wanted_end_s)}, after the study's end at {_time(planned_end_s)}")
+        broken_already = not finding.passed and requirement.measure in ("value", "condition")
+        if not whole and not broken_already:
+            finding = _unseen(_why_cut(wanted_end_s, planned_end_s, reached_s))
     return _put_together(one, finding)
+
+
+def _why_cut(wanted_end_s: float, planned_end_s: float, reached_s: float) -> str:
+    if reached_s >= planned_end_s * (1.0 - 1e-12):
+        return f"its window ends at {_time(wanted_end_s)}, after the study's end at {_time(planned_end_s)}"
+    return f"the study stopped at {_time(reached_s)}, before the window's end at {_time(wanted_end_s)}"
 
 
 def _judge_window(one: Judged, recording: Recording, begin_s: float, end_s: float) -> _Finding:
