@@ -82,7 +82,7 @@ def form_of(circuit: Circuit, branch: Branch) -> str:
     if branch.law in (Law.RESISTANCE, Law.CONDUCTANCE):
         return "resistance"
     if branch.law in (Law.CHARGE, Law.FLUX, Law.IMPLICIT):
-        return branch.law.value
+        return str(branch.law.value)
     assert branch.expression is not None
     under = circuit.graph.symbols_under([branch.expression])
     own = circuit.graph.symbol("i" if branch.law is Law.VOLTAGE else "v", branch.name)
