@@ -278,6 +278,8 @@ class ExpressionGraph:
 
     def invert(self, x: Node) -> Node:
         """not x, of conditions."""
+        if self.operation[x] == op.SUB and self.values.get(self.a[x]) == 1.0:
+            return self.b[x]  # not not y
         return self.subtract(self.constant(1.0), x)
 
     def greater(self, x: Node, y: Node) -> Node:
