@@ -7,12 +7,13 @@ from bisect import bisect_left, bisect_right
 from typing import Any
 
 from polewise.grammar import messages
+from polewise.grammar.checks import joined_names, without_too_deep
 from polewise.grammar.diagnostics import Diagnostic
-from polewise.grammar.mistakes import Mistake, explain
+from polewise.grammar.mistakes import Mistake, explain, line_start, one_per_missing_brace
 from polewise.grammar.source import SourceText, Span
 from polewise.grammar.syntax import Netlist, Statement
 from polewise.grammar.tables import Tables, tables
-from polewise.grammar.tokens import Token, Tokens, tokenise
+from polewise.grammar.tokens import MAX_DEPTH, Token, Tokens, tokenise
 from polewise.grammar.tree import Builder
 from polewise.grammar.words import SOFT_WORDS
 
@@ -54,7 +55,12 @@ def parse(source: SourceText) -> tuple[Netlist, tuple[Diagnostic, ...]]:
         return Netlist(source, ()), _in_order(tokens.diagnostics)
     reading = _Reading(source, tokens)
     statements: tuple[Statement, ...] = reading.read("netlist", 0, len(tokens.tokens) - 1) or ()
-    return Netlist(source, statements), _in_order(reading.all_diagnostics())
+    found = reading.all_diagnostics()
+    if tokens.longest_line > MAX_DEPTH:
+        statements, too_deep = without_too_deep(statements)
+        found += too_deep
+    found += joined_names(statements)
+    return Netlist(source, statements), _in_order(one_per_missing_brace(found))
 
 
 def _refuse(source: SourceText) -> Diagnostic | None:
@@ -104,7 +110,7 @@ class _Reading:
                 index = self._advance(tokens, index, stack, self.tables.ends[start])
                 if index < 0:
                     return stack.values[-1]
-                index = self._mend(tokens, index, stack)
+                index = self._mend(tokens, index, stack, start)
         except _Stop:
             return None
 
@@ -171,13 +177,13 @@ class _Reading:
 
     # ------------------------------------------------------------ going on after an error
 
-    def _mend(self, tokens: list[Token], index: int, stack: _Stack) -> int:
+    def _mend(self, tokens: list[Token], index: int, stack: _Stack, body: str) -> int:
         """Report what is wrong at a token and bring stack and index to a place where reading can go on."""
-        mistake = Mistake(self.source, tokens, index, tuple(stack.states), self.tables)
+        mistake = Mistake(self.source, tokens, index, self._states_before(tokens, index, stack), self.tables, body)
         self._report(mistake)
         token = tokens[index]
         opener = tokens[mistake.statement].type
-        if token.type == "_NEWLINE" and opener in _BLOCK_OPENERS and mistake.accepts("LBRACE"):
+        if token.type == "_NEWLINE" and opener in _BLOCK_OPENERS and mistake.accepts("LBRACE") and _closes_later(tokens, index):
             # The block's brace is missing or on the next line: go on inside the block.
             following = tokens[index + 1]
             tokens[index] = Token("LBRACE", "{", token.start, token.start)
@@ -188,6 +194,39 @@ class _Reading:
             tokens[index:index] = [Token("RBRACE", "}", token.start, token.start), Token("_NEWLINE", "", token.start, token.start)]
             return index
         return self._skip(tokens, index, stack, _BODY.get(opener))
+
+    def _states_before(self, tokens: list[Token], index: int, stack: _Stack) -> tuple[int, ...]:
+        """The states before the token was looked at.
+
+        LALR tables may reduce a few times before they find that a token is wrong, which forgets what else could have come: so the
+        line is gone through again, states only.
+        """
+        depth = self._line_start(stack)
+        states = stack.states[:depth]
+        for at in range(line_start(tokens, index), index):
+            type = tokens[at].type
+            while True:
+                row = self.tables.actions[states[-1]]
+                action = row.get(type, row.get("NAME") if type in _SOFT_TERMINALS else None)
+                if action is None:
+                    return tuple(stack.states)
+                if action >= 0:
+                    states.append(action)
+                    break
+                rule = self.tables.rules[-1 - action]
+                if rule.length:
+                    del states[-rule.length :]
+                states.append(self.tables.gotos[states[-1]][rule.origin])
+        return tuple(states)
+
+    def _line_start(self, stack: _Stack) -> int:
+        """Depth of the innermost state where a line of a body may begin."""
+        actions, gotos = self.tables.actions, self.tables.gotos
+        for depth in range(len(stack.states), 1, -1):
+            state = stack.states[depth - 1]
+            if ("RBRACE" in actions[state] or "$END" in actions[state]) and any(item in gotos[state] for item in _ITEMS):
+                return depth
+        return 1
 
     def _skip(self, tokens: list[Token], index: int, stack: _Stack, body: str | None) -> int:
         """Pass over the rest of the statement; blocks in it are read on their own, for their errors."""
@@ -207,7 +246,7 @@ class _Reading:
                 depth -= 1
                 if depth == 0 and body is not None:
                     self._read_apart(body, tokens[opened + 1 : index], tokens[index])
-            elif depth == 0 and type == "SEMICOLON" and tokens[index + 1].type != "_NEWLINE" and self._unwind(stack, line_start=False):
+            elif depth == 0 and type == "SEMICOLON" and tokens[index + 1].type != "_NEWLINE" and self._to_next_action(stack):
                 return index + 1
             elif depth == 0 and type == "_NEWLINE":
                 index += 1
@@ -215,7 +254,7 @@ class _Reading:
             index += 1
         if depth and body is not None:
             self._read_apart(body, tokens[opened + 1 : index], tokens[index])
-        self._unwind(stack, line_start=True)
+        stack.cut(self._line_start(stack))
         if tokens[index].type == "RBRACE" and "RBRACE" not in self.tables.actions[stack.states[-1]]:
             index += 1 if tokens[index + 1].type != "_NEWLINE" else 2
         return index
@@ -229,20 +268,14 @@ class _Reading:
         if len(self.diagnostics) >= MAX_ERRORS:
             raise _Stop
 
-    def _unwind(self, stack: _Stack, *, line_start: bool) -> bool:
-        """Take the stack back to where an item of a body may begin: a line of one, or an action behind a semicolon."""
-        actions, gotos = self.tables.actions, self.tables.gotos
+    def _to_next_action(self, stack: _Stack) -> bool:
+        """Take the stack back to where an action may begin; False outside actions."""
         for depth in range(len(stack.states), 0, -1):
-            state = stack.states[depth - 1]
-            row = gotos[state]
-            if line_start and any(item in row for item in _ITEMS) and ("RBRACE" in actions[state] or "$END" in actions[state]):
-                stack.cut(depth)
-                return True
-            if not line_start and any(item in row for item in _ITEMS):
-                if "action" not in row:
-                    return False
-                stack.cut(depth)
-                return True
+            row = self.tables.gotos[stack.states[depth - 1]]
+            if any(item in row for item in _ITEMS):
+                if "action" in row:
+                    stack.cut(depth)
+                return "action" in row
         return False
 
     def _report(self, mistake: Mistake) -> None:
@@ -255,6 +288,21 @@ class _Reading:
         if len(self.diagnostics) >= MAX_ERRORS:
             self.diagnostics.append(messages.too_many_errors(Span(self.source, token.start, token.end)))
             raise _Stop
+
+
+def _closes_later(tokens: list[Token], index: int) -> bool:
+    """Whether a `}` follows that closes a block opened at a token."""
+    depth = 0
+    if tokens[index + 1].type == "LBRACE":
+        return True
+    for token in tokens[index:]:
+        if token.type == "LBRACE":
+            depth += 1
+        elif token.type == "RBRACE":
+            depth -= 1
+            if depth < 0:
+                return True
+    return False
 
 
 class _Stack:

@@ -68,6 +68,7 @@ _SCAN = re.compile(
     r'|("[^"\n]*"?)'  # 7 string
 ).match
 _UNKNOWN = re.compile(r"[^\s\w()\[\]{}:;,.=<>+\-*/^|\"#]+|[^\W\d]+").match
+_QUOTED = re.compile(r"[“”„«'‘’]([^\"“”„»'‘’\n]*)[\"“”»'‘’]").match
 # Characters that come from a word processor or another notation, with what was meant.
 LIKELY_MARKS = {
     "−": "-", "–": "--", "—": "--", "×": "*", "·": "*", "÷": "/", "≤": "<=", "≥": ">=", "≠": "!=", "±": "+-", "“": '"', "”": '"', "„": '"', "'": '"',
@@ -75,12 +76,14 @@ LIKELY_MARKS = {
 }  # fmt: skip
 _REST = re.compile(r"[A-Za-z0-9_]+").match
 _RATE_OF = re.compile(r"/dt(?![A-Za-z0-9_])").match
-_WORD = re.compile(r"[A-Za-z_µμΩΩ%°][A-Za-z0-9_µμΩΩ%°]*").match
-_UNIT_ALONE = re.compile(r"[ \t]*((?:1(?=/))?/?[A-Za-zµμΩΩ%°][\wµμΩΩ%°^*/-]*|1(?!\w))").match
+_WORD = re.compile(r"[A-Za-z_\u00b5\u03bc\u03a9\u2126%°][A-Za-z0-9_\u00b5\u03bc\u03a9\u2126%°]*").match
+_UNIT_ALONE = re.compile(r"[ \t]*((?:1(?=/))?/?[A-Za-z\u00b5\u03bc\u03a9\u2126%°][\w%°^*/-]*|1(?!\w))").match
 _DECIMALS = re.compile(r"\d+(?:[eE][+-]?\d+)?").match
 
 # A newline after one of these goes on with the statement.
-_GOES_ON = frozenset({"WIRE", "SIGN", "TIMES", "POWER", "COMPARE", "TOLERANCE_MARK", "COMMA", "EQUAL", "RANGE", "VBAR", "AND", "OR", "NOT", "IF", "OTHERWISE"})
+_GOES_ON = frozenset(
+    {"WIRE", "SIGN", "TIMES", "POWER", "COMPARE", "TOLERANCE_MARK", "COMMA", "EQUAL", "RANGE", "VBAR", "AND", "OR", "NOT", "IF", "OTHERWISE"}
+)
 # What opens a line of its own and so shows that a bracket or a path before it was left open.
 _NEW_STATEMENT = re.compile(
     r"\s*(?:\#[^\n]*\s*)*(?:\}|d/dt\b(?=\s+[A-Za-z_][\w{}+-]*\s*=[^=])|(?:" + "|".join(sorted(OPENERS - {"at"})) + r")\b(?!\s*[.(=,)\]])"
@@ -181,8 +184,15 @@ class _Tokeniser:
     def _unknown(self, at: int) -> int:
         """A character the language has no use for: report it and take it for what was most likely meant."""
         character = self.text[at]
+        quoted = _QUOTED(self.text, at)
+        if quoted is not None:
+            self._report(messages.wrong_quotes(self._span(at, quoted.end()), quoted[1]))
+            self.tokens.append(Token("STRING", quoted[1], at, quoted.end()))
+            return quoted.end()
         match = _UNKNOWN(self.text, at)
         end = at + 1 if match is None or character in LIKELY_MARKS else match.end()
+        while character == "&" and self.text[end : end + 1] == "&":
+            end += 1
         found = self.text[at:end]
         meant = LIKELY_MARKS.get(character)
         touching = self.tokens[-1] if self.tokens and self.tokens[-1].end == at and self.tokens[-1].type == "NAME" else None
@@ -318,6 +328,10 @@ class _Tokeniser:
         following = self.text[word.end() : word.end() + 8].lstrip(" \t")[:1]
         if blank and (following in ("(", ":", ".", "{") or (nearest_unit(name) is None and nearest_word(name) is not None)):
             return end
+        previous = self.tokens[-1] if self.tokens else None
+        if not blank and previous is not None and ((previous.type in ("WIRE", "COLON") and not self.brackets) or previous.text in OPENERS):
+            self._report(messages.name_starts_with_digit(self._span(at, word.end())))
+            return word.end()
         self._report(messages.unknown_unit(self._span(start, word.end()), name, nearest_unit(name), self._span(at, end), touching=not blank))
         return word.end()
 

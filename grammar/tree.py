@@ -7,6 +7,7 @@ from typing import Any
 
 from polewise.grammar import messages
 from polewise.grammar import syntax as s
+from polewise.grammar.checks import walk
 from polewise.grammar.diagnostics import Diagnostic
 from polewise.grammar.source import SourceText, Span
 from polewise.grammar.tokens import Token
@@ -102,9 +103,7 @@ class Builder:
             if clause in found:
                 self.diagnostics.append(messages.twice(span, clause))
             found[clause] = content
-        return s.StateRate(
-            self._span(start, end), self._declared(name), rate, found.get("initially"), found.get("within"), held="held" in found
-        )
+        return s.StateRate(self._span(start, end), self._declared(name), rate, found.get("initially"), found.get("within"), held="held" in found)
 
     def state_initially(self, start: int, end: int, value: s.Expression) -> tuple[str, Span, Any]:
         return "initially", self._span(start, end), value
@@ -238,9 +237,7 @@ class Builder:
 
     # ------------------------------------------------------------ assemblies and repetition
 
-    def assembly(
-        self, start: int, end: int, name: Token, ports: tuple[s.NamePart, ...], document: Token | None, *body: s.Statement
-    ) -> s.Assembly:
+    def assembly(self, start: int, end: int, name: Token, ports: tuple[s.NamePart, ...], document: Token | None, *body: s.Statement) -> s.Assembly:
         self._no_file_statements(body, "an assembly")
         return s.Assembly(self._span(start, end), name.text, self._of(name), ports, self._text(document), body)
 
@@ -271,7 +268,7 @@ class Builder:
     def path(self, start: int, end: int, name: s.NamePart | None, *items: s.Reference | s.Box | s.ParallelBoxes) -> s.Path:
         if not isinstance(items[-1], s.Reference):
             self.diagnostics.append(messages.path_ends_in_box(items[-1].span))
-        return s.Path(self._span(start, end), name, items)
+        return s.Path(self._span(start, end), None if name is None else self._declared(name), items)
 
     def box(self, start: int, end: int, inside: s.Box) -> s.Box:
         return s.Box(self._span(start, end), inside.name, inside.content, inside.initially)
@@ -295,7 +292,7 @@ class Builder:
         self, start: int, end: int, name: s.NamePart, kind: Token, arguments: tuple[Any, ...] | None, document: Token | None
     ) -> s.Placement:
         plain, settings = self._arguments(arguments)
-        return s.Placement(self._span(start, end), name, kind.text, self._of(kind), plain, settings, self._text(document))
+        return s.Placement(self._span(start, end), self._declared(name), kind.text, self._of(kind), plain, settings, self._text(document))
 
     # ------------------------------------------------------------ expressions
 
@@ -309,6 +306,10 @@ class Builder:
         return s.Unary(Span(self.source, start, end), operator.text, operand)
 
     def filtered(self, start: int, end: int, operand: s.Expression, by: s.Expression) -> s.Filtered:
+        for node in walk(by):
+            # `1/s` reads as one per second; in a filter the reader meant a division.
+            if isinstance(node, s.Number) and node.unit is not None and node.unit.symbol.startswith("/s") and "/" in node.span.text.split(" ")[0]:
+                self.diagnostics.append(messages.filter_slash(node.span, node.span.text.replace("/", " / ", 1)))
         return s.Filtered(self._span(start, end), operand, by, None)
 
     def filtered_in_z(self, start: int, end: int, operand: s.Expression, by: s.Expression, variable: Token, rate: s.Expression) -> s.Filtered:
@@ -496,9 +497,7 @@ class Builder:
         opens, closes = (None, None) if window is None else window
         return s.Require(self._span(start, end), self._text(name), subject, relation, low, high, opens, closes, self._text(document))
 
-    def bound_within(
-        self, start: int, end: int, low: s.Expression, high: s.Expression
-    ) -> tuple[str, s.Expression | None, s.Expression | None]:
+    def bound_within(self, start: int, end: int, low: s.Expression, high: s.Expression) -> tuple[str, s.Expression | None, s.Expression | None]:
         return "within", low, high
 
     def bound_one_side(self, start: int, end: int, side: Token, limit: s.Expression) -> tuple[str, s.Expression | None, s.Expression | None]:

@@ -153,7 +153,7 @@ _ALONE: dict[str, tuple[float, Dimension]] = {
     "ppm": (1e-6, NONE),
 }
 _PREFIXES: dict[str, float] = {"p": 1e-12, "n": 1e-9, "u": 1e-6, "m": 1e-3, "k": 1e3, "M": 1e6, "G": 1e9, "T": 1e12}
-_OTHER_SPELLINGS = {"µ": "u", "μ": "u", "Ω": "ohm", "Ω": "ohm"}  # micro sign and Greek mu, Greek omega and ohm sign
+_OTHER_SPELLINGS = {"\u00b5": "u", "\u03bc": "u", "\u03a9": "ohm", "\u2126": "ohm"}  # micro sign, Greek mu, Greek omega, ohm sign
 DEGREES_CELSIUS = Unit("degC", 1.0, TEMPERATURE, offset=273.15)
 
 _ANGULAR = frozenset({"rad", "deg", "rpm"})
@@ -174,7 +174,7 @@ def _symbol_table() -> dict[str, tuple[float, Dimension, str | None]]:
 
 _SYMBOLS = _symbol_table()
 
-_WORD = r"[A-Za-zµμΩΩ%°]+"
+_WORD = r"[A-Za-z\u00b5\u03bc\u03a9\u2126%°]+"
 _FACTOR = rf"{_WORD}(?:\^-?\d+)?(?!\w)"
 # A unit's outer shape: what follows a number without blanks inside. Which of its words are units is decided word by word.
 UNIT_SHAPE = re.compile(rf"/?{_FACTOR}(?:[*/]{_FACTOR})*")
@@ -410,9 +410,10 @@ def format_value(value: float, dimension: Dimension, *, digits: int = 4, prefer:
 _SPOKEN = {
     "ohms": "ohm", "volt": "V", "volts": "V", "amp": "A", "amps": "A", "ampere": "A", "amperes": "A", "watt": "W", "watts": "W", "farad": "F",
     "farads": "F", "henry": "H", "henries": "H", "hertz": "Hz", "sec": "s", "secs": "s", "second": "s", "seconds": "s", "msec": "ms", "usec": "us",
-    "mins": "min", "minute": "min", "minutes": "min", "hr": "h", "hrs": "h", "hour": "h", "hours": "h", "days": "day", "kelvin": "K", "celsius": "degC",
-    "°c": "degC", "°": "deg", "degree": "deg", "degrees": "deg", "nm": "N*m", "joule": "J", "joules": "J", "siemens": "S", "mho": "S", "weber": "Wb",
-    "tesla": "T", "newton": "N", "percent": "%", "pct": "%", "r/min": "rpm", "meg": "M", "mil": "mm", "cm": "mm", "mhos": "S", "coulomb": "C",
+    "mins": "min", "minute": "min", "minutes": "min", "hr": "h", "hrs": "h", "hour": "h", "hours": "h", "days": "day", "kelvin": "K",
+    "celsius": "degC", "°c": "degC", "°": "deg", "degree": "deg", "degrees": "deg", "nm": "N*m", "joule": "J", "joules": "J", "siemens": "S",
+    "mho": "S", "weber": "Wb", "tesla": "T", "newton": "N", "percent": "%", "pct": "%", "r/min": "rpm", "meg": "M", "mil": "mm", "cm": "mm",
+    "mhos": "S", "coulomb": "C",
 }  # fmt: skip
 
 

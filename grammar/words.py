@@ -6,7 +6,10 @@ from difflib import get_close_matches
 
 # Words that open a statement of a file or an assembly; never names.
 OPENERS = frozenset(
-    "title use reference given input signal latch solve function table wires assembly each at every whenever sequence study".split()
+    (
+        "title", "use", "reference", "given", "input", "signal", "latch", "solve", "function", "table", "wires", "assembly", "each",
+        "at", "every", "whenever", "sequence", "study",
+    )
 )  # fmt: skip
 # Words of expressions; never names, because an expression can begin or go on with them.
 EXPRESSION_WORDS = {"and": "AND", "or": "OR", "not": "NOT", "true": "TRUE", "false": "FALSE", "if": "IF", "otherwise": "OTHERWISE"}
