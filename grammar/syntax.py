@@ -373,7 +373,7 @@ class Function:
 class Table:
     """`table f(x in unit) in unit = (x, y) (x, y) smooth hold`, or `from "file" columns "a", "b"`.
 
-    outside: "hold", "extend", "repeat", "odd extend", "odd hold", "odd" or None (an error that names the value).
+    odd: mirrored through the origin. outside: "hold", "extend", "repeat" or None (an error that names the value).
     """
 
     span: Span
@@ -555,7 +555,7 @@ class Sampling:
 class Require:
     """`[name:] require EXPR within A .. B | above A | below B | (nothing) [after T | during A .. B] ["why"]`.
 
-    relation: "within", "above", "below" or None (a condition that must hold). low/high as they apply.
+    relation: "within", "above" (then `low` is the limit), "below" (then `high` is), or None: a condition that must hold.
     """
 
     span: Span

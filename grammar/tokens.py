@@ -224,7 +224,7 @@ class _Tokeniser:
         if len(tokens) == self.line_start:
             self.opener = type
         tokens.append(Token(type, word, at, end))
-        if type == "IN" and self.opener in ("GIVEN", "TABLE"):
+        if type == "IN" and self.opener in ("GIVEN", "TABLE") and all(token.type != "EQUAL" for token in tokens[self.line_start :]):
             return self._unit_alone(end)
         return end
 
@@ -345,7 +345,7 @@ class _Tokeniser:
     def _unit_alone(self, end: int) -> int:
         """The unit after `in` of a given or a table; reads nothing where no word follows."""
         match = _UNIT_ALONE(self.text, end)
-        if match is None or match[1] == "z":
+        if match is None:
             return end
         return self._unit_token(match[1], match.start(1), match.end(1))
 
