@@ -145,7 +145,8 @@ def test_cached_kernels_carry_the_stamp() -> None:
             assert _part(module) == "kernels", f"{place}: compiled code belongs to engine/kernels"
             takes = any(argument.arg == "stamp" for outer in around for argument in outer.args.args)
             reads = any(isinstance(n, ast.Name) and n.id == "stamp" for n in ast.walk(kernel))
-            assert takes and reads, f"{place}: `{kernel.name}` is cached but does not close over `stamp`; see kernels/stamp.py"
+            closes_over_stamp = takes and reads
+            assert closes_over_stamp, f"{place}: `{kernel.name}` is cached but does not close over `stamp`; see kernels/stamp.py"
     assert seen > 0, "no cached kernel found: has the way of writing them changed?"
 
 

@@ -20,7 +20,8 @@ from pathlib import Path
 ROOT = Path(__file__).resolve().parents[2]
 DOCS = ROOT / "docs"
 _PIECE = re.compile(
-    r"^```(?P<info>[^\n`]*)\n(?P<body>.*?)^```[ ]*$|<!--\s*frame\n(?P<frame>.*?)-->|<!--\s*file:\s*(?P<file>\S+)\s*-->|(?P<compare><!--\s*compare\s*-->)",
+    r"^```(?P<info>[^\n`]*)\n(?P<body>.*?)^```[ ]*$"
+    r"|<!--\s*frame\n(?P<frame>.*?)-->|<!--\s*file:\s*(?P<file>\S+)\s*-->|(?P<compare><!--\s*compare\s*-->)",
     re.DOTALL | re.MULTILINE,
 )
 
@@ -70,9 +71,7 @@ def blocks_of(path: Path) -> list[Block]:
             words = piece["info"].split()
             line = text.count("\n", 0, piece.start()) + 1
             name = str(path.relative_to(ROOT))
-            found.append(
-                Block(name, line, words[0] if words else "", words[1] if len(words) > 1 else "", piece["body"], frame, file, compare)
-            )
+            found.append(Block(name, line, words[0] if words else "", words[1] if len(words) > 1 else "", piece["body"], frame, file, compare))
             file, compare = None, False
     return found
 

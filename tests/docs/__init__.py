@@ -1,0 +1,1 @@
+"""The documentation, page by page, and every circuit."""
