@@ -1,0 +1,1 @@
+"""Properties that hold for any input, with generators in strategies.py."""
