@@ -81,11 +81,15 @@ class SolverError(PolewiseError):
 
     Args:
         time_s: study time at which it happened, None outside a run.
+
+    Attributes:
+        partial: what the run had done until then (solve.transient.RunSummary), None outside a run.
     """
 
     def __init__(self, diagnostics: Sequence[Diagnostic], *, time_s: float | None = None) -> None:
         super().__init__(diagnostics)
         self.time_s = time_s
+        self.partial: object | None = None
 
 
 class NoOperatingPoint(SolverError):

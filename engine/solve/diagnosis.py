@@ -260,7 +260,8 @@ def step_too_small(t: float, row: Named, step_s: float) -> StepFailure:
                 "step-too-small",
                 f"at {time_text(t)} the solver can't go on: {row.text} changes faster than steps of {format_value(step_s, units.TIME)} can follow",
                 row.span,
-                hint="look for a value that runs away there, a law with a jump or a pole, or a far too small L or C; a looser `tolerance` may show more",
+                hint="look for a value that runs away there, a law with a jump or a pole, or a far too small L or C; a looser `tolerance` "
+                "may show more",
             )
         ],
         time_s=t,
@@ -343,6 +344,11 @@ def event_conflict(t: float, target: str, first: tuple[Span, str], second: tuple
     )
 
 
+def event_value_not_finite(t: float, target: str, span: Span) -> NotFinite:
+    """The right side of an action is not a number."""
+    return NotFinite([_error("value-not-finite", f"at {time_text(t)} the new value of `{target}` is not a number", span)], time_s=t)
+
+
 def event_storm(t: float, text: str, span: Span, limit: int) -> EventStorm:
     """Rounds of events at one instant without end."""
     return EventStorm(
@@ -363,7 +369,7 @@ def late_event(time_s: float, run_for_s: float, span: Span) -> Diagnostic:
     return _warning("event-after-end", f"this is at {time_text(time_s)}, but the run ends at {time_text(run_for_s)}", span)
 
 
-def sampling_choice(study: str, instants: float, exact_s: float, mean_s: float, span: Span | None) -> SamplingChoice:
+def sampling_choice(study: str, instants: float, exact_s: float, span: Span | None) -> SamplingChoice:
     """Too many sample instants without a choice."""
     return SamplingChoice(
         [
@@ -371,8 +377,8 @@ def sampling_choice(study: str, instants: float, exact_s: float, mean_s: float, 
                 "sampling-choice",
                 f"study `{study}` has {instants:.3g} sample instants: say how they are to be treated",
                 span or no_span(),
-                hint=f"`sampling = exact` computes each of them, roughly {_duration(exact_s)} here; "
-                f"`sampling = mean` takes delay and hold as continuous blocks, roughly {_duration(mean_s)}, without what happens between samples",
+                hint=f"`sampling = exact` computes each of them and takes roughly {_duration(exact_s)}; `sampling = mean` replaces delay and hold by "
+                "continuous blocks and takes only the steps that the signals need, without what happens between samples",
             )
         ]
     )

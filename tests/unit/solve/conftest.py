@@ -6,6 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 
 import pytest
+
 from polewise.equations.system import Clock, Conditional, DelayLine, EquationSystem, Flag, Output, Parameter, Target, Timed, Unknown
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar.source import SourceText, Span, no_span

@@ -6,6 +6,7 @@ import math
 
 import numpy as np
 import pytest
+
 from polewise.errors import DependsOnTime, IntegratorCannotRest, IntegratorsFight, NoOperatingPoint, PowerLimit, SingularSystem
 from polewise.solve.operating_point import find_operating_point
 

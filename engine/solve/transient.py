@@ -1,0 +1,306 @@
+"""The driver of a run: calls the kernels, acts on their status, feeds a sink, reports progress, stops when asked to."""
+
+from __future__ import annotations
+
+import time as clock
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from polewise.errors import SolverError
+from polewise.grammar.diagnostics import Diagnostic
+from polewise.kernels.opcodes import Status
+from polewise.kernels.program import FloatArray
+from polewise.kernels.workspace import (
+    FLAG_AFTER,
+    N_EVENTS,
+    N_FACTORISATIONS,
+    N_JACOBIANS,
+    N_MADE_JUMP,
+    N_NEEDS_RESTART,
+    N_NEWTON_FAILED,
+    N_REG_AT_START,
+    N_REJECTED,
+    N_RESIDUALS,
+    N_RESTARTS,
+    N_ROWS,
+    N_SOLVES,
+    N_STEPS,
+    N_TICKS,
+    S_T,
+    Workspace,
+    grow,
+)
+from polewise.solve import diagnosis
+from polewise.solve.averages import Rebase
+from polewise.solve.events import EventEntry, Events, merge_distance
+from polewise.solve.initial import Snapshot, StartState, take_snapshot
+from polewise.solve.problem import DaeProblem, new_workspace
+from polewise.solve.run_failure import explain_failure
+from polewise.solve.trajectory import Sink
+
+STEPS_FIRST_CALL = 200  # of the first call of the kernel; later ones follow the clock
+CALL_AIM_S = 0.1  # wall time of a call: how often progress is told and a stop is heeded
+STEPS_LARGEST_CALL = 1_000_000
+GROWN_MOST = 40  # times that buffers may double
+ROWS_KEPT_FREE = 64  # of the record buffer, before events write to it
+
+
+@dataclass(frozen=True, slots=True)
+class Counters:
+    """What a run cost.
+
+    Args:
+        wall_s: time on the clock. Others: counts as named.
+    """
+
+    steps: int
+    rejected: int
+    newton_failures: int
+    residuals: int
+    jacobians: int
+    factorisations: int
+    newton_iterations: int
+    switch_flips: int
+    sample_instants: int
+    restarts: int
+    wall_s: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class RunSummary:
+    """How a run ended.
+
+    Args:
+        complete: whether it reached its stop time.
+        reason: "" for a complete one, else "stopped", "step limit" or "failed".
+        end_s: time reached, s.
+        events: what happened, in order.
+        warnings: of the start and of events that were never reached.
+        snapshot: where it stands; None after a failure.
+    """
+
+    complete: bool
+    reason: str
+    end_s: float
+    events: tuple[EventEntry, ...]
+    warnings: tuple[Diagnostic, ...]
+    counters: Counters
+    snapshot: Snapshot | None
+
+
+Progress = Callable[[float, float], None]
+
+
+def run(
+    problem: DaeProblem,
+    *,
+    start: StartState,
+    stop_s: float,
+    tolerance: float,
+    sink: Sink,
+    progress: Progress | None = None,
+    should_stop: Callable[[], bool] | None = None,
+    max_steps: int | None = None,
+    record_rows: int = 4096,
+) -> RunSummary:
+    """Integrate from `start` at time 0 to stop_s.
+
+    Args:
+        start: consistent, see solve.initial.
+        stop_s: s, > 0.
+        tolerance: relative tolerance of every unknown; absolute: tolerance times its scale.
+        sink: gets every recorded row, in order, the last ones before this returns or raises.
+        progress: called with (time reached, stop_s) about ten times a second.
+        should_stop: asked as often; True ends the run, what is done is kept. So does a KeyboardInterrupt.
+        max_steps: most accepted steps.
+        record_rows: rows held before the sink gets them.
+    Raises:
+        SolverError: with what failed, where and when; `partial` holds the RunSummary until then.
+    """
+    return _Run(problem, start, stop_s, tolerance, sink, progress, should_stop, max_steps, record_rows).go()
+
+
+class _Run:
+    """One run and its workspace."""
+
+    def __init__(
+        self,
+        problem: DaeProblem,
+        start: StartState,
+        stop_s: float,
+        tolerance: float,
+        sink: Sink,
+        progress: Progress | None,
+        should_stop: Callable[[], bool] | None,
+        max_steps: int | None,
+        record_rows: int,
+    ) -> None:
+        self.problem, self.stop_s, self.sink = problem, stop_s, sink
+        self.progress, self.should_stop, self.max_steps = progress, should_stop, max_steps
+        self.began = clock.perf_counter()
+        self.work = new_workspace(problem, tolerance, record_rows=record_rows)
+        self.start = start
+        self.events = Events(problem, self.work, self._restart)
+        self.rebase = Rebase(problem)
+        late = [diagnosis.late_event(t, stop_s, span) for t, span in self.events.late(stop_s)]
+        self.warnings = (*start.warnings, *late)
+        self.grown = 0
+
+    def go(self) -> RunSummary:
+        """The whole run."""
+        reason = "failed"
+        try:
+            self._begin()
+            reason = self._loop()
+        except KeyboardInterrupt:
+            reason = "stopped"
+        except SolverError as error:
+            self._flush()
+            error.partial = self._summary("failed")
+            raise
+        self._flush()
+        return self._summary(reason)
+
+    def _begin(self) -> None:
+        """Put the start into the workspace, make it consistent, record it, and do all that is due at 0."""
+        from polewise.kernels import history, record, tape
+
+        work, program = self.work, self.problem.program
+        work.x[:] = self.start.x
+        work.p[:] = self.start.p
+        work.state[S_T] = 0.0
+        if len(program.delay_p):
+            _load_past(work, self.start)
+            history.load_delayed(program, work, True)
+            history.push_breaks(program, work, 0.0, 0)
+        tape.run_residual_live(program, work)
+        work.q_keep[:] = np.where(program.q_reg >= 0, work.reg[program.q_reg], 0.0)
+        self.events.work = self._restart(work)
+        record.record_point(program, self.work, FLAG_AFTER)
+        self.events.begin()
+
+    def _loop(self) -> str:
+        """Advance from instant to instant. Returns "" at the stop time, else why it ended before."""
+        from polewise.kernels import advance
+
+        budget, told = STEPS_FIRST_CALL, self.began
+        while True:
+            t = float(self.work.state[S_T])
+            if t >= self.stop_s - merge_distance(self.stop_s):
+                return ""
+            target = min(self.stop_s, self.events.next_time(), self.rebase.next_time(t))
+            if self.max_steps is not None:
+                budget = min(budget, self.max_steps - int(self.work.counter[N_STEPS]))
+                if budget <= 0:
+                    return "step limit"
+            before, steps = clock.perf_counter(), int(self.work.counter[N_STEPS])
+            status = Status(advance.advance(self.problem.program, self.work, target, budget))
+            now = clock.perf_counter()
+            self._act_on(status, target)
+            done = int(self.work.counter[N_STEPS]) - steps
+            if done and now > before:
+                budget = int(min(STEPS_LARGEST_CALL, max(STEPS_FIRST_CALL, done * CALL_AIM_S / (now - before))))
+            if now - told >= CALL_AIM_S:
+                told = now
+                if self.progress is not None:
+                    self.progress(float(self.work.state[S_T]), self.stop_s)
+                if self.should_stop is not None and self.should_stop():
+                    return "stopped"
+            if status == Status.STOPPED:
+                return "stopped"
+
+    def _act_on(self, status: Status, target: float) -> None:
+        """What a status of advance asks for."""
+        work = self.work
+        if status in (Status.STEP_LIMIT, Status.STOPPED):
+            return
+        if status == Status.BUFFER_FULL:
+            self._flush()
+        elif status in (Status.HISTORY_FULL, Status.FACTORS_FULL):
+            self._grow(status)
+        elif status == Status.EVENT or (status == Status.DONE and target < self.stop_s) or self._due(target):
+            if work.counter[N_ROWS] > len(work.record) - ROWS_KEPT_FREE:
+                self._flush()
+            if status == Status.DONE and self.rebase.next_time(float(work.state[S_T])) <= float(work.state[S_T]) + merge_distance(target):
+                self.rebase.apply(work)
+            self.events.instant()
+            self.work = self.events.work
+        elif status != Status.DONE:
+            raise explain_failure(self.problem, work, status)
+
+    def _due(self, target: float) -> bool:
+        """Whether the stop time is itself an instant with events."""
+        t = float(self.work.state[S_T])
+        return t >= target - merge_distance(target) and self.events.next_time() <= t + merge_distance(t)
+
+    def _restart(self, work: Workspace) -> Workspace:
+        """A consistent point at the present time; the workspace may be replaced by a larger one."""
+        from polewise.kernels import restart
+
+        self.work = work
+        while True:
+            status = Status(restart.restart(self.problem.program, self.work))
+            if status == Status.DONE:
+                self.work.counter[N_NEEDS_RESTART] = 0
+                self.work.counter[N_MADE_JUMP] = 1
+                self.events.work = self.work
+                return self.work
+            if status != Status.FACTORS_FULL:
+                raise explain_failure(self.problem, self.work, status, in_restart=True)
+            self._grow(status)
+
+    def _grow(self, status: Status) -> None:
+        self.grown += 1
+        if self.grown > GROWN_MOST:
+            raise explain_failure(self.problem, self.work, status)
+        self.work = grow(self.work, status)
+        self.events.work = self.work
+
+    def _flush(self) -> None:
+        """Empty the record buffer into the sink."""
+        rows = int(self.work.counter[N_ROWS])
+        if rows:
+            self.sink.write(self.work.record[:rows])
+            self.work.counter[N_ROWS] = 0
+
+    def _summary(self, reason: str) -> RunSummary:
+        work, count = self.work, self.work.counter
+        counters = Counters(
+            steps=int(count[N_STEPS]),
+            rejected=int(count[N_REJECTED]),
+            newton_failures=int(count[N_NEWTON_FAILED]),
+            residuals=int(count[N_RESIDUALS]),
+            jacobians=int(count[N_JACOBIANS]),
+            factorisations=int(count[N_FACTORISATIONS]),
+            newton_iterations=int(count[N_SOLVES]),
+            switch_flips=int(count[N_EVENTS]),
+            sample_instants=int(count[N_TICKS]),
+            restarts=int(count[N_RESTARTS]),
+            wall_s=clock.perf_counter() - self.began,
+        )
+        snapshot = take_snapshot(self.problem, work) if reason != "failed" else None
+        return RunSummary(reason == "", reason, float(work.state[S_T]), tuple(self.events.state.log), self.warnings, counters, snapshot)
+
+
+def _load_past(work: Workspace, start: StartState) -> None:
+    """History before time 0: pieces of an earlier run where all delays have the same, else values and slopes."""
+    from polewise.kernels.workspace import N_HISTORY_COUNT, N_HISTORY_FIRST, S_HISTORY_T0
+
+    past = start.past
+    pieces: FloatArray = past[0].start_s
+    shared = len(pieces) > 0 and all(np.array_equal(p.start_s, pieces) for p in past) and len(pieces) < len(work.history_t)
+    for d, line in enumerate(past):
+        work.delay_value0[d], work.delay_slope0[d] = line.value, line.slope
+        if shared:
+            work.history_v[: len(pieces), d, :] = line.values
+        elif len(line.start_s):
+            work.delay_value0[d], work.delay_slope0[d] = float(line.values[-1, 3]), 0.0
+    work.state[S_HISTORY_T0] = past[0].reach_s if shared else 0.0
+    work.counter[N_HISTORY_FIRST] = 0
+    work.counter[N_HISTORY_COUNT] = len(pieces) if shared else 0
+    if shared:
+        work.history_t[: len(pieces)] = pieces
+        work.history_h[: len(pieces)] = past[0].size_s
+    work.counter[N_REG_AT_START] = 0
