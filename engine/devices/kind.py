@@ -112,6 +112,8 @@ class DeviceContext:
         forms: slot suffix → the form its law must have; differs from the slot's own only for "winding" ("voltage" or "current").
         latches: latch name → symbol.
         choke: for poles, what faces mid, else None.
+        gates: for a pole in the edge picture: "upper", "lower" and "driven" (the device the duty belongs to) → condition that it is on;
+            empty in the averaged picture.
         power_scale: node, 1 in a run; the operating-point search ramps constant powers with it.
         source_scale: node, 1 in a run; the same for sources.
     """
@@ -127,6 +129,7 @@ class DeviceContext:
     choke: ChokeView | None
     power_scale: Node
     source_scale: Node
+    gates: Mapping[str, Node] = field(default_factory=dict)
 
     def node(self, setting: str) -> Node:
         """A setting that is a value."""
@@ -169,6 +172,7 @@ class DeviceKind:
         settings: all settings.
         slots: its branches.
         readings: name → dimension of what can be read from it beside v, i, p and terminal currents.
+        conditions: which of the readings are true or false.
         latches: what events may set.
         equations: builds the equations.
         check: facts wrong in the settings' combination → sentence and hint, or None.
@@ -190,6 +194,7 @@ class DeviceKind:
     document: str = ""
     source: str = ""
     switching: bool = False
+    conditions: tuple[str, ...] = ()
 
     @property
     def two_terminal(self) -> bool:

@@ -21,6 +21,7 @@ from polewise.devices.kind import (
     register,
     register_part,
 )
+from polewise.devices.pole_edges import edge_equations
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 
@@ -127,6 +128,8 @@ class _Pole:
 
 
 def _pole(context: DeviceContext) -> DeviceEquations:
+    if context.gates:
+        return edge_equations(context)
     g = context.graph
     settings = context.settings
     asked = next(context.node(name) for name in ("duty", "upper_duty", "lower_duty") if settings.get(name) is not None)
@@ -299,10 +302,25 @@ def _equations(pole: _Pole, mid: Node, top: Node, duty: Node, delta: Node, mode:
         g.multiply(context.branch_v["top_arm"], context.branch_i["top_arm"]),
     )
     one = g.constant(1.0)
+    # Averages of the devices' own quantities: current in the direction top → mid → bottom, voltage across each while it may block.
+    upper_i = context.branch_i["top_arm"]
+    lower_i = g.add(context.branch_i["mid_arm"], context.branch_i["top_arm"])
+    v_mid = context.branch_v["mid_arm"]
     at_limit = g.either(g.positive(g.subtract(pole.asked, one)), g.positive(g.negate(pole.asked)))
     return DeviceEquations(
         laws={"mid_arm": mid, "top_arm": top},
-        readings={"duty": pole.duty, "share": duty, "conduction": delta, "mode": mode, "loss": loss, "ripple": _ripple(pole, duty)},
+        readings={
+            "duty": pole.duty,
+            "share": duty,
+            "conduction": delta,
+            "mode": mode,
+            "loss": loss,
+            "ripple": _ripple(pole, duty),
+            "upper_i": upper_i,
+            "lower_i": lower_i,
+            "upper_v": g.subtract(pole.rail, v_mid),
+            "lower_v": v_mid,
+        },
         flags={"duty_limited": at_limit},
     )
 
@@ -345,6 +363,7 @@ POLE = register(
                 words=("natural", "single", "double"),
                 document="when the modulator reads the duty: all the time, once or twice a period",
             ),
+            SettingSpec("phase", units.NONE, "constant", 0.0, document="how far its carrier lags, as an angle: 180 deg is half a period"),
             SettingSpec("delay", units.TIME, "constant", 0.0, document="computing delay between the duty signal and the modulator"),
         ),
         slots=(BranchSlot("mid_arm", "mid", "bottom", "voltage"), BranchSlot("top_arm", "top", "bottom", "current")),
@@ -356,6 +375,10 @@ POLE = register(
             "mode": units.NONE,
             "loss": units.POWER,
             "ripple": units.CURRENT,
+            "upper_i": units.CURRENT,
+            "lower_i": units.CURRENT,
+            "upper_v": units.VOLTAGE,
+            "lower_v": units.VOLTAGE,
         },
         check=_check,
         document="A switch pole as its cycle average. mode reads 2 in continuous, 1 in discontinuous conduction, 0 when blocked.",

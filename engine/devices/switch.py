@@ -33,6 +33,7 @@ DIODE = register(
         equations=_diode,
         positional=("drop", "resistance"),
         readings={"conducts": units.NONE},
+        conditions=("conducts",),
         document="A diode that is not switched by a pole: conducts from left to right. Piecewise linear.",
         source="Common practice.",
     )
@@ -82,6 +83,7 @@ SWITCH = register(
         equations=_switch,
         positional=("on",),
         readings={"closed": units.NONE},
+        conditions=("closed",),
         document="A contact that follows a condition.",
         source="Common practice.",
     )

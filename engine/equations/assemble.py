@@ -3,45 +3,25 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 from polewise.circuit.model import Assignment, Circuit, Quantity, StudyDef
-from polewise.devices.kind import KINDS
 from polewise.equations import messages
 from polewise.equations.definitions import Definitions, RowSketch
 from polewise.equations.derived import DerivedRates
+from polewise.equations.modulators import duties_in_force, gates
 from polewise.equations.reduce import LoopOfConditions, Reduction, UnforeseenLoop
-from polewise.equations.system import Clock, Conditional, DelayLine, EquationSystem, Flag, Output, Parameter, ParameterKind, Target, Timed, Unknown
+from polewise.equations.sketch import ClockSketch, DelaySketch, SystemSketch
+from polewise.equations.system import Clock, Conditional, DelayLine, EquationSystem, Flag, Output, Parameter, Target, Timed, Unknown
 from polewise.errors import NetlistError
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 from polewise.grammar.source import Span, no_span
-from polewise.grammar.units import Dimension
 from polewise.kernels.program import RANK_EVENTS
 from polewise.network.graph import Network
 
 # At an operating point a bounded state satisfies x = limit(x + s*rate, low, high); any s > 0 (seconds) serves.
 BOUND_PROBE_S = 1e-3
-
-
-@dataclass(slots=True)
-class _ParameterSketch:
-    name: str
-    symbol: Node
-    kind: ParameterKind
-    initial: float | None
-    rest: Node | None
-    dimension: Dimension
-    is_condition: bool
-    span: Span | None
-
-
-@dataclass(slots=True)
-class _ClockSketch:
-    name: str
-    period_s: float
-    events: bool
-    updates: list[tuple[str, Node]] = field(default_factory=list)  # parameter name → new value
 
 
 def assemble(
@@ -51,6 +31,7 @@ def assemble(
     study: str | None = None,
     outputs: Sequence[Quantity] = (),
     sampling: str = "exact",
+    picture: str = "averaged",
 ) -> EquationSystem:
     """Write the circuit's equations with as few unknowns as its structure allows.
 
@@ -58,35 +39,33 @@ def assemble(
         study: whose events are in force beside the circuit's own; None: only the circuit's own.
         outputs: what will be recorded.
         sampling: "exact", or "mean" for the s-domain equivalents of sampled blocks.
+        picture: "averaged", or "edges" for poles with every switching edge (no operating point exists then).
     Raises:
         NetlistError: a loop of conditions, a derivative that cannot be determined, or an event that cannot be carried out.
     """
-    return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean").assemble(outputs)
+    return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean", picture == "edges").assemble(outputs)
 
 
 class _Assembler:
     """Collects sketches in circuit-level symbols, then resolves them all at once."""
 
-    def __init__(self, circuit: Circuit, network: Network, study: StudyDef | None, mean: bool) -> None:
-        self.circuit, self.network, self.study, self.mean = circuit, network, study, mean
+    def __init__(self, circuit: Circuit, network: Network, study: StudyDef | None, mean: bool, edges: bool) -> None:
+        self.circuit, self.network, self.study, self.edges = circuit, network, study, edges
         self.graph: ExpressionGraph = circuit.graph
-        self.parameters: dict[str, _ParameterSketch] = {}
-        self.clocks: list[_ClockSketch] = []
-        self.delays: list[tuple[str, Node, float, Node | None]] = []  # parameter, expression, delay, start slope
-        self.extra_rows: list[RowSketch] = []
-        self.extra_definitions: dict[Node, Node] = {}
+        self.sketch = SystemSketch(self.graph, mean)
 
     # ------------------------------------------------------------ sketching
 
     def assemble(self, outputs: Sequence[Quantity]) -> EquationSystem:
         g, circuit = self.graph, self.circuit
-        power = self._parameter("power_scale", "power_scale", 1.0, None, units.NONE)
-        source = self._parameter("source_scale", "source_scale", 1.0, None, units.NONE)
+        power = self.sketch.parameter("power_scale", "power_scale", 1.0, None, units.NONE)
+        source = self.sketch.parameter("source_scale", "source_scale", 1.0, None, units.NONE)
         self._latches_and_clocks()
-        duties = self._modulators()
-        definitions = Definitions(circuit, self.network, power, source, duties)
+        duties = {} if self.edges else duties_in_force(circuit, self.sketch)
+        pole_gates = gates(circuit, self.sketch) if self.edges else {}
+        definitions = Definitions(circuit, self.network, power, source, duties, pole_gates)
         definitions.define_all()
-        definitions.defined.update(self.extra_definitions)
+        definitions.defined.update(self.sketch.definitions)
         for signal in circuit.signals.values():
             symbol = g.symbol("signal", signal.name)
             definitions.defined[symbol] = signal.expression
@@ -95,31 +74,17 @@ class _Assembler:
         self._averages_and_delays(definitions)
         for rate in circuit.rates.values():
             definitions.define_rate(rate.name, g.symbol("rate", rate.name), rate.expression, rate.dimension / units.TIME, rate.owner, rate.span)
-        definitions.defined.update(self.extra_definitions)
+        definitions.defined.update(self.sketch.definitions)
         conditions = frozenset(g.symbol("signal", s.name) for s in circuit.signals.values() if s.is_condition)
         reduction = Reduction(g, definitions.defined, conditions)
         return self._resolve(definitions, reduction, outputs)
-
-    def _parameter(
-        self,
-        name: str,
-        kind: ParameterKind,
-        initial: float | None,
-        rest: Node | None,
-        dimension: Dimension,
-        is_condition: bool = False,
-        span: Span | None = None,
-    ) -> Node:
-        symbol = self.graph.symbol("p", name)
-        self.parameters[name] = _ParameterSketch(name, symbol, kind, initial, rest, dimension, is_condition, span)
-        return symbol
 
     def _latches_and_clocks(self) -> None:
         g, circuit = self.graph, self.circuit
         clock_events = (*circuit.clock_events, *(self.study.clock_events if self.study else ()))
         clocked: dict[str, tuple[Node, float, Span]] = {}
         for event in clock_events:
-            sketch = _ClockSketch(event.name, event.period_s, True)
+            sketch = ClockSketch(event.name, event.period_s, True)
             for assignment in event.assignments:
                 if assignment.target_kind == "state":
                     raise NetlistError([messages.clock_sets_state(assignment.target, assignment.span)])
@@ -128,109 +93,41 @@ class _Assembler:
                     raise NetlistError([messages.clock_conflict(assignment.target, assignment.span)])
                 clocked[assignment.target] = (assignment.value, event.period_s, assignment.span)
                 sketch.updates.append((assignment.target, assignment.value))
-            self.clocks.append(sketch)
+            self.sketch.clocks.append(sketch)
         for latch in circuit.latches.values():
             symbol = g.symbol("latch", latch.name)
             update = clocked.get(latch.name)
             initial = g.value_of(latch.initial)
             assert initial is not None
-            if self.mean and update is not None:
+            if self.sketch.mean and update is not None:
                 if latch.is_condition:
                     raise NetlistError([messages.condition_in_mean(latch.name, update[2])])
-                self._mean_state(symbol, latch.name, update[0], update[1], initial, latch.dimension, latch.owner, latch.span)
+                self.sketch.mean_state(symbol, latch.name, update[0], update[1], initial, latch.dimension, latch.owner, latch.span)
                 continue
             rest = update[0] if update is not None else None
-            self.extra_definitions[symbol] = self._parameter(latch.name, "latch", initial, rest, latch.dimension, latch.is_condition, latch.span)
-        if self.mean:
-            self.clocks = []
+            self.sketch.definitions[symbol] = self.sketch.parameter(
+                latch.name, "latch", initial, rest, latch.dimension, is_condition=latch.is_condition, span=latch.span
+            )
+        if self.sketch.mean:
+            self.sketch.clocks = []
         for sampler in circuit.samplers:
-            sketch = _ClockSketch(sampler.name, sampler.period_s, False)
+            sketch = ClockSketch(sampler.name, sampler.period_s, False)
             for (name, value), dimension in zip(sampler.updates, sampler.dimensions, strict=True):
                 symbol = g.symbol("sampled", name)
-                if self.mean:
-                    self._mean_state(symbol, name, value, sampler.period_s, 0.0, dimension, sampler.owner, sampler.span, name == sampler.name)
+                if self.sketch.mean:
+                    self.sketch.mean_state(symbol, name, value, sampler.period_s, 0.0, dimension, sampler.owner, sampler.span, name == sampler.name)
                     continue
-                self.extra_definitions[symbol] = self._parameter(name, "sampled", None, value, dimension, span=sampler.span)
+                self.sketch.definitions[symbol] = self.sketch.parameter(name, "sampled", None, value, dimension, span=sampler.span)
                 sketch.updates.append((name, value))
-            if not self.mean:
-                self.clocks.append(sketch)
-
-    def _mean_state(
-        self,
-        symbol: Node,
-        name: str,
-        update: Node,
-        period_s: float,
-        initial: float,
-        dimension: Dimension,
-        owner: str,
-        span: Span,
-        is_output: bool | None = None,
-    ) -> None:
-        """The s-domain equivalent of a value renewed every period: it follows its update with a lag.
-
-        A value that feeds back on itself or is only passed on to the next instant lags one period; one that the circuit sees lags the half
-        period that a hold takes on average. First order: right in gain at rest and in delay at low frequency.
-        """
-        g = self.graph
-        x = g.symbol("x", name)
-        self.extra_definitions[symbol] = x
-        own = symbol in g.symbols_under([update])
-        lag_s = period_s if own or is_output is False else 0.5 * period_s
-        rate = g.divide(g.subtract(update, x), g.constant(lag_s))
-        self.extra_rows.append(RowSketch(name, x, x, g.negate(rate), dimension, owner, span, initial, True))
-
-    def _modulators(self) -> dict[str, Node]:
-        """The duty in force of poles whose modulator samples it or whose control computes for a while."""
-        g = self.graph
-        duties: dict[str, Node] = {}
-        for device in self.circuit.devices.values():
-            if not KINDS[device.kind].switching:
-                continue
-            settings = device.settings
-            sampling = settings.get("sampling", "natural")
-            delay_node = settings.get("delay")
-            delay_s = (g.value_of(delay_node) or 0.0) if isinstance(delay_node, int) else 0.0
-            if sampling == "natural" and delay_s == 0.0:
-                continue
-            duty = next(settings[k] for k in ("duty", "upper_duty", "lower_duty") if isinstance(settings.get(k), int))
-            rate_node = settings["rate"]
-            assert isinstance(duty, int)
-            assert isinstance(rate_node, int)
-            rate_hz = g.value_of(rate_node)
-            assert rate_hz is not None
-            if sampling != "natural":
-                period_s = 1.0 / rate_hz if sampling == "single" else 0.5 / rate_hz
-                duty = self._held(f"{device.name}.sampled_duty", duty, period_s, device.owner, device.span)
-            if delay_s > 0.0:
-                duty = self._late(f"{device.name}.delayed_duty", duty, delay_s, device.owner, device.span)
-            duties[device.name] = duty
-        return duties
-
-    def _held(self, name: str, value: Node, period_s: float, owner: str, span: Span) -> Node:
-        symbol = self.graph.symbol("sampled", name)
-        if self.mean:
-            self._mean_state(symbol, name, value, period_s, 0.0, units.NONE, owner, span)
-        else:
-            self.extra_definitions[symbol] = self._parameter(name, "sampled", None, value, units.NONE, span=span)
-            self.clocks.append(_ClockSketch(name, period_s, False, [(name, value)]))
-        return symbol
-
-    def _late(self, name: str, value: Node, delay_s: float, owner: str, span: Span) -> Node:
-        symbol = self.graph.symbol("delayed", name)
-        if self.mean:
-            self._mean_state(symbol, name, value, 2.0 * delay_s, 0.0, units.NONE, owner, span)
-        else:
-            self.extra_definitions[symbol] = self._parameter(name, "delayed", None, value, units.NONE, span=span)
-            self.delays.append((name, value, delay_s, None))
-        return symbol
+            if not self.sketch.mean:
+                self.sketch.clocks.append(sketch)
 
     def _states(self) -> None:
         g = self.graph
         zero = g.constant(0.0)
         for state in self.circuit.states.values():
             x = g.symbol("x", state.name)
-            self.extra_definitions[g.symbol("state", state.name)] = x
+            self.sketch.definitions[g.symbol("state", state.name)] = x
             initial = (g.value_of(state.initial) or 0.0) if state.initial is not None else 0.0
             rate, rest, bounds = state.rate, None, None
             if state.low is not None and state.high is not None:
@@ -244,31 +141,31 @@ class _Assembler:
                 rate = g.mux(outward, zero, rate)
             if state.held:
                 rest = g.subtract(x, g.constant(initial))
-            self.extra_rows.append(
+            self.sketch.rows.append(
                 RowSketch(state.name, x, x, g.negate(rate), state.dimension, state.owner, state.span, initial, True, state.held, bounds, rest)
             )
         for unknown in self.circuit.unknowns.values():
             x = g.symbol("x", unknown.name)
-            self.extra_definitions[g.symbol("unknown", unknown.name)] = x
+            self.sketch.definitions[g.symbol("unknown", unknown.name)] = x
             initial = (g.value_of(unknown.initial) or 0.0) if unknown.initial is not None else 0.0
-            self.extra_rows.append(RowSketch(unknown.name, x, None, unknown.residual, unknown.dimension, unknown.owner, unknown.span, initial))
+            self.sketch.rows.append(RowSketch(unknown.name, x, None, unknown.residual, unknown.dimension, unknown.owner, unknown.span, initial))
 
     def _averages_and_delays(self, definitions: Definitions) -> None:
         g = self.graph
         for delay in self.circuit.delays.values():
             symbol = g.symbol("delayed", delay.name)
-            parameter = self._parameter(delay.name, "delayed", None, delay.expression, delay.dimension, span=delay.span)
-            self.extra_definitions[symbol] = parameter
-            self.delays.append((delay.name, delay.expression, delay.delay_s, None))
+            parameter = self.sketch.parameter(delay.name, "delayed", None, delay.expression, delay.dimension, span=delay.span)
+            self.sketch.definitions[symbol] = parameter
+            self.sketch.delays.append(DelaySketch(delay.name, delay.expression, delay.delay_s, None))
         for average in self.circuit.averages.values():
             # mean(x) = (Q(t) - Q(t - T))/T with Q' = x; at rest Q(t - T) = Q - T*x gives the mean x.
             name = f"{average.name}.integral"
             x, window = g.symbol("x", name), g.constant(average.window_s)
             rest = g.subtract(x, g.multiply(window, average.expression))
-            late = self._parameter(f"{name}.delayed", "delayed", None, rest, average.dimension * units.TIME, span=average.span)
-            self.delays.append((f"{name}.delayed", x, average.window_s, average.expression))
-            self.extra_definitions[g.symbol("averaged", average.name)] = g.divide(g.subtract(x, late), window)
-            self.extra_rows.append(
+            late = self.sketch.parameter(f"{name}.delayed", "delayed", None, rest, average.dimension * units.TIME, span=average.span)
+            self.sketch.delays.append(DelaySketch(f"{name}.delayed", x, average.window_s, average.expression))
+            self.sketch.definitions[g.symbol("averaged", average.name)] = g.divide(g.subtract(x, late), window)
+            self.sketch.rows.append(
                 RowSketch(
                     name, x, x, g.negate(average.expression), average.dimension * units.TIME, average.owner, average.span, 0.0, True, True, None, x
                 )
@@ -278,7 +175,7 @@ class _Assembler:
 
     def _resolve(self, definitions: Definitions, reduction: Reduction, outputs: Sequence[Quantity]) -> EquationSystem:
         g, circuit = self.graph, self.circuit
-        rows = [*definitions.rows, *self.extra_rows]
+        rows = [*definitions.rows, *self.sketch.rows]
         time_events = (*circuit.time_events, *(self.study.time_events if self.study else ()))
         condition_events = (*circuit.condition_events, *(self.study.condition_events if self.study else ()))
         flags = [
@@ -291,9 +188,9 @@ class _Assembler:
             *(r.charge for r in rows if r.charge is not None),
             *(r.rest for r in rows if r.rest is not None),
             *(node for r in rows if r.bounds is not None for node in r.bounds),
-            *(p.rest for p in self.parameters.values() if p.rest is not None),
-            *(node for c in self.clocks for _, node in c.updates),
-            *(node for _, expression, _, slope in self.delays for node in (expression, slope) if node is not None),
+            *(p.rest for p in self.sketch.parameters.values() if p.rest is not None),
+            *(node for c in self.sketch.clocks for _, node in c.updates),
+            *(node for d in self.sketch.delays for node in (d.expression, d.start_slope) if node is not None),
             *(a.value for e in time_events for a in e.assignments),
             *(e.condition for e in condition_events),
             *(a.value for e in condition_events for a in e.assignments),
@@ -315,10 +212,10 @@ class _Assembler:
         unknown_rows = derived.finish()
         unknowns = tuple(self._unknown(row, look) for row in unknown_rows)
         index_of_unknown = {u.name: k for k, u in enumerate(unknowns)}
-        index_of_parameter = {name: k for k, name in enumerate(self.parameters)}
+        index_of_parameter = {name: k for k, name in enumerate(self.sketch.parameters)}
         parameters = tuple(
             Parameter(p.name, p.symbol, p.kind, p.initial, None if p.rest is None else look.one(p.rest), p.dimension, p.is_condition, p.span)
-            for p in self.parameters.values()
+            for p in self.sketch.parameters.values()
         )
 
         def targets(assignments: Sequence[Assignment]) -> tuple[Target, ...]:
@@ -335,8 +232,8 @@ class _Assembler:
             unknowns=unknowns,
             parameters=parameters,
             delays=tuple(
-                DelayLine(index_of_parameter[name], look.one(expression), delay_s, None if slope is None else look.one(slope))
-                for name, expression, delay_s, slope in self.delays
+                DelayLine(index_of_parameter[d.name], look.one(d.expression), d.delay_s, None if d.start_slope is None else look.one(d.start_slope))
+                for d in self.sketch.delays
             ),
             clocks=self._ranked_clocks(look, index_of_parameter),
             timed=tuple(Timed(e.time_s, targets(e.assignments), e.span) for e in time_events),
@@ -385,8 +282,8 @@ class _Assembler:
     def _ranked_clocks(self, look: _Look, index_of: dict[str, int]) -> tuple[Clock, ...]:
         """Samplers ranked by what they read of each other at one instant, `every` events last; equal period and rank become one clock."""
         g = self.graph
-        of_parameter = {name: k for k, c in enumerate(self.clocks) if not c.events for name, _ in c.updates}
-        resolved = [[(name, look.one(node)) for name, node in c.updates] for c in self.clocks]
+        of_parameter = {name: k for k, c in enumerate(self.sketch.clocks) if not c.events for name, _ in c.updates}
+        resolved = [[(name, look.one(node)) for name, node in c.updates] for c in self.sketch.clocks]
         reads: list[set[int]] = []
         for k, named in enumerate(resolved):
             names = {g.symbols[s][1] for s in g.symbols_under([node for _, node in named]) if g.symbols[s][0] == "p"}
@@ -399,12 +296,12 @@ class _Assembler:
                 rank[k] = max(inner, default=-1) + 1
             return rank[k]
 
-        groups: dict[tuple[float, int], tuple[str, list[tuple[int, Node]]]] = {}
-        for k, clock in enumerate(self.clocks):
-            key = (clock.period_s, RANK_EVENTS if clock.events else rank_of(k, frozenset()))
+        groups: dict[tuple[float, float, int], tuple[str, list[tuple[int, Node]]]] = {}
+        for k, clock in enumerate(self.sketch.clocks):
+            key = (clock.period_s, clock.offset_s, RANK_EVENTS if clock.events else rank_of(k, frozenset()))
             _, updates = groups.setdefault(key, (clock.name, []))
             updates.extend((index_of[name], node) for name, node in resolved[k])
-        return tuple(Clock(name, period, order, tuple(updates)) for (period, order), (name, updates) in groups.items())
+        return tuple(Clock(name, period, order, tuple(updates), offset) for (period, offset, order), (name, updates) in groups.items())
 
 
 @dataclass(slots=True)

@@ -57,6 +57,7 @@ class Definitions:
     power_scale: Node
     source_scale: Node
     duty_of: Mapping[str, Node]  # poles whose modulator samples or delays: the duty in force
+    gates_of: Mapping[str, Mapping[str, Node]]  # poles in the edge picture: their gates
     defined: dict[Node, Node] = field(default_factory=dict)
     rows: list[RowSketch] = field(default_factory=list)
     dependents: dict[Node, DependentSketch] = field(default_factory=dict)
@@ -220,6 +221,7 @@ class Definitions:
             choke=self._choke_view(device),
             power_scale=self.power_scale,
             source_scale=self.source_scale,
+            gates=self.gates_of.get(device.name, {}),
         )
         equations = kind.equations(context)
         self.equations[device.name] = equations

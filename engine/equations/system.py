@@ -88,12 +88,13 @@ class DelayLine:
 
 @dataclass(frozen=True, slots=True)
 class Clock:
-    """At k*period_s (k = 0, 1, …): parameter[j] becomes updates[j]. rank: order at one instant (kernels.program)."""
+    """At offset_s + k*period_s (k = 0, 1, …): parameter[j] becomes updates[j]. rank: order at one instant (kernels.program)."""
 
     name: str
     period_s: float
     rank: int
     updates: tuple[tuple[int, Node], ...]
+    offset_s: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)

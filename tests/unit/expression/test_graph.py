@@ -65,12 +65,12 @@ def test_substitute_rebuilds_and_folds(graph: ExpressionGraph) -> None:
 def test_long_sum_is_shallow(graph: ExpressionGraph) -> None:
     symbols = [graph.symbol("x", str(k)) for k in range(1000)]
     node = graph.sum(symbols)
-    depth = {s: 0 for s in symbols}
+    depth = dict.fromkeys(symbols, 0)
     for n in graph.reachable([node]):
         if n not in depth:
             depth[n] = 1 + max(depth[c] for c in graph.children(n))
     assert depth[node] == 10
-    assert graph.evaluate([node], {s: 1.0 for s in symbols}) == [1000.0]
+    assert graph.evaluate([node], dict.fromkeys(symbols, 1.0)) == [1000.0]
 
 
 def test_piecewise_cubic_segments() -> None:
