@@ -1,4 +1,4 @@
-"""CSV recordings: one line per point, written as the run goes; the header names each quantity with its unit."""
+"""CSV recordings: one line per step's end, written as the run goes; the header names each quantity with its unit."""
 
 from __future__ import annotations
 
@@ -9,12 +9,11 @@ from io import TextIOWrapper
 from pathlib import Path
 from typing import Final
 
-from polewise.results.curve import FloatArray
+from polewise.results.curve import INTERIOR, FloatArray
 from polewise.results.failures import OutputFailed
-from polewise.results.recording import ROWS_BEFORE, Column, Recording
+from polewise.results.recording import ROWS_BEFORE, Column, Recording, row_blocks
 
 DIGITS: Final = 12  # of every number: more than any solver tolerance, fewer than a double's noise
-_ROWS_AT_ONCE: Final = 4096
 
 
 def header(columns: tuple[Column, ...]) -> list[str]:
@@ -37,8 +36,9 @@ class CsvSink:
     def write(self, rows: FloatArray) -> None:
         """Take a block of rows."""
         fields = [0, *(ROWS_BEFORE + k for k in self._columns)]
+        ends = rows[rows[:, 1] != INTERIOR]
         try:
-            self._file.writelines(",".join([f"{value:.{DIGITS}g}" for value in row]) + "\n" for row in rows[:, fields].tolist())
+            self._file.writelines(",".join([f"{value:.{DIGITS}g}" for value in row]) + "\n" for row in ends[:, fields].tolist())
         except OSError as error:
             raise _failed(self.path, error) from error
 
@@ -57,16 +57,10 @@ class CsvSink:
 
 def write_csv(path: Path, recording: Recording) -> None:
     """Write a finished recording's kept quantities."""
-    import numpy as np
-
     kept = tuple(column for column in recording.columns if column.role == "kept")
     sink = CsvSink(path, kept)
-    time = recording.grid.time
-    values = [recording.values(column.name) for column in kept]
-    for start in range(0, time.size, _ROWS_AT_ONCE):
-        part = slice(start, start + _ROWS_AT_ONCE)
-        flag = recording.grid.flag[part].astype(np.float64)
-        sink.write(np.column_stack([time[part], flag, *(v[part] for v in values)]))
+    for rows in row_blocks(recording, kept):
+        sink.write(rows)
     sink.close()
 
 

@@ -53,6 +53,15 @@ class OutputFailed(PolewiseError):
         super().__init__([_diagnostic("output-failed", f"{path} could not be written: {reason}")])
 
 
+class Interrupted(PolewiseError):
+    """A study that another one starts from was stopped before its end."""
+
+    exit_code = EXIT_NOT_FINISHED
+
+    def __init__(self, study: str) -> None:
+        super().__init__([_diagnostic("interrupted", f"study `{study}` was stopped before another could start from it")])
+
+
 class DamagedRecording(PolewiseError):
     """A recorded file that can't be read."""
 

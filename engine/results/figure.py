@@ -76,6 +76,18 @@ class FigureFacts:
     marks: tuple[Mark, ...]
 
 
+def require_matplotlib() -> None:
+    """Say so where matplotlib is missing.
+
+    Raises:
+        MissingExtra: it is not installed.
+    """
+    try:
+        import matplotlib.figure  # noqa: F401
+    except ImportError as error:
+        raise MissingExtra("matplotlib", "figures", "drawing a figure") from error
+
+
 def study_figure(recording: Recording, verdict: Verdict, facts: FigureFacts) -> Figure:
     """Draw a study.
 
@@ -86,10 +98,9 @@ def study_figure(recording: Recording, verdict: Verdict, facts: FigureFacts) -> 
     Raises:
         MissingExtra: matplotlib is not installed.
     """
-    try:
-        from matplotlib.figure import Figure
-    except ImportError as error:
-        raise MissingExtra("matplotlib", "figures", "drawing a figure") from error
+    require_matplotlib()
+    from matplotlib.figure import Figure
+
     panels = _panels(recording)
     heights = [_PANEL_IN if not panel.lanes else 0.55 + 0.17 * len(panel.columns) for panel in panels] or [_PANEL_IN]
     tags = _tags(facts)

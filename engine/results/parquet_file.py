@@ -25,7 +25,12 @@ POINT_MEANING: Final = "0 inside a step, 1 end of a step, 2 just before a jump, 
 _PREFIX: Final = "polewise."
 
 
-def _pyarrow() -> tuple[ModuleType, ModuleType]:
+def require_pyarrow() -> tuple[ModuleType, ModuleType]:
+    """pyarrow and pyarrow.parquet.
+
+    Raises:
+        MissingExtra: not installed.
+    """
     try:
         import pyarrow
         import pyarrow.parquet
@@ -62,7 +67,7 @@ class ParquetSink:
             about: facts for the file's metadata (title, study).
             row_group_bytes: memory to use.
         """
-        self._arrow, parquet = _pyarrow()
+        self._arrow, parquet = require_pyarrow()
         self.path = path
         self.columns = columns
         width = ROWS_BEFORE + len(columns)
@@ -155,7 +160,7 @@ class ParquetRecording:
         Raises:
             DamagedRecording: cut off, or not one of ours.
         """
-        arrow, parquet = _pyarrow()
+        arrow, parquet = require_pyarrow()
         self.path = path
         self._lookup = arrow
         try:

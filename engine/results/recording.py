@@ -6,7 +6,7 @@ A sink takes blocks of rows, shape (m, 2 + n): time (s), flag (see curve.py), th
 from __future__ import annotations
 
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from typing import IO, Literal, Protocol
 
@@ -17,6 +17,7 @@ from polewise.results.curve import Curve, FloatArray, IntArray, StepGrid, curve,
 from polewise.results.failures import OutputFailed, UnknownName, nearest_names
 
 MEMORY_LIMIT_BYTES = 512 * 1024 * 1024  # rows beyond this go to a temporary file, so that an hours-long run can't exhaust memory
+_ROWS_AT_ONCE = 8192
 ROWS_BEFORE = 2  # time and flag stand before the values
 
 
@@ -75,6 +76,19 @@ class Recording(Protocol):
 def recorded_curve(recording: Recording, name: str) -> Curve:
     """A column as a curve."""
     return curve(recording.grid, recording.values(name))
+
+
+def row_blocks(recording: Recording, columns: Sequence[Column]) -> Iterator[FloatArray]:
+    """The rows of a recording again, in blocks of shape (m, 2 + n)."""
+    values = [recording.values(column.name) for column in columns]
+    time, flag = recording.grid.time, recording.grid.flag
+    for start in range(0, time.size, _ROWS_AT_ONCE):
+        part = slice(start, start + _ROWS_AT_ONCE)
+        block = np.empty((time[part].size, ROWS_BEFORE + len(values)))
+        block[:, 0], block[:, 1] = time[part], flag[part]
+        for k, column in enumerate(values):
+            block[:, ROWS_BEFORE + k] = column[part]
+        yield block
 
 
 def column_index(columns: Sequence[Column], name: str) -> int:

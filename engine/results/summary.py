@@ -18,7 +18,7 @@ def write_summary(path: Path, content: Mapping[str, Any]) -> None:
     """Write a summary so that a reader sees the old or the new one, never half of one."""
     part = path.with_name(path.name + ".part")
     try:
-        part.write_text(json.dumps(_plain(content), indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
+        part.write_text(json.dumps(plain(content), indent=1, ensure_ascii=False) + "\n", encoding="utf-8")
         os.replace(part, path)
     except OSError as error:
         raise OutputFailed(str(path), os.strerror(error.errno) if error.errno else str(error)) from error
@@ -67,12 +67,12 @@ def _requirement(r: RequirementVerdict) -> dict[str, Any]:
     }
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
     """Values that JSON has a form for; a number that is none becomes null."""
     if isinstance(value, Mapping):
-        return {str(key): _plain(item) for key, item in value.items()}
+        return {str(key): plain(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(item) for item in value]
+        return [plain(item) for item in value]
     if isinstance(value, float) and not math.isfinite(value):
         return None
     return value

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from itertools import pairwise
 
 import numpy as np
 
@@ -21,7 +22,7 @@ Function = Callable[[float], float]
 def rows(edges: Sequence[float], functions: Sequence[Function], jumps: Sequence[float] = ()) -> FloatArray:
     """Rows of steps between these edges; a function is asked a hair before a jump for the value before it."""
     got: list[list[float]] = [[edges[0], END, *(f(edges[0]) for f in functions)]]
-    for start, stop in zip(edges[:-1], edges[1:], strict=True):
+    for start, stop in pairwise(edges):
         for c in INNER:
             t = start + c * (stop - start)
             got.append([t, INTERIOR, *(f(t) for f in functions)])
@@ -55,5 +56,8 @@ def judged(
     """A requirement on one column."""
     quantity = Quantity(subject, 0, units.VOLTAGE, measure == "condition")
     return Judged(
-        Requirement("r", measure, quantity, parameters, dimension, None, None, window_s, f"{measure} of {subject}", None, no_span()), subject, low, high
+        Requirement("r", measure, quantity, parameters, dimension, None, None, window_s, f"{measure} of {subject}", None, no_span()),
+        subject,
+        low,
+        high,
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -19,7 +20,7 @@ def _curve(points: list[tuple[float, int, float]]) -> Curve:
 
 def _sampled(function, edges) -> Curve:
     points = [(edges[0], END, function(edges[0]))]
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in pairwise(edges):
         points += [(a + c * (b - a), INTERIOR, function(a + c * (b - a))) for c in (0.155, 0.645)]
         points.append((b, END, function(b)))
     return _curve(points)

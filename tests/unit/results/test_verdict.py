@@ -97,7 +97,7 @@ def test_condition_that_comes_true_at_the_instant_the_window_opens() -> None:
 @pytest.mark.parametrize("bad", [math.nan, math.inf])
 @pytest.mark.parametrize("measure", ["value", "condition", "mean", "peak", "final"])
 def test_what_is_not_a_number_never_passes(bad: float, measure: str) -> None:
-    record = recording([0.0, 0.5, 1.0], {"v": lambda t: bad if t == 0.5 and math.isnan(bad) or t == 0.5 and measure != "condition" else 0.0})
+    record = recording([0.0, 0.5, 1.0], {"v": lambda t: bad if t == 0.5 and (math.isnan(bad) or measure != "condition") else 0.0})
     low, high = (None, None) if measure == "condition" else (-10.0, 10.0)
     got = _one(judged("v", low, high, measure=measure), record)
     assert not got.passed
