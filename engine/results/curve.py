@@ -157,7 +157,7 @@ class Curve:
         """Smallest and largest value of each piece, each shape (k,)."""
         low = np.minimum(self.coefficient[:, 0], self.coefficient.sum(axis=1))
         high = np.maximum(self.coefficient[:, 0], self.coefficient.sum(axis=1))
-        for u in self._stationary():
+        for u in self.stationary():
             value = _horner(self.coefficient, u)
             low, high = np.fmin(low, value), np.fmax(high, value)
         return low, high
@@ -165,7 +165,7 @@ class Curve:
     def lowest_place(self) -> tuple[int, float]:
         """Piece k and place u of the smallest value, the earliest of several; between points too."""
         best, place = np.inf, (0, 0.0)
-        for u in (np.zeros_like(self.start), np.ones_like(self.start), *self._stationary()):
+        for u in (np.zeros_like(self.start), np.ones_like(self.start), *self.stationary()):
             value = _horner(self.coefficient, u)
             if np.all(np.isnan(value)):
                 continue
@@ -226,7 +226,7 @@ class Curve:
         bad = np.flatnonzero(~np.isfinite(self.coefficient).all(axis=1))
         return float(self.start[bad[0]]) if bad.size else None
 
-    def _stationary(self) -> tuple[FloatArray, FloatArray]:
+    def stationary(self) -> tuple[FloatArray, FloatArray]:
         """Places u of the two stationary points of each piece, 0 where there is none inside."""
         _, c1, c2, c3 = self.coefficient.T
         with np.errstate(all="ignore"):

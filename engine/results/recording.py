@@ -131,6 +131,7 @@ class MemorySink:
         self._file.flush()
         width = ROWS_BEFORE + len(self.columns)
         rows = np.memmap(self._file, dtype=np.float64, mode="r", shape=(self._spilled_rows, width))
+        self._file.close()  # the map keeps the rows, the file itself has no name already
         return MemoryRecording(self.columns, (rows,), keep_columns=False)
 
     def _spill(self) -> None:

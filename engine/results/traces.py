@@ -35,13 +35,18 @@ def polyline(curve: Curve, bins: int = BINS) -> tuple[FloatArray, FloatArray]:
 
 
 def _refined(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArray]:
-    """Each piece from its start to its end in parts no longer than width_s; at a jump both sides."""
+    """Each piece from its start to its end in parts of about width_s, through its own extremes; at a jump both sides."""
+    stationary = curve.stationary()
+    turns = np.maximum(*stationary) > 0.0
     parts = np.clip(np.ceil(curve.length / width_s), 1, _SUBDIVISION_MAX).astype(np.int64)
-    linear = ~np.any(curve.coefficient[:, 2:] != 0.0, axis=1)
-    parts[linear] = 1
+    parts[~np.any(curve.coefficient[:, 2:] != 0.0, axis=1)] = 1
+    parts[turns] = np.maximum(parts[turns], 4)
+    first = np.cumsum(parts + 1) - (parts + 1)
     piece = np.repeat(np.arange(parts.size), parts + 1)
-    within = np.arange(piece.size) - np.repeat(np.cumsum(parts + 1) - (parts + 1), parts + 1)
-    u = within / parts[piece]
+    u = (np.arange(piece.size) - first[piece]) / parts[piece]
+    for place in stationary:  # the nearest inner point moves onto the extreme
+        k = np.flatnonzero(place > 0.0)
+        u[first[k] + np.clip(np.rint(place[k] * parts[k]).astype(np.int64), 1, parts[k] - 1)] = place[k]
     c = curve.coefficient[piece]
     value = c[:, 0] + u * (c[:, 1] + u * (c[:, 2] + u * c[:, 3]))
     return curve.start[piece] + u * curve.length[piece], value
