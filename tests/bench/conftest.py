@@ -1,0 +1,3 @@
+"""Benchmarks are run by hand (`python tests/bench/run.py`); pytest collects nothing here."""
+
+collect_ignore_glob = ["*.py"]
