@@ -1,0 +1,230 @@
+"""The pier at Tern Point in service, written by hand as ordinary differential equations: nothing of the package is used.
+
+States in order: shore current, bus capacitor; for each berth cable current, filter current, input capacitor, choke, output capacitor, soft-start
+reference, two integrals, plug cable current, boat capacitor; for each of the two service stages the first seven of these without the bus cable;
+for each battery current, slow pair, two integrals, charge; for each solar string capacitor, choke, two integrals.
+Every diode pole is in continuous conduction and every controller off its limits, which `margins` checks.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+
+CLOSED = 1e-4  # a closed breaker, ohm
+LEAK = 1e7  # a blocking diode, ohm
+
+
+@dataclass(frozen=True)
+class Stage:
+    """A step-down stage; the defaults are a berth's."""
+
+    setpoint: float
+    l_filter: float = 15e-6
+    r_damp: float = 0.25
+    c_in: float = 1e-3
+    esr_in: float = 0.025
+    choke: float = 180e-6
+    c_out: float = 1.2e-3
+    kp_i: float = 0.00446
+    ki_i: float = 10.5
+    kp_v: float = 5.5
+    ki_v: float = 1700.0
+    slew: float = 4000.0
+
+
+PLATES = (380.0, 400.0, 360.0, 380.0, 400.0, 380.0)
+EVENING = (60e3, 20e3, 60e3, 45e3, 60e3, 30e3)
+BERTHS = tuple(Stage(v) for v in PLATES)
+LIGHTS = Stage(110.0, choke=150e-6, c_out=2.2e-3, kp_i=0.0037, ki_i=8.8, kp_v=4.2, ki_v=980.0)
+PUMPS = Stage(400.0, choke=400e-6, c_out=470e-6, kp_i=0.0099, ki_i=23.0, kp_v=0.89, ki_v=210.0)
+STATES = 2 + 6 * 10 + 2 * 7 + 2 * 5 + 3 * 4
+BATTERY_AT = 2 + 60 + 14
+
+
+def load_node(v_cap: float, esr: float, current_in: float, power: float) -> float:
+    """Potential of a node fed with a current, with a capacitor behind a resistance and a constant power: v = v_cap + esr*(i - P/v)."""
+    b = v_cap + esr * current_in
+    return 0.5 * (b + float(np.sqrt(b * b - 4.0 * esr * power)))
+
+
+@dataclass
+class Pier:
+    """The right-hand side, with what events change."""
+
+    demands: list[float] = field(default_factory=lambda: list(EVENING))
+    sun: float = 0.8
+    shore: float = 770.0
+    cell_slope: float = 20.0 / 0.3  # of the open-circuit curve near 60 % charge, V
+
+    def rates(self, _t: float, y: Array) -> Array:
+        """dy/dt."""
+        d = np.empty_like(y)
+        v_bus = self._bus(y, d)
+        del v_bus
+        return d
+
+    def bus(self, y: Array) -> float:
+        """Potential of the bus."""
+        return self._bus(y, np.empty_like(y))
+
+    def _bus(self, y: Array, d: Array) -> float:
+        """Solve the bus node's current balance (the bank's resistance, the controllers and the arrester all read its potential)."""
+        v, v_before, g_before = float(y[1]), None, 0.0
+        for _ in range(40):
+            g = self._balance(y, v, d)
+            if v_before is None:
+                v_new = v + 1e-3
+            elif g == g_before:
+                break
+            else:
+                v_new = v - g * (v - v_before) / (g - g_before)
+            if abs(v_new - v) < 1e-13 * abs(v):
+                break
+            v_before, g_before, v = v, g, v_new
+        return v
+
+    def _balance(self, y: Array, v: float, d: Array) -> float:
+        """Current into the bus node at a trial potential; fills d on the way."""
+        i_shore, v_bank = y[0], y[1]
+        diode = (i_shore + 0.8 / 1e-3) / (1.0 / 1e-3 + 1.0 / LEAK)
+        d[0] = (self.shore - v - (CLOSED + 0.020) * i_shore - diode) / 40e-6
+        pre = (self.shore - v - 0.8) / (1e6 + 10.0 + 1e-3)  # through the open pre-charge breaker
+        i_bank = (v - v_bank) / 0.003
+        d[1] = i_bank / 6.6e-3
+        total = i_shore + pre - i_bank - (v / 900.0) ** 25
+        k = 2
+        for stage, power in zip(BERTHS, self.demands, strict=True):
+            total -= self._berth(stage, power, y[k : k + 10], v, d[k : k + 10])
+            k += 10
+        for stage, power in ((LIGHTS, 8e3), (PUMPS, 12e3)):
+            total -= self._service(stage, power, y[k : k + 7], v, d[k : k + 7])
+            k += 7
+        for _ in range(2):
+            total += self._battery(y[k : k + 5], v, d[k : k + 5])
+            k += 5
+        for _ in range(3):
+            total += self._roof(y[k : k + 4], v, d[k : k + 4])
+            k += 4
+        return float(total)
+
+    @staticmethod
+    def _converter(stage: Stage, y: Array, d: Array, out: float) -> float:
+        """Controllers; returns the duty. y: filter current, input capacitor, choke, output capacitor, reference, two integrals."""
+        d[4] = min(max((stage.setpoint - y[4]) / 2e-3, -stage.slew), stage.slew)
+        error_v = y[4] - out
+        error_i = stage.kp_v * error_v + y[5] - y[2]
+        d[5] = stage.ki_v * error_v
+        d[6] = stage.ki_i * error_i
+        return float(stage.kp_i * error_i + y[6])
+
+    @staticmethod
+    def _power_stage(stage: Stage, duty: float, front: float, out: float, y: Array, d: Array) -> None:
+        i = y[2]
+        mid = duty * (front - 0.004 * i) - (1.0 - duty) * (0.9 + 0.0015 * i)
+        d[2] = (mid - 0.003 * i - out) / stage.choke
+
+    def _berth(self, stage: Stage, power: float, y: Array, v: float, d: Array) -> float:
+        i_tap, i_filter, v_in, i_choke, v_out = y[0], y[1], y[2], y[3], y[4]
+        i_plug, v_boat = y[8], y[9]
+        out = v_out + 0.002 * (i_choke - i_plug)
+        plug = load_node(v_boat, 0.020, i_plug, power)
+        duty = self._converter(stage, y[1:8], d[1:8], out)
+        damped = i_tap - i_filter  # through the damping resistor
+        front = (v_in + stage.esr_in * (i_tap - duty * i_choke)) / (1.0 + stage.esr_in / LEAK)
+        feed = front + stage.r_damp * damped
+        d[0] = (v - (CLOSED + 0.004) * i_tap - feed) / 20e-6
+        d[1] = (feed - front) / stage.l_filter
+        d[2] = (front - v_in) / stage.esr_in / stage.c_in
+        self._power_stage(stage, duty, front, out, y[1:8], d[1:8])
+        d[4] = (i_choke - i_plug) / stage.c_out
+        d[8] = (out - 0.012 * i_plug - plug) / 4e-6
+        d[9] = (plug - v_boat) / 0.020 / 1e-3
+        return float(i_tap)
+
+    def _service(self, stage: Stage, power: float, y: Array, v: float, d: Array) -> float:
+        i_filter, v_in, i_choke, v_out = y[0], y[1], y[2], y[3]
+        out = load_node(v_out, 0.002, i_choke, power)
+        duty = self._converter(stage, y, d, out)
+        front = (v_in + stage.esr_in * (i_filter + v / stage.r_damp - duty * i_choke)) / (1.0 + stage.esr_in / stage.r_damp + stage.esr_in / LEAK)
+        d[0] = (v - front) / stage.l_filter
+        d[1] = (front - v_in) / stage.esr_in / stage.c_in
+        self._power_stage(stage, duty, front, out, y, d)
+        d[3] = (out - v_out) / 0.002 / stage.c_out
+        return float(i_filter + (v - front) / stage.r_damp)
+
+    def _battery(self, y: Array, v: float, d: Array) -> float:
+        i, v_pair, q_v, q_i, charge = y
+        error_v = 760.0 - 0.05 * i - v
+        error_i = 6.0 * error_v + q_v - i
+        cells = 620.0 + self.cell_slope * (charge - 0.6)
+        lower = 1.0 - cells / v + 0.0021 * error_i + q_i
+        mid = (1.0 - lower) * (v + 0.003 * i) + lower * 0.003 * i
+        d[0] = (cells - v_pair - (CLOSED + 0.018 + 0.002) * i - mid) / 150e-6
+        d[1] = (i - v_pair / 0.008) / 2500.0
+        d[2] = 300.0 * error_v
+        d[3] = 2.7 * error_i
+        d[4] = -i / (94.0 * 3600.0)
+        return float((1.0 - lower) * i)
+
+    def _roof(self, y: Array, v: float, d: Array) -> float:
+        v_cap, i, q_v, q_i = y
+        pv = v_cap
+        for _ in range(30):  # Newton on the node's current balance
+            string = self.sun * 53.0 - 0.2e-6 * (np.exp((pv - self._array_drop(pv, v_cap, i)) / 24.8) - 1.0)
+            g = (pv - v_cap) / 0.010 + i - string
+            slope = 1.0 / 0.010 + 0.2e-6 * np.exp(pv / 24.8) / 24.8
+            pv -= g / slope
+            if abs(g) < 1e-11:
+                break
+        error_v = pv - 400.0
+        error_i = 0.63 * error_v + q_v - i
+        duty = 0.005 * error_i + q_i
+        mid = (1.0 - duty) * (v + 1.1 + 0.004 * i) + duty * 0.012 * i
+        d[0] = (pv - v_cap) / 0.010 / 500e-6
+        d[1] = (pv - 0.008 * i - mid) / 400e-6
+        d[2] = 130.0 * error_v
+        d[3] = 5.8 * error_i
+        return float((1.0 - duty) * i)
+
+    @staticmethod
+    def _array_drop(pv: float, v_cap: float, i: float) -> float:
+        """Voltage across the string's closed breaker: the string's own voltage is higher than the node's by it."""
+        return -CLOSED * ((pv - v_cap) / 0.010 + i)
+
+
+def first_guess() -> Array:
+    """Near the state of rest."""
+    y = [370.0, 761.4]
+    for stage, power in zip(BERTHS, EVENING, strict=True):
+        v, i = stage.setpoint, power / stage.setpoint
+        y += [i * v / 750, i * v / 750, 758.0, i, v, v, i, v / 755, i, v - 1.0]
+    y += [11.0, 760.0, 73.0, 110.0, 110.0, 73.0, 0.147, 16.0, 760.0, 30.0, 400.0, 400.0, 30.0, 0.53]
+    y += [-25.0, -0.2, -25.0, 0.0, 0.6] * 2
+    y += [400.0, 41.0, 41.0, 0.475] * 3
+    return np.array(y)
+
+
+def at_rest(pier: Pier) -> Array:
+    """The state of rest with the batteries' charge held, by Newton with a difference quotient."""
+    y = first_guess()
+    held = [BATTERY_AT + 4, BATTERY_AT + 9]
+    free = [k for k in range(STATES) if k not in held]
+    for _ in range(50):
+        f = pier.rates(0.0, y)[free]
+        jacobian = np.empty((len(free), len(free)))
+        for column, k in enumerate(free):
+            h = 1e-6 * max(1.0, abs(y[k]))
+            up, down = y.copy(), y.copy()
+            up[k] += h
+            down[k] -= h
+            jacobian[:, column] = (pier.rates(0.0, up)[free] - pier.rates(0.0, down)[free]) / (2.0 * h)
+        step = np.linalg.solve(jacobian, f)
+        y[free] -= step
+        if np.max(np.abs(step) / np.maximum(1.0, np.abs(y[free]))) < 1e-13:
+            return y
+    raise AssertionError("the hand-written pier finds no rest")
