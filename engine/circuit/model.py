@@ -21,13 +21,16 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import Enum
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 from polewise.devices.kind import SettingValue
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 from polewise.grammar.source import Span
 from polewise.grammar.units import Dimension
+
+if TYPE_CHECKING:
+    from polewise.circuit.expansion import Expansion as NameIndex
 
 
 class Domain(Enum):
@@ -205,8 +208,9 @@ class LatchDef:
 
 @dataclass(frozen=True, slots=True)
 class SamplerDef:
-    """A clocked block: at each instant k*period all `updates` (sampled symbol name → new value) apply together; the values read other samplers'
-    new values of the same instant (samplers are listed in dependency order) but their own block's old ones.
+    """A clocked block: at each instant k*period all `updates` (sampled symbol name → new value) apply together, read with their own block's old
+    values. Blocks that share an instant update one after the other in the order of Circuit.samplers: a block reads the new values of those
+    listed before it and the old ones of those listed after it.
 
     mean: the s-domain equivalent used with `sampling = mean` is derived by the equations stage from these same updates.
     """
@@ -255,11 +259,15 @@ class Assignment:
 
 @dataclass(frozen=True, slots=True)
 class TimeEvent:
-    """At one time (s, from the study's start)."""
+    """At one time (s, from the study's start).
+
+    entry: it belongs to what the circuit is at its very start (the first step of a sequence); a study that starts from another one leaves it out.
+    """
 
     time_s: float
     assignments: tuple[Assignment, ...]
     span: Span
+    entry: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -321,6 +329,7 @@ class GivenDef:
     document: str | None
     owner: str
     span: Span
+    is_condition: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -403,3 +412,5 @@ class Circuit:
     studies: Mapping[str, StudyDef]
     files: tuple[str, ...] = ()
     aliases: Mapping[str, str] = field(default_factory=dict)  # readable name → flat name, e.g. path of one box → its branch
+    inputs: tuple[str, ...] = ()  # inputs at top level, kept as latches that Python sets
+    names: NameIndex | None = field(default=None, compare=False, repr=False)  # how circuit.quantities reads names; nothing else uses it

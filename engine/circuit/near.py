@@ -1,0 +1,60 @@
+"""Which declared name was probably meant: edit distance with neighbouring letters swapped counting once."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import Final
+
+# Comparing against very many names costs more than the hint is worth.
+CANDIDATES_MAX: Final = 20_000
+
+
+def distance(a: str, b: str, limit: int) -> int:
+    """Edits (insert, drop, replace, swap neighbours) from a to b; limit + 1 where it is more.
+
+    Source: Damerau 1964, Communications of the ACM 7(3); Wagner & Fischer 1974, Journal of the ACM 21(1), with the rows cut at the limit.
+    """
+    if abs(len(a) - len(b)) > limit:
+        return limit + 1
+    before: list[int] = []
+    row = list(range(len(b) + 1))
+    for i, x in enumerate(a, start=1):
+        earlier, before, row = before, row, [i] + [0] * len(b)
+        for j, y in enumerate(b, start=1):
+            row[j] = min(before[j] + 1, row[j - 1] + 1, before[j - 1] + (x != y))
+            if i > 1 and j > 1 and x == b[j - 2] and a[i - 2] == y:
+                row[j] = min(row[j], earlier[j - 2] + 1)
+        if min(row) > limit:
+            return limit + 1
+    return min(row[-1], limit + 1)
+
+
+def nearest(name: str, candidates: Iterable[str]) -> str | None:
+    """The candidate closest to a name, None where none is close (a third of its letters, at least one, at most three)."""
+    limit = max(1, min(3, len(name) // 3))
+    best: tuple[int, str] | None = None
+    folded = name.casefold()
+    for count, candidate in enumerate(candidates):
+        if count >= CANDIDATES_MAX:
+            break
+        if candidate == name:
+            continue
+        if candidate.casefold() == folded:
+            return candidate
+        d = distance(folded, candidate.casefold(), limit)
+        if d <= limit and (best is None or (d, candidate) < best):
+            best = d, candidate
+    return None if best is None else best[1]
+
+
+def looks_mistyped(name: str, other: str) -> bool:
+    """Whether a name used once is probably a slip for another: one edit apart, or apart in case alone; never merely numbered apart (b1, b2)."""
+    if name == other or _letters(name) == _letters(other):
+        return False
+    if name.casefold() == other.casefold():
+        return True
+    return min(len(name), len(other)) >= 4 and distance(name, other, 1) == 1
+
+
+def _letters(name: str) -> str:
+    return "".join(c for c in name if not c.isdigit())
