@@ -110,6 +110,11 @@ class Reduction:
                 readers[symbol] = readers.get(symbol, 0) + 1
         for symbol in order:
             leaf = self.torn.get(symbol)
+            if leaf is not None:  # readers of a torn symbol may come before it
+                self.image[symbol] = leaf
+                self._support[symbol] = frozenset((leaf,))
+        for symbol in order:
+            leaf = self.torn.get(symbol)
             support = self._gather(self.definitions[symbol])
             if leaf is None and support is None and readers.get(symbol, 0) > 1 and not self.sealed and symbol not in self.conditions:
                 kind, name = self.graph.symbols[symbol]
