@@ -14,9 +14,9 @@ from polewise.circuit.load import Sources, load_files, load_text
 from polewise.circuit.model import Circuit, Quantity, StudyDef
 from polewise.circuit.quantities import all_quantities, find, select
 from polewise.errors import NetlistError, SolverError
-from polewise.grammar.diagnostics import Diagnostic, Severity
+from polewise.grammar.diagnostics import Diagnostic, Label, Severity
 from polewise.grammar.source import no_span
-from polewise.grammar.units import NONE, format_value
+from polewise.grammar.units import NONE, format_value, read_value, unit_text
 from polewise.network.graph import Network
 from polewise.results.failures import Interrupted, UnknownName, nearest_names
 from polewise.results.overview import Overview, overview
@@ -98,14 +98,12 @@ def read(path: str | Path, *, given: Mapping[str, Value] | None = None) -> tuple
 
 def read_text(text: str, *, name: str = "<text>", given: Mapping[str, Value] | None = None) -> tuple[System | None, tuple[Diagnostic, ...]]:
     """As from_text, but never raises for a wrong netlist: (system or None, everything found)."""
-    sources, found = load_text(text, name)
+    sources, found = load_text(text, name=name)
     return _read(sources, found, given)
 
 
 def _read(sources: Sources, found: Sequence[Diagnostic], given: Mapping[str, Value] | None) -> tuple[System | None, tuple[Diagnostic, ...]]:
     overrides = {name: value_text(value) for name, value in (given or {}).items()}
-    if any(d.is_error for d in found):
-        return None, tuple(found)
     prepared, more = _prepare(sources, overrides, None)
     found = _joined(found, more)
     if prepared is None:
@@ -177,10 +175,18 @@ class System:
     ('V', True)
     """
 
-    __slots__ = ("_diagnostics", "_lock", "_overrides", "_prepared", "_sources")
+    __slots__ = ("_diagnostics", "_inputs", "_lock", "_overrides", "_prepared", "_sources")
 
-    def __init__(self, sources: Sources, overrides: Mapping[str, str], prepared: _Prepared, diagnostics: tuple[Diagnostic, ...]) -> None:
+    def __init__(
+        self,
+        sources: Sources,
+        overrides: Mapping[str, str],
+        prepared: _Prepared,
+        diagnostics: tuple[Diagnostic, ...],
+        inputs: Mapping[str, float] | None = None,
+    ) -> None:
         self._sources = sources
+        self._inputs = dict(inputs or {})
         self._overrides = dict(overrides)
         self._diagnostics = diagnostics
         self._prepared: dict[str, _Prepared] = {"": prepared}
@@ -243,17 +249,33 @@ class System:
         9.0
         """
         overrides = {**self._overrides, **{name: value_text(value) for name, value in values.items()}}
-        return _checked(*_read(self._sources, (), overrides))
+        other = _checked(*_read(self._sources, (), overrides))
+        other._inputs = {name: value for name, value in self._inputs.items() if name in other.circuit.inputs}
+        return other
 
     def with_input(self, values: Mapping[str, Value]) -> System:
         """The same netlist with top-level inputs held at other values.
 
         Args:
-            values: name of an input → value, as for with_given.
+            values: name of a top-level input → value: a text with its unit, or a number in SI.
         Raises:
-            NetlistError: no such input, or a value that doesn't fit it.
+            UnknownName: no such input.
+            NetlistError: a value that doesn't fit it.
+
+        >>> lamp = from_text('''
+        ... title "Lamp"
+        ... reference gnd
+        ... input level = 12 V
+        ... supply: top --[level]-- gnd
+        ... lamp:   top --[6 ohm]-- gnd
+        ... ''')
+        >>> round(lamp.with_input({"level": "24 V"}).settled()["lamp.i"], 6)
+        4.0
         """
-        return self.with_given(values)
+        inputs = {**self._inputs, **{name: _input_value(self.circuit, name, value) for name, value in values.items()}}
+        other = System(self._sources, self._overrides, self._prepared[""], self._diagnostics, inputs)
+        other._prepared, other._lock = self._prepared, self._lock  # the circuit is shared, and so is what guards its graph
+        return other
 
     def settled(self) -> Settled:
         """Find the operating point.
@@ -264,7 +286,7 @@ class System:
         prepared = self._prepared[""]
         with self._lock:
             system = _assemble(prepared.circuit, prepared.network, None, (), "exact")
-            point = find_point(system)
+            point = find_point(system, self._inputs)
         return self._settled(prepared, system, point)
 
     def run(
@@ -339,7 +361,7 @@ class System:
         Raises:
             NoOperatingPoint, StartFailure: there was nothing to begin from.
         """
-        return self._carry_out(plan, sink, tolerance, progress, at, should_stop, ())[0]
+        return self._carry_out(plan, sink, tolerance, progress, at, should_stop)[0]
 
     def _carry_out(
         self,
@@ -349,7 +371,6 @@ class System:
         progress: Callable[[Progress], None] | None,
         at: Sequence[float],
         should_stop: Callable[[], bool] | None,
-        ancestors: tuple[str, ...],
         stop_s: float | None = None,
     ) -> tuple[RunFacts, Snapshot | None]:
         from polewise.solve import initial, sampling, transient
@@ -358,19 +379,19 @@ class System:
         began = time.perf_counter()
         definition = plan.study
         end_s = _length_s(definition) if stop_s is None else stop_s
-        before = self._snapshot(definition, tolerance, should_stop, ancestors) if definition.start == "from" else None
+        before = self._snapshot(definition, tolerance, should_stop) if definition.start == "from" else None
         strategy: str | None = None
         with self._lock:
             system = _assemble(plan.circuit, plan.network, definition.name, plan.record.outputs, plan.sampling or "exact")
             sampling.require_choice(system, end_s, plan.sampling, study=definition.name, span=definition.span)
             problem = build_problem(_hitting(system, at, end_s))
             if before is not None:
-                start = initial.start_from(problem, before)
+                start = initial.start_from(problem, before, start_latches=self._inputs)
             elif definition.start == "settled":
-                point = find_point(problem.system)
+                point = find_point(problem.system, self._inputs)
                 strategy, start = point.strategy, initial.settled_at(problem, point)
             else:
-                start = initial.start_cold(problem)
+                start = initial.start_cold(problem, start_latches=self._inputs)
         trouble: SolverError | None = None
         try:
             summary: RunSummary = transient.run(
@@ -402,16 +423,10 @@ class System:
         )
         return facts, summary.snapshot
 
-    def _snapshot(
-        self, definition: StudyDef, tolerance: float | None, should_stop: Callable[[], bool] | None, ancestors: tuple[str, ...]
-    ) -> Snapshot:
-        """Where the study that another one starts from stands at its time."""
+    def _snapshot(self, definition: StudyDef, tolerance: float | None, should_stop: Callable[[], bool] | None) -> Snapshot:
+        """Where the study that another one starts from stands at its time. Reading has made sure that no study starts from itself."""
         other = definition.start_study or ""
-        line = (*ancestors, definition.name)
-        if other in line:
-            chain = " from ".join(f"`{name}`" for name in (*line, other))
-            raise NetlistError([Diagnostic("study-cycle", Severity.ERROR, f"these studies start from one another: {chain}", definition.span)])
-        facts, snapshot = self._carry_out(self.plan(other, keep=()), _Nothing(), tolerance, None, (), should_stop, line, definition.start_time_s)
+        facts, snapshot = self._carry_out(self.plan(other, keep=()), _Nothing(), tolerance, None, (), should_stop, definition.start_time_s)
         if facts.trouble is not None:
             raise facts.trouble
         if snapshot is None or not facts.complete:
@@ -527,11 +542,30 @@ def _hitting(system: EquationSystem, times: Sequence[float], end_s: float) -> Eq
     return replace(system, timed=(*system.timed, *(Timed(t, (), no_span(_ASKED)) for t in wanted)))
 
 
-def find_point(system: EquationSystem) -> OperatingPoint:
+def find_point(system: EquationSystem, inputs: Mapping[str, float]) -> OperatingPoint:
     """The operating point of equations."""
     from polewise.solve.operating_point import find_operating_point
 
-    return find_operating_point(system)
+    return find_operating_point(system, start_latches=inputs)
+
+
+def _input_value(circuit: Circuit, name: str, value: Value) -> float:
+    """An input's value in SI."""
+    if name not in circuit.inputs:
+        raise UnknownName(name, f"there is no top-level input `{name}`", nearest_names(name, circuit.inputs))
+    latch = circuit.latches[name]
+    if isinstance(value, bool) or value in ("true", "false"):
+        if latch.is_condition:
+            return float(value in (True, "true"))
+    elif not isinstance(value, str):
+        return float(value)
+    elif not latch.is_condition:
+        got = read_value(value)
+        if got is not None and got[1] == latch.dimension:
+            return got[0]
+    wanted = "true or false" if latch.is_condition else f"a value in {unit_text(latch.dimension)}"
+    headline = f"the input `{name}` asks for {wanted}, not `{value}`"
+    raise NetlistError([Diagnostic("input-value", Severity.ERROR, headline, no_span("input"), (Label(latch.span, "the input stands here"),))])
 
 
 def event_text(circuit: Circuit, text: str, changes: Sequence[tuple[str, float]]) -> str:

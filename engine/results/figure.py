@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, Final
 
@@ -12,8 +11,9 @@ from polewise.grammar import units
 from polewise.grammar.units import Dimension, format_value, parse_unit
 from polewise.results.curve import Curve
 from polewise.results.failures import MissingExtra
-from polewise.results.recording import Column, Recording, recorded_curve
-from polewise.results.traces import band, families, polyline
+from polewise.results.panels import Panel, draws_limits, panels_of
+from polewise.results.recording import Recording, recorded_curve
+from polewise.results.traces import polyline
 from polewise.results.verdict import RequirementVerdict, Verdict
 
 if TYPE_CHECKING:
@@ -26,10 +26,6 @@ _FAINT: Final = "#c9ced2"
 _PAPER: Final = "#fdfdfb"
 _HOLDS: Final = "#4d7a57"
 _FAILS: Final = "#b3261e"
-_SEPARATE_MAX: Final = 6  # members of a family drawn as traces of their own; more become a band
-_TRACES_MAX: Final = 12  # traces and bands of one panel
-_LANES_MAX: Final = 16  # conditions in one panel
-_PANELS_MAX: Final = 10
 _TAGS_MAX: Final = 9  # numbered marks of events
 _WIDTH_IN: Final = 10.0
 _PANEL_IN: Final = 2.1
@@ -101,8 +97,8 @@ def study_figure(recording: Recording, verdict: Verdict, facts: FigureFacts) -> 
     require_matplotlib()
     from matplotlib.figure import Figure
 
-    panels = _panels(recording)
-    heights = [_PANEL_IN if not panel.lanes else 0.55 + 0.17 * len(panel.columns) for panel in panels] or [_PANEL_IN]
+    panels = panels_of(recording, verdict, facts.reached_s)
+    heights = [_PANEL_IN if not panel.lanes else 0.55 + 0.17 * len(panel.lanes) for panel in panels] or [_PANEL_IN]
     tags = _tags(facts)
     key_lines = len(tags)
     head_in, foot_in = 0.85, 0.55 + 0.19 * key_lines
@@ -140,30 +136,7 @@ def study_figure(recording: Recording, verdict: Verdict, facts: FigureFacts) -> 
     return figure
 
 
-# ---------------------------------------------------------------- what goes where
-
-
-@dataclass(frozen=True, slots=True)
-class _Panel:
-    """The columns of one unit, or conditions as lanes."""
-
-    dimension: Dimension
-    columns: tuple[Column, ...]
-    lanes: bool
-    left_out: int
-
-
-def _panels(recording: Recording) -> list[_Panel]:
-    by_dimension: dict[Dimension, list[Column]] = {}
-    conditions: list[Column] = []
-    for column in recording.columns:
-        if column.role != "kept":
-            continue
-        (conditions if column.is_condition else by_dimension.setdefault(column.dimension, [])).append(column)
-    panels = [_Panel(dimension, tuple(columns), False, 0) for dimension, columns in by_dimension.items()][:_PANELS_MAX]
-    if conditions:
-        panels.append(_Panel(units.NONE, tuple(conditions[:_LANES_MAX]), True, max(0, len(conditions) - _LANES_MAX)))
-    return panels
+# ---------------------------------------------------------------- scales
 
 
 def _bare(ax: Axes) -> None:
@@ -198,49 +171,24 @@ def _value_scale(dimension: Dimension, size: float) -> tuple[float, str]:
 # ---------------------------------------------------------------- traces
 
 
-def _draw_panel(ax: Axes, recording: Recording, verdict: Verdict, panel: _Panel, scale_s: float, facts: FigureFacts) -> None:
-    lines: list[tuple[str, str, Any, Any]] = []  # label, colour, times, values
-    bands: list[tuple[str, str, Any]] = []
-    dimension_of = {column.name: column for column in panel.columns}
+def _draw_panel(ax: Axes, recording: Recording, verdict: Verdict, panel: Panel, scale_s: float, facts: FigureFacts) -> None:
+    factor, symbol = _value_scale(panel.dimension, max((_size(t.values) for t in panel.traces), default=0.0))
     labelled: list[tuple[float, str, str]] = []
-    size, colour, left_out = 0.0, 0, 0
-    for name, members in families([c.name for c in panel.columns]).items():
-        if len(lines) + len(bands) >= _TRACES_MAX:
-            left_out += len(members)
-            continue
-        if len(members) > _SEPARATE_MAX:
-            whole = band((recorded_curve(recording, m) for m in members), 0.0, facts.reached_s)
-            bands.append((f"{name} ({len(members)})", _COLOURS[colour % len(_COLOURS)], whole))
-            size = max(size, _size(whole.low), _size(whole.high))
-            colour += 1
-            members = _members_to_show(verdict, members)
-        for member in members:
-            times, values = polyline(recorded_curve(recording, member))
-            lines.append((member, _COLOURS[colour % len(_COLOURS)], times, values))
-            size = max(size, _size(values))
-            colour += 1
-    factor, symbol = _value_scale(panel.dimension, size)
-    for label, shade, whole in bands:
-        ax.fill_between(whole.time / scale_s, whole.low / factor, whole.high / factor, color=shade, alpha=0.22, linewidth=0)
-        ax.plot(whole.time / scale_s, whole.middle / factor, color=shade, linewidth=1.1)
-        labelled.append((float(whole.middle[-1]) / factor, label, shade))
-    for label, shade, times, values in lines:
-        ax.plot(times / scale_s, values / factor, color=shade, linewidth=1.2, solid_joinstyle="round")
-        if values.size:
-            labelled.append((float(values[-1]) / factor, label, shade))
+    for number, trace in enumerate(panel.traces):
+        shade = _COLOURS[number % len(_COLOURS)]
+        if trace.band is not None:
+            ax.fill_between(trace.times / scale_s, trace.band.low / factor, trace.band.high / factor, color=shade, alpha=0.22, linewidth=0)
+        ax.plot(trace.times / scale_s, trace.values / factor, color=shade, linewidth=1.2, solid_joinstyle="round")
+        if trace.values.size:
+            labelled.append((float(trace.values[-1]) / factor, trace.label, shade))
+    drawn = frozenset[str]().union(*(trace.names for trace in panel.traces))
     for requirement in verdict.requirements:
-        if requirement.subject in dimension_of:
+        if requirement.subject in drawn:
             _draw_requirement(ax, recording, requirement, scale_s, factor, facts)
     _frame(ax)
-    _end_labels(ax, labelled, left_out)
+    _end_labels(ax, labelled, panel.left_out)
     word = _WORDS.get(panel.dimension)
     ax.set_ylabel(f"{word} ({symbol})" if word else f"({symbol})", color=_INK, fontsize=9)
-
-
-def _members_to_show(verdict: Verdict, members: Sequence[str]) -> list[str]:
-    """Of a family drawn as a band, the members that fail a requirement, at most three."""
-    failing = {r.subject for r in verdict.requirements if not r.passed}
-    return [m for m in members if m in failing][:3]
 
 
 def _size(values: Any) -> float:
@@ -293,16 +241,16 @@ def _shortened(label: str, most: int = 30) -> str:
     return label if len(label) <= most else label[: most // 2 - 1] + "…" + label[-most // 2 :]
 
 
-def _draw_lanes(ax: Axes, recording: Recording, panel: _Panel, scale_s: float) -> None:
+def _draw_lanes(ax: Axes, recording: Recording, panel: Panel, scale_s: float) -> None:
     """Conditions: a thick stretch while true."""
     time = recording.grid.time / scale_s
-    for row, column in enumerate(panel.columns):
+    for row, column in enumerate(panel.lanes):
         true = recording.values(column.name) > 0.5
         shade = _COLOURS[row % len(_COLOURS)]
         ax.axhline(-row, color=_FAINT, linewidth=0.6)
         ax.fill_between(time, -row - 0.3, -row + 0.3, where=list(true), color=shade, linewidth=0, step="post")
         ax.annotate(_shortened(column.name), (1.012, -row), xycoords=("axes fraction", "data"), fontsize=7.5, color=shade, va="center")
-    ax.set_ylim(-len(panel.columns) + 0.4, 0.6)
+    ax.set_ylim(-len(panel.lanes) + 0.4, 0.6)
     ax.set_yticks([])
     ax.grid(visible=False)
     ax.set_ylabel("true while\ncoloured", color=_INK, fontsize=8)
@@ -315,7 +263,7 @@ def _draw_requirement(ax: Axes, recording: Recording, requirement: RequirementVe
     shade = _HOLDS if requirement.passed else _FAILS
     begin_s = requirement.window_s[0]
     end_s = min(facts.reached_s, requirement.window_s[1] if requirement.window_s[1] is not None else facts.planned_s)
-    if requirement.measure in ("value", "peak", "lowest", "final", "mean", "rms") and end_s > begin_s:
+    if draws_limits(requirement) and end_s > begin_s:
         for limit, forbidden in ((requirement.low, "below"), (requirement.high, "above")):
             if limit is not None:
                 times, values = _limit_line(recording, limit, begin_s, end_s)

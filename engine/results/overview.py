@@ -45,7 +45,7 @@ class Overview:
 
     Args:
         title: as stated.
-        files: read, the first is the netlist itself.
+        files: read, the last is the netlist itself.
         counts: what → how many: "nodes", "boxes", "poles", "assemblies", "signals", "states", "latches", "studies", "requirements", "unknowns".
         islands: all of them.
         assemblies: instance path → assembly.

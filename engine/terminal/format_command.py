@@ -18,5 +18,5 @@ def run_format(file: Path) -> int:
     if any(d.is_error for d in found):
         tell(found)
         return EXIT_NETLIST_WRONG
-    click.echo(to_text(sources.netlists[0]), nl=False)
+    click.echo(to_text(sources.netlists[-1]), nl=False)
     return EXIT_HOLDS

@@ -19,7 +19,7 @@ def overview_lines(facts: Overview, style: Style) -> list[str]:
     """All lines."""
     files = facts.files
     more = f" and {len(files) - 1} more file{'s' if len(files) > 2 else ''}" if len(files) > 1 else ""
-    lines = [title_line(facts.title or "(no title)", style), f"  {files[0] if files else ''}{more}", ""]
+    lines = [title_line(facts.title or "(no title)", style), f"  {files[-1] if files else ''}{more}", ""]
     lines += _counts(facts) + _islands(facts, style) + _assemblies(facts, style) + _chokes(facts, style)
     if facts.dependent:
         lines += ["", title_line("States that follow from others (legal; reduced before solving)", style), f"  {listed(facts.dependent)}"]

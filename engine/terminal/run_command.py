@@ -97,7 +97,7 @@ def run_studies(file: Path, names: Sequence[str], options: RunOptions) -> int:
 def own_studies(system: System) -> tuple[str, ...]:
     """Studies of the file itself; those of files it uses run only when named."""
     circuit = system.circuit
-    main = circuit.files[0] if circuit.files else ""
+    main = circuit.files[-1] if circuit.files else ""
     return tuple(s.name for s in circuit.studies.values() if s.span.source.name == main)
 
 

@@ -19,7 +19,12 @@ from polewise.results.parquet_file import ParquetRecording, ParquetSink, dimensi
 from polewise.results.recording import Column, MemorySink, row_blocks
 from polewise.results.result import open_recorded
 
-COLUMNS = (Column("bus.v", units.VOLTAGE), Column("bus", units.NONE), Column("k.closed", units.NONE, True), Column("r.limit", units.CURRENT, role="judged"))
+COLUMNS = (
+    Column("bus.v", units.VOLTAGE),
+    Column("bus", units.NONE),
+    Column("k.closed", units.NONE, True),
+    Column("r.limit", units.CURRENT, role="judged"),
+)
 
 
 def _rows(first: int, count: int) -> np.ndarray:
@@ -117,7 +122,7 @@ def test_foreign_and_missing_files(tmp_path: Path) -> None:
 
 
 def test_dimensions_survive_as_text() -> None:
-    for dimension in (units.NONE, units.VOLTAGE, units.CAPACITANCE, units.VOLTAGE**units.Fraction(1, 2)):
+    for dimension in (units.NONE, units.VOLTAGE, units.CAPACITANCE, units.VOLTAGE ** units.Fraction(1, 2)):
         assert dimension_from_text(dimension_text(dimension)) == dimension
 
 

@@ -93,7 +93,9 @@ def test_anything_renders_and_no_control_character_gets_through(text: str, a: in
 
 
 def test_errors_come_first_and_all_are_counted() -> None:
-    many = [Diagnostic("w", Severity.WARNING, "warn", _at(TEXT, "src"))] + [Diagnostic("e", Severity.ERROR, f"e{k}", _at(TEXT, "bus")) for k in range(150)]
+    many = [Diagnostic("w", Severity.WARNING, "warn", _at(TEXT, "src"))] + [
+        Diagnostic("e", Severity.ERROR, f"e{k}", _at(TEXT, "bus")) for k in range(150)
+    ]
     shown = render_all(many, PLAIN)
     assert shown.index("e0") < shown.index(f"{151 - SHOWN_MAX} more are not shown")
     assert "warn" not in shown
@@ -141,9 +143,7 @@ def test_harmless() -> None:
 
 
 def test_json_form() -> None:
-    diagnostic = Diagnostic(
-        "c", Severity.ERROR, "h", _at(TEXT, "12 mohm"), (Label(_at(TEXT, "bus"), "l"),), "hint", Edit(_at(TEXT, "12"), "13")
-    )
+    diagnostic = Diagnostic("c", Severity.ERROR, "h", _at(TEXT, "12 mohm"), (Label(_at(TEXT, "bus"), "l"),), "hint", Edit(_at(TEXT, "12"), "13"))
     (content,) = diagnostics_content([diagnostic])
     assert content == {
         "code": "c",
@@ -154,4 +154,6 @@ def test_json_form() -> None:
         "hint": "hint",
         "edit": {"place": {"file": "pier.pole", "line": 2, "column": 11, "end_line": 2, "end_column": 13}, "replacement": "13"},
     }
-    assert diagnostics_content([Diagnostic("c", Severity.NOTE, "h", no_span())]) == [{"code": "c", "severity": "note", "headline": "h", "place": None}]
+    assert diagnostics_content([Diagnostic("c", Severity.NOTE, "h", no_span())]) == [
+        {"code": "c", "severity": "note", "headline": "h", "place": None}
+    ]
