@@ -1,17 +1,19 @@
-"""Everything that changes during one run, as plain arrays: the state, the stages, the factors, the history, the record buffer.
+"""Everything that one run needs and changes, as named arrays that are views of the kernels' few flat arenas (layout.py). Free of numba.
 
-Free of numba. One Workspace belongs to one run; kernels write into its arrays and never allocate. Numbers that change are entries of two
+One Workspace belongs to one run; kernels write into its arrays and never allocate. Numbers that change are entries of two
 arrays: `state` (floats, indices S_...) and `counter` (whole numbers, indices N_...). To continue after a "full" status, `grow` gives a
-workspace with larger buffers and everything else shared.
+workspace with larger buffers and the same contents.
 """
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any, Final, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from polewise.kernels import layout
 from polewise.kernels.opcodes import Status
 from polewise.kernels.program import FloatArray, IntArray, Program
 
@@ -37,7 +39,7 @@ S_CHATTER_T: Final = 17  # start of the present stretch
 S_HISTORY_T0: Final = 18  # in: time before which delayed expressions follow value0 + slope0 * (t - t0)
 S_H_FREE: Final = 19  # step the controller wanted before a stop, a tick or an event cut it
 S_NEWTON_ITERATIONS: Final = 20  # iterations of the last attempt
-S_DRIFT: Final = 21  # unused
+S_BAND: Final = 21  # factor on switch_scale: a mode is violated only beyond switch_scale * S_BAND
 S_COUNT: Final = 32
 
 # ---- indices of Workspace.counter (int64): counts first, then flags and positions
@@ -73,10 +75,9 @@ N_BREAKS: Final = 32  # number of pending breaking points
 N_STOP: Final = 33  # in: set to 1 from outside (another thread, a signal handler) to stop
 N_FLIPS: Final = 34  # flips in the present stretch
 N_CHATTER_LIMIT: Final = 35  # in
-N_FACTORS_JUMPED: Final = 36  # unused
+N_REG_AT_START: Final = 36  # 1 while work.reg holds RESIDUAL at the step's start
 N_RESTART_FACTORS: Final = 37  # 1 while the factors of `restart` may be used again
 N_FULL_FACTORS: Final = 38  # which factors were full: 0 real, 1 complex, 2 restart
-N_EXPERIMENT: Final = 39  # unused
 N_COUNT: Final = 48
 
 # ---- values of the flag column of the record
@@ -85,93 +86,53 @@ FLAG_STEP: Final = 1.0  # end of a step
 FLAG_BEFORE: Final = 2.0  # just before a jump
 FLAG_AFTER: Final = 3.0  # just after a jump
 
+BAND_RELATIVE: Final = 1e-12  # what Program.switch_scale is of a watched value's size; S_BAND widens it to the error Newton leaves
 HISTORY_CAPACITY: Final = 1024
 BREAK_CAPACITY: Final = 2048
 
 
-class Factors(NamedTuple):
-    """Sparse factors of one matrix A (rows scaled), columns in a fixed order: A[row, order] = L U with unit L. Format: see lu.py.
-
-    order (n,): column that is eliminated k-th. place (n,): position of row i among the pivots, -1 while unknown.
-    l_ptr, u_ptr (n+1,); l_row, u_row: positions; l_val, u_val: values; strictly below and above the diagonal. pivot_inverse (n,).
-    dense (n,): zero between calls. mark, stack, pause (n,): work of the pivot search. info (4,): [pattern known, column without pivot, 0, 0].
-    """
-
-    order: IntArray
-    place: IntArray
-    l_ptr: IntArray
-    l_row: IntArray
-    l_val: NDArray[Any]
-    u_ptr: IntArray
-    u_row: IntArray
-    u_val: NDArray[Any]
-    pivot_inverse: NDArray[Any]
-    dense: NDArray[Any]
-    mark: IntArray
-    stack: IntArray
-    pause: IntArray
-    info: IntArray
-
-
 class Workspace(NamedTuple):
-    """State and scratch of one run. Entries marked "in" may be set from Python between calls of kernels.
+    """State and scratch of one run. "in": may be set from Python between calls of kernels; the others are for reading.
 
+    program: what it was made for. F, W, C, K: the arenas (layout.py) that all the other arrays are views of.
     state (S_COUNT,), counter (N_COUNT,): see the index names above.
-    code (n_ops, 5) int32: the tape packed by operation. reg (n_reg,): registers of a single evaluation; reg3 (3 n_reg,): of the three stages,
-        register r of stage s at 3 r + s.
     x (n,), p (n_p,), mode (n_s,): in. q_keep (n,): in, charges that `restart` keeps; the kernels set it to q(x) after every step.
+    reg (n_reg,): registers of a single evaluation. reg3 (n_reg, 3): of the three stages.
+    in_error (n,): in, 0 takes an unknown out of the error test.
     flipped (n_s,): how often each switch flipped since the start of the last `advance`.
     f_start, q_start (n,): f and q at the start of the step. stage (n, 3): X_i - x of the last attempt. x_old (n,), stage_old (n, 3): start and stages
-        of the last accepted step. weight (n,): 1 / (tol (|x| + scale)). in_error (n,): in, 0 takes an unknown out of the error test.
-    jac_f, jac_q (nnz,), row_scale (n,), matrix_real, matrix_complex (nnz,), the factors and right sides.
-    restart_*: the same for consistent restarts. x_try, dx, dx_try (n,): scratch.
-    switch_now, switch_start (n_s,): violation of each switch (see switches.py) at some point and at the step's start. candidate (n_s,): scratch.
-    clock_count (n_clocks,): in, number of the next firing of each clock; clock_offset (n_clocks,): in, instant of firing 0;
-        clock_value: new values between reading and writing.
-    delay_value0, delay_slope0 (n_delay,): in, history before S_HISTORY_T0. history_t, history_h (capacity,), history_v (capacity, n_delay, 4): accepted steps
-        as a ring; values at 0, c1, c2, 1. history_start (n_delay,): delayed expressions at the start of the step.
-    break_t, break_level (BREAK_CAPACITY,): pending breaking points, sorted by time.
-    record (rows, 2 + n_out): time, flag, outputs.
+        of the last accepted step. jac_f, jac_q (nnz,): Jacobians. dx (n,): last error estimate.
+    clock_count (n_clocks,): in, number of the next firing of each clock; clock_offset (n_clocks,): in, instant of firing 0.
+    delay_value0, delay_slope0 (n_delay,): in, history before S_HISTORY_T0. history_t, history_h (capacity,), history_v (capacity, n_delay, 4):
+        accepted steps as a ring; values at 0, c1, c2, 1. history_start (n_delay,): delayed expressions at the start of the next step.
+    break_t (BREAK_CAPACITY,): pending breaking points, sorted. record (rows, 2 + n_out): time, flag, outputs.
     """
 
+    program: Program
+    F: FloatArray
+    W: IntArray
+    C: NDArray[np.complex128]
+    K: NDArray[np.int32]
     state: FloatArray
     counter: IntArray
-    code: NDArray[np.int32]
-    reg: FloatArray
-    reg3: FloatArray
     x: FloatArray
     p: FloatArray
     mode: IntArray
     q_keep: FloatArray
+    reg: FloatArray
+    reg3: FloatArray
+    in_error: FloatArray
     flipped: IntArray
     f_start: FloatArray
     q_start: FloatArray
     stage: FloatArray
     x_old: FloatArray
     stage_old: FloatArray
-    weight: FloatArray
-    in_error: FloatArray
     jac_f: FloatArray
     jac_q: FloatArray
-    row_scale: FloatArray
-    matrix_real: FloatArray
-    matrix_complex: NDArray[np.complex128]
-    real: Factors
-    complex: Factors
-    rhs_real: FloatArray
-    rhs_complex: NDArray[np.complex128]
-    restart_matrix: FloatArray
-    restart_scale: FloatArray
-    restart_factors: Factors
-    x_try: FloatArray
     dx: FloatArray
-    dx_try: FloatArray
-    switch_now: FloatArray
-    switch_start: FloatArray
-    candidate: IntArray
     clock_count: IntArray
     clock_offset: FloatArray
-    clock_value: FloatArray
     delay_value0: FloatArray
     delay_slope0: FloatArray
     history_t: FloatArray
@@ -179,28 +140,15 @@ class Workspace(NamedTuple):
     history_v: FloatArray
     history_start: FloatArray
     break_t: FloatArray
-    break_level: IntArray
     record: FloatArray
 
 
+_VIEWS: Final = tuple(name for name in Workspace._fields if name not in ("program", "F", "W", "C", "K", "state", "counter"))
+
+
 def kernel_program(program: Program) -> Program:
-    """The same program with every array contiguous, writable and of the kernels' types, so that one compiled build serves all."""
-    fixed: list[Any] = []
-    for name, value in zip(Program._fields, program):
-        if isinstance(value, np.ndarray):
-            dtype = np.int64 if np.issubdtype(value.dtype, np.integer) or value.dtype == bool else np.float64
-            if name in _FLOAT_FIELDS:
-                dtype = np.float64
-            array = np.ascontiguousarray(value, dtype=dtype)
-            if name == "table_coef":
-                array = array.reshape(-1, 4)
-            fixed.append(array if array.flags.writeable else array.copy())
-        else:
-            fixed.append(int(value))
-    return Program(*fixed)
-
-
-_FLOAT_FIELDS: Final = frozenset({"constants", "switch_scale", "table_knots", "table_coef", "delay_s", "clock_period", "scale"})
+    """The program as the kernels take it. They run a copy kept in the workspace, so this is the program itself."""
+    return program
 
 
 def error_tolerance(rtol: float) -> float:
@@ -216,6 +164,14 @@ def newton_tolerance(tolerance: float) -> float:
     return float(max(10 * 2.2e-16 / tolerance, min(0.03, tolerance**0.5)))
 
 
+class _Sizes(NamedTuple):
+    """Capacities of the parts that can grow."""
+
+    record: int
+    history: int
+    factors: int
+
+
 def make_workspace(
     program: Program,
     rtol: float = 1e-6,
@@ -225,72 +181,21 @@ def make_workspace(
     record_rows: int = 4096,
     history: int = HISTORY_CAPACITY,
 ) -> Workspace:
-    """A fresh workspace: x, p, modes zero, t = 0, nothing recorded. Use `kernel_program(program)` for both this and the kernels.
+    """A fresh workspace: x, p, modes zero, t = 0, nothing recorded.
 
     Args:
         rtol: relative tolerance; each unknown's absolute one is rtol * scale.
         order: shape (n,), order of elimination of the columns (solve.ordering); None: as they stand.
         fill: entries to make room for in L and U together; None: generous guess.
     """
-    n, nnz, n_s = program.n, len(program.row_idx), len(program.switch_reg)
-    n_delay, n_out, n_clocks = len(program.delay_p), len(program.out_reg), len(program.clock_period)
-    f8, i8 = np.float64, np.int64
-    column_order = np.arange(n, dtype=i8) if order is None else np.ascontiguousarray(order, dtype=i8).copy()
+    n, nnz = program.n, len(program.row_idx)
     room = n * (n - 1) // 2 if n <= 64 else max(4 * nnz + 4 * n, 2 * (fill or 0))
-    code = np.empty((len(program.op), 5), dtype=np.int32)
-    for column, source in enumerate((program.op, program.dst, program.a, program.b, program.c)):
-        code[:, column] = source
-    reg = np.zeros(program.n_reg, dtype=f8)
-    reg[: program.n_const] = program.constants
-    work = Workspace(
-        state=np.zeros(S_COUNT, dtype=f8),
-        counter=np.zeros(N_COUNT, dtype=i8),
-        code=code,
-        reg=reg,
-        reg3=np.repeat(reg, 3),
-        x=np.zeros(n, dtype=f8),
-        p=np.zeros(program.n_p, dtype=f8),
-        mode=np.zeros(n_s, dtype=i8),
-        q_keep=np.zeros(n, dtype=f8),
-        flipped=np.zeros(n_s, dtype=i8),
-        f_start=np.zeros(n, dtype=f8),
-        q_start=np.zeros(n, dtype=f8),
-        stage=np.zeros((n, 3), dtype=f8),
-        x_old=np.zeros(n, dtype=f8),
-        stage_old=np.zeros((n, 3), dtype=f8),
-        weight=np.ones(n, dtype=f8),
-        in_error=np.ones(n, dtype=f8),
-        jac_f=np.zeros(nnz, dtype=f8),
-        jac_q=np.zeros(nnz, dtype=f8),
-        row_scale=np.ones(n, dtype=f8),
-        matrix_real=np.zeros(nnz, dtype=f8),
-        matrix_complex=np.zeros(nnz, dtype=np.complex128),
-        real=_make_factors(column_order, room, f8),
-        complex=_make_factors(column_order, room, np.complex128),
-        rhs_real=np.zeros(n, dtype=f8),
-        rhs_complex=np.zeros(n, dtype=np.complex128),
-        restart_matrix=np.zeros(nnz, dtype=f8),
-        restart_scale=np.ones(n, dtype=f8),
-        restart_factors=_make_factors(column_order, room, f8),
-        x_try=np.zeros(n, dtype=f8),
-        dx=np.zeros(n, dtype=f8),
-        dx_try=np.zeros(n, dtype=f8),
-        switch_now=np.zeros(n_s, dtype=f8),
-        switch_start=np.zeros(n_s, dtype=f8),
-        candidate=np.zeros(n_s, dtype=i8),
-        clock_count=np.zeros(n_clocks, dtype=i8),
-        clock_offset=np.zeros(n_clocks, dtype=f8),
-        clock_value=np.zeros(len(program.clock_p), dtype=f8),
-        delay_value0=np.zeros(n_delay, dtype=f8),
-        delay_slope0=np.zeros(n_delay, dtype=f8),
-        history_t=np.zeros(history, dtype=f8),
-        history_h=np.zeros(history, dtype=f8),
-        history_v=np.zeros((history if n_delay else 0, n_delay, 4), dtype=f8),
-        history_start=np.zeros(n_delay, dtype=f8),
-        break_t=np.zeros(BREAK_CAPACITY, dtype=f8),
-        break_level=np.zeros(BREAK_CAPACITY, dtype=i8),
-        record=np.zeros((max(record_rows, 16), 2 + n_out), dtype=f8),
-    )
+    sizes = _Sizes(record=max(record_rows, 16), history=history if len(program.delay_p) else 1, factors=max(room, 1))
+    column_order = np.arange(n, dtype=np.int64) if order is None else np.asarray(order, dtype=np.int64)
+    work = _allocate(program, sizes, column_order)
+    work.reg[: program.n_const] = program.constants
+    work.reg3[: program.n_const] = program.constants[:, None]
+    work.in_error[:] = 1.0
     set_tolerance(work, rtol)
     work.state[S_H_MAX] = np.inf
     work.state[S_CHATTER_WINDOW] = 1e-6
@@ -311,50 +216,209 @@ def set_tolerance(work: Workspace, rtol: float) -> None:
     work.state[S_RTOL] = rtol
     work.state[S_TOL] = tolerance
     work.state[S_NEWTON_TOL] = newton_tolerance(tolerance)
+    work.state[S_BAND] = max(1.0, tolerance * work.state[S_NEWTON_TOL] / BAND_RELATIVE)
 
 
 def grow(work: Workspace, status: int) -> Workspace:
-    """The workspace with twice the room that a status asked for; all other arrays are shared with the old one, which must not be used again."""
+    """A workspace with twice the room that a status asked for and the same contents; the old one must not be used again."""
+    head = work.W
+    sizes = _Sizes(int(head[layout.SIZE_RECORD]), int(head[layout.SIZE_HISTORY]), int(head[layout.SIZE_FACTORS]))
     if status == Status.HISTORY_FULL:
-        first, count = int(work.counter[N_HISTORY_FIRST]), int(work.counter[N_HISTORY_COUNT])
-        old = len(work.history_t)
-        take = (first + np.arange(count)) % old
-        t, h = np.zeros(2 * old), np.zeros(2 * old)
-        v = np.zeros((2 * old, work.history_v.shape[1], 4))
-        t[:count], h[:count], v[:count] = work.history_t[take], work.history_h[take], work.history_v[take]
-        work.counter[N_HISTORY_FIRST] = 0
-        return work._replace(history_t=t, history_h=h, history_v=v)
-    if status == Status.FACTORS_FULL:
-        return work._replace(real=_larger(work.real), complex=_larger(work.complex), restart_factors=_larger(work.restart_factors))
-    if status == Status.BUFFER_FULL:
-        record = np.zeros((2 * len(work.record), work.record.shape[1]))
-        record[: len(work.record)] = work.record
-        return work._replace(record=record)
-    return work
+        sizes = sizes._replace(history=2 * sizes.history)
+    elif status == Status.FACTORS_FULL:
+        sizes = sizes._replace(factors=2 * sizes.factors)
+    elif status == Status.BUFFER_FULL:
+        sizes = sizes._replace(record=2 * sizes.record)
+    at = int(head[layout.REAL + layout.LU_ORDER])
+    new = _allocate(work.program, sizes, head[at : at + work.program.n].copy())
+    new.state[:], new.counter[:] = work.state, work.counter
+    for name in _VIEWS:
+        if not name.startswith("history_") or name == "history_start":
+            old = getattr(work, name)
+            getattr(new, name)[: len(old)] = old
+    first, count = int(work.counter[N_HISTORY_FIRST]), int(work.counter[N_HISTORY_COUNT])
+    take = (first + np.arange(count)) % len(work.history_t)
+    for name in ("history_t", "history_h", "history_v"):
+        getattr(new, name)[:count] = getattr(work, name)[take]
+    new.counter[N_HISTORY_FIRST] = 0
+    at_level = (head[layout.AT_BREAK_LEVEL], new.W[layout.AT_BREAK_LEVEL])
+    new.W[at_level[1] : at_level[1] + BREAK_CAPACITY] = work.W[at_level[0] : at_level[0] + BREAK_CAPACITY]
+    new.counter[N_FACTORS_READY] = 0
+    new.counter[N_RESTART_FACTORS] = 0
+    new.counter[N_JACOBIAN_AGE] = 0
+    return new
 
 
-def _make_factors(order: IntArray, room: int, dtype: Any) -> Factors:
-    n = len(order)
-    i8 = np.int64
-    room = max(room, 1)
-    return Factors(
-        order=order.copy(),
-        place=np.full(n, -1, dtype=i8),
-        l_ptr=np.zeros(n + 1, dtype=i8),
-        l_row=np.zeros(room, dtype=i8),
-        l_val=np.zeros(room, dtype=dtype),
-        u_ptr=np.zeros(n + 1, dtype=i8),
-        u_row=np.zeros(room, dtype=i8),
-        u_val=np.zeros(room, dtype=dtype),
-        pivot_inverse=np.zeros(n, dtype=dtype),
-        dense=np.zeros(n, dtype=dtype),
-        mark=np.zeros(n, dtype=i8),
-        stack=np.zeros(2 * n, dtype=i8),
-        pause=np.zeros(n, dtype=i8),
-        info=np.zeros(4, dtype=i8),
+def _allocate(program: Program, sizes: _Sizes, order: IntArray) -> Workspace:
+    """Lay out the arenas, copy the program in, make the views."""
+    n, nnz, n_s = program.n, len(program.row_idx), len(program.switch_reg)
+    n_delay, n_out, n_clock, n_reg = len(program.delay_p), len(program.out_reg), len(program.clock_period), program.n_reg
+    whole: dict[int, Any] = {  # blocks of W: contents, or a length to be zero
+        layout.AT_SEGMENT_END: program.segment_end,
+        layout.AT_F_REG: program.f_reg,
+        layout.AT_Q_REG: program.q_reg,
+        layout.AT_COL_PTR: program.col_ptr,
+        layout.AT_ROW_IDX: program.row_idx,
+        layout.AT_JF_REG: program.jf_reg,
+        layout.AT_JQ_REG: program.jq_reg,
+        layout.AT_SWITCH_KIND: program.switch_kind,
+        layout.AT_SWITCH_REG: program.switch_reg,
+        layout.AT_SWITCH_TABLE: program.switch_table,
+        layout.AT_SWITCH_WATCHED: program.switch_watched,
+        layout.AT_TABLE_PTR: program.table_ptr,
+        layout.AT_TABLE_CLOSED: program.table_closed,
+        layout.AT_OUT_REG: program.out_reg,
+        layout.AT_DELAY_IN_REG: program.delay_in_reg,
+        layout.AT_DELAY_P: program.delay_p,
+        layout.AT_CLOCK_PTR: program.clock_ptr,
+        layout.AT_CLOCK_P: program.clock_p,
+        layout.AT_CLOCK_REG: program.clock_reg,
+        layout.AT_CLOCK_RANK: program.clock_rank,
+        layout.AT_MODE: n_s,
+        layout.AT_FLIPPED: n_s,
+        layout.AT_CANDIDATE: n_s,
+        layout.AT_CLOCK_COUNT: n_clock,
+        layout.AT_BREAK_LEVEL: BREAK_CAPACITY,
+    }
+    real: dict[int, Any] = {  # blocks of F
+        layout.AT_SWITCH_SCALE: program.switch_scale,
+        layout.AT_TABLE_KNOTS: program.table_knots,
+        layout.AT_TABLE_COEF: program.table_coef,
+        layout.AT_DELAY_S: program.delay_s,
+        layout.AT_CLOCK_PERIOD: program.clock_period,
+        layout.AT_SCALE: program.scale,
+        layout.AT_REG: n_reg,
+        layout.AT_REG3: 3 * n_reg,
+        layout.AT_P: program.n_p,
+        layout.AT_SWITCH_NOW: n_s,
+        layout.AT_CLOCK_OFFSET: n_clock,
+        layout.AT_CLOCK_VALUE: len(program.clock_p),
+        layout.AT_DELAY_VALUE0: n_delay,
+        layout.AT_DELAY_SLOPE0: n_delay,
+        layout.AT_HISTORY_T: sizes.history,
+        layout.AT_HISTORY_H: sizes.history,
+        layout.AT_HISTORY_V: sizes.history * n_delay * 4,
+        layout.AT_HISTORY_START: n_delay,
+        layout.AT_BREAK_T: BREAK_CAPACITY,
+        layout.AT_RECORD: sizes.record * (2 + n_out),
+    }
+    for at in (layout.AT_JAC_F, layout.AT_JAC_Q, layout.AT_MATRIX, layout.AT_RESTART_MATRIX):
+        real[at] = nnz
+    for at in (layout.AT_STAGE, layout.AT_STAGE_OLD):
+        real[at] = 3 * n
+    for at in _FLOAT_VECTORS:
+        real[at] = n
+    twin: dict[int, Any] = {layout.AT_MATRIX_COMPLEX: nnz, layout.AT_RHS_COMPLEX: n}  # blocks of C
+    for base, values in ((layout.REAL, real), (layout.COMPLEX, twin), (layout.RESTART, real)):
+        whole[base + layout.LU_ORDER] = order
+        for part in (layout.LU_PLACE, layout.LU_MARK, layout.LU_PAUSE):
+            whole[base + part] = n
+        whole[base + layout.LU_STACK] = 2 * n
+        for part in (layout.LU_L_PTR, layout.LU_U_PTR):
+            whole[base + part] = n + 1
+        for part in (layout.LU_L_ROW, layout.LU_U_ROW):
+            whole[base + part] = sizes.factors
+        for part in (layout.LU_L_VAL, layout.LU_U_VAL):
+            values[base + part] = sizes.factors
+        for part in (layout.LU_PIVOT_INVERSE, layout.LU_DENSE):
+            values[base + part] = n
+
+    offsets: dict[int, int] = {}
+    arena_f = _fill(real, S_COUNT, offsets, np.float64)
+    arena_c = _fill(twin, 0, offsets, np.complex128)
+    arena_w = _fill(whole, layout.BLOCKS, offsets, np.int64)
+    for index, offset in offsets.items():
+        arena_w[index] = offset
+    for index, size in (
+        (layout.SIZE_N, n),
+        (layout.SIZE_NNZ, nnz),
+        (layout.SIZE_P, program.n_p),
+        (layout.SIZE_REG, n_reg),
+        (layout.SIZE_S, n_s),
+        (layout.SIZE_OUT, n_out),
+        (layout.SIZE_DELAY, n_delay),
+        (layout.SIZE_CLOCK, n_clock),
+        (layout.TIME_REG, program.time_reg),
+        (layout.X_REG, program.x_reg),
+        (layout.P_REG, program.p_reg),
+        (layout.SIZE_HISTORY, sizes.history),
+        (layout.SIZE_RECORD, sizes.record),
+        (layout.SIZE_FACTORS, sizes.factors),
+        (layout.SIZE_BREAK, BREAK_CAPACITY),
+    ):
+        arena_w[index] = size
+    tape = np.stack([program.op, program.dst, program.a, program.b, program.c], axis=1).astype(np.int32).reshape(-1)
+
+    def f(at: int, *shape: int) -> FloatArray:
+        size = int(np.prod(shape))
+        return arena_f[offsets[at] : offsets[at] + size].reshape(shape)
+
+    def i(at: int, size: int) -> IntArray:
+        return arena_w[offsets[at] : offsets[at] + size]
+
+    return Workspace(
+        program=program,
+        F=arena_f,
+        W=arena_w,
+        C=arena_c,
+        K=tape,
+        state=arena_f[:S_COUNT],
+        counter=arena_w[:N_COUNT],
+        x=f(layout.AT_X, n),
+        p=f(layout.AT_P, program.n_p),
+        mode=i(layout.AT_MODE, n_s),
+        q_keep=f(layout.AT_Q_KEEP, n),
+        reg=f(layout.AT_REG, n_reg),
+        reg3=f(layout.AT_REG3, n_reg, 3),
+        in_error=f(layout.AT_IN_ERROR, n),
+        flipped=i(layout.AT_FLIPPED, n_s),
+        f_start=f(layout.AT_F_START, n),
+        q_start=f(layout.AT_Q_START, n),
+        stage=f(layout.AT_STAGE, n, 3),
+        x_old=f(layout.AT_X_OLD, n),
+        stage_old=f(layout.AT_STAGE_OLD, n, 3),
+        jac_f=f(layout.AT_JAC_F, nnz),
+        jac_q=f(layout.AT_JAC_Q, nnz),
+        dx=f(layout.AT_DX, n),
+        clock_count=i(layout.AT_CLOCK_COUNT, n_clock),
+        clock_offset=f(layout.AT_CLOCK_OFFSET, n_clock),
+        delay_value0=f(layout.AT_DELAY_VALUE0, n_delay),
+        delay_slope0=f(layout.AT_DELAY_SLOPE0, n_delay),
+        history_t=f(layout.AT_HISTORY_T, sizes.history),
+        history_h=f(layout.AT_HISTORY_H, sizes.history),
+        history_v=f(layout.AT_HISTORY_V, sizes.history, n_delay, 4),
+        history_start=f(layout.AT_HISTORY_START, n_delay),
+        break_t=f(layout.AT_BREAK_T, BREAK_CAPACITY),
+        record=f(layout.AT_RECORD, sizes.record, 2 + n_out),
     )
 
 
-def _larger(factors: Factors) -> Factors:
-    """Twice the room, the pattern forgotten."""
-    return _make_factors(factors.order, 2 * len(factors.l_row), factors.l_val.dtype)
+_FLOAT_VECTORS: Final = (
+    layout.AT_X,
+    layout.AT_Q_KEEP,
+    layout.AT_F_START,
+    layout.AT_Q_START,
+    layout.AT_X_OLD,
+    layout.AT_WEIGHT,
+    layout.AT_IN_ERROR,
+    layout.AT_ROW_SCALE,
+    layout.AT_RHS,
+    layout.AT_RESTART_SCALE,
+    layout.AT_X_TRY,
+    layout.AT_DX,
+    layout.AT_DX_TRY,
+)
+
+
+def _fill(blocks: Mapping[int, Any], first: int, offsets: dict[int, int], dtype: Any) -> NDArray[Any]:
+    """One arena with the blocks in it from `first` on; their places go to `offsets`."""
+    contents = {at: np.ravel(np.asarray(block)) if isinstance(block, np.ndarray) else block for at, block in blocks.items()}
+    place = first
+    for at, block in contents.items():
+        offsets[at] = place
+        place += block if isinstance(block, int) else len(block)
+    arena = np.zeros(place, dtype=dtype)
+    for at, block in contents.items():
+        if not isinstance(block, int):
+            arena[offsets[at] : offsets[at] + len(block)] = block
+    return arena
