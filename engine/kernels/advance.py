@@ -50,7 +50,7 @@ from polewise.kernels.record import record_point_c, record_step_c
 from polewise.kernels.restart import restart_c
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.step import attempt_step_c
-from polewise.kernels.tape import segment_c
+from polewise.kernels.tape import WHOLE, segment_three_c
 from polewise.kernels.workspace import (
     FLAG_AFTER,
     FLAG_BEFORE,
@@ -143,7 +143,7 @@ def _build(stamp: int):
         _ = stamp
         n, reg3 = W[SIZE_N], W[AT_REG3]
         if W[SIZE_DELAY] > 0:
-            segment_c(F, W, K, 3, 3)
+            segment_three_c(F, W, K, WHOLE(3))
             push_history_c(F, W, F[S_T], h)
             for d in range(W[SIZE_DELAY]):
                 j = W[W[AT_DELAY_P] + d]
@@ -206,7 +206,7 @@ def _build(stamp: int):
                 return status
             if searching > 0:
                 searching -= 1
-                change = movement_c(F, W, W[AT_STAGE] + 2, 3) if status == DONE else np.inf
+                change = movement_c(F, W, W[AT_STAGE] + 2, WHOLE(3)) if status == DONE else np.inf
                 if not (change <= FIRST_CHANGE):
                     h *= max(1e-3, 0.9 * FIRST_CHANGE / change)
                     continue
@@ -237,10 +237,10 @@ def _build(stamp: int):
                     h *= NEWTON_SHRINK
                     continue
                 F[S_H] = max(wish, free)
-                reg, lanes = W[AT_REG], 1
+                reg, lanes = W[AT_REG], WHOLE(1)
                 if found != LOCATED_AT_START:
                     accept_c(F, W, K, h_event, t + h_event, FLAG_BEFORE)
-                    reg, lanes = W[AT_REG3] + 2, 3
+                    reg, lanes = W[AT_REG3] + 2, WHOLE(3)
                 W[N_FIRST] = 1
                 return flip_at_event_c(F, W, reg, lanes)
             F[S_H_ACCEPTED] = h
@@ -277,7 +277,7 @@ def _build(stamp: int):
         for i in range(W[SIZE_N]):
             F[x_old + i] = F[x + i] - F[x_old + i]
         W[N_FIRST] = 1
-        if small and flips == 0 and movement_c(F, W, x_old, 1) <= SMALL_JUMP:
+        if small and flips == 0 and movement_c(F, W, x_old, WHOLE(1)) <= SMALL_JUMP:
             W[N_FIRST], W[N_MADE_JUMP] = first, jumped
             W[N_JACOBIAN_AGE] = min(W[N_JACOBIAN_AGE], 1)
         else:
@@ -293,7 +293,7 @@ def _build(stamp: int):
         _ = stamp
         W[N_TICKS] += 1
         changed = 0
-        rank = next_rank_c(F, W, -1)
+        rank = next_rank_c(F, W, WHOLE(-1))
         while rank >= 0:
             changed += fire_clocks_c(F, W, K, rank)
             rank = next_rank_c(F, W, rank)
@@ -309,8 +309,8 @@ def _build(stamp: int):
             W[N_START_READY] = 0
             W[N_JACOBIAN_AGE] = 0
             W[N_FIRST] = 1
-            push_breaks_c(F, W, F[S_T], 0)
-        jump_level = 0  # of the restart that N_NEEDS_RESTART asks for
+            push_breaks_c(F, W, F[S_T], WHOLE(0))
+        jump_level = WHOLE(0)  # of the restart that N_NEEDS_RESTART asks for
         steps = 0
         while True:
             if W[N_STOP] != 0:
@@ -319,7 +319,7 @@ def _build(stamp: int):
                 return BUFFER_FULL
             if W[N_NEEDS_RESTART] == 1:
                 status = restart_here_c(F, W, K, jump_level)
-                jump_level = 0
+                jump_level = WHOLE(0)
                 if status != DONE:
                     return status
             t = F[S_T]
@@ -330,7 +330,7 @@ def _build(stamp: int):
             if W[SIZE_DELAY] > 0:
                 if not history_room_c(F, W):
                     return HISTORY_FULL
-                if pop_breaks_c(F, W) > 0 and load_delayed_c(F, W, True) > DELAY_JUMP:
+                if pop_breaks_c(F, W) > 0 and load_delayed_c(F, W, WHOLE(1)) > DELAY_JUMP:
                     W[N_NEEDS_RESTART] = 1
                     jump_level = BREAK_LEVEL_TICK + 1
                     continue

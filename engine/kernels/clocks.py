@@ -22,7 +22,7 @@ from polewise.kernels.layout import (
 )
 from polewise.kernels.program import Program
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.tape import residual_at_c, segment_c
+from polewise.kernels.tape import WHOLE, residual_at_c, segment_c
 from polewise.kernels.workspace import N_REG_AT_START, N_START_READY, S_T, Workspace
 
 
@@ -62,10 +62,10 @@ def _build(stamp: int):
         clock_rank, clock_ptr, clock_p, clock_reg = W[AT_CLOCK_RANK], W[AT_CLOCK_PTR], W[AT_CLOCK_P], W[AT_CLOCK_REG]
         value, p, reg = W[AT_CLOCK_VALUE], W[AT_P], W[AT_REG]
         if W[N_REG_AT_START] == 0:
-            residual_at_c(F, W, K, W[AT_X], False)
+            residual_at_c(F, W, K, W[AT_X], WHOLE(0))
         for k in range(W[SIZE_CLOCK]):
             if W[clock_rank + k] == rank and tick_time_c(F, W, k) <= due:
-                segment_c(F, W, K, 4 + k, 1)
+                segment_c(F, W, K, 4 + k)
                 for m in range(W[clock_ptr + k], W[clock_ptr + k + 1]):
                     F[value + m] = F[reg + W[clock_reg + m]]
         changed = 0

@@ -58,12 +58,12 @@ def _build(stamp: int):
 
     @njit(cache=True, nogil=True, error_model="numpy")
     def delayed_value(F, W, d, t, right):
-        """Delayed expression d at time t minus its delay; at a jump the value before it, or after it if `right`."""
+        """Delayed expression d at time t minus its delay; at a jump the value before it, or after it if right is 1."""
         _ = stamp
         t_past = t - F[W[AT_DELAY_S] + d]
         edge = merge_distance_c(t)
         capacity, first, history_t = W[SIZE_HISTORY], W[N_HISTORY_FIRST], W[AT_HISTORY_T]
-        limit = t_past + edge if right else t_past - edge
+        limit = t_past + edge if right == 1 else t_past - edge
         # bisection: the last piece that starts at or before the limit
         low, high = 0, W[N_HISTORY_COUNT]
         while low < high:
@@ -175,10 +175,10 @@ def start_history(program: Program, work: Workspace) -> None:
     work.counter[N_BREAKS] = 0
     work.counter[N_START_READY] = 0
     work.state[S_HISTORY_T0] = work.state[S_T]
-    load_delayed_c(work.F, work.W, True)
+    load_delayed_c(work.F, work.W, 1)
     push_breaks_c(work.F, work.W, work.state[S_T], 0)
 
 
 def delayed_value(program: Program, work: Workspace, delay: int, t: float, right: bool = True) -> float:
     """Delayed expression number `delay` as seen at time t, s; at a jump the value after it, or before it."""
-    return float(delayed_value_c(work.F, work.W, delay, t, right))
+    return float(delayed_value_c(work.F, work.W, delay, t, int(right)))

@@ -1,4 +1,4 @@
-"""Where things lie in the kernels' memory: three arenas, F (float64), W (whole numbers, int64), C (complex128), and the tape K (int32), each one flat array.
+"""Where things lie in the kernels' memory: three arenas, F (float64), W (int64), C (complex128) and the tape K (int32), each one flat array.
 
 A compiled function that takes a hundred arrays takes a second to compile, whatever it does; with four flat arrays all kernels together take seconds.
 W starts with the counters (workspace.N_...), then sizes (SIZE_...), then the offsets of all blocks (AT_...); F starts with the state

@@ -15,6 +15,7 @@ from polewise.kernels.radau import C1, C2
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.step import attempt_step_c, run_inside_c
 from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
+from polewise.kernels.tape import WHOLE
 from polewise.kernels.workspace import N_NEEDS_RESTART, N_RELOCATIONS, S_BAND, S_T
 
 DONE = int(Status.DONE)
@@ -69,7 +70,7 @@ def _build(stamp: int):
         """worst_of_c on the dense output at the part s of the step."""
         _ = stamp
         run_inside_c(F, W, K, h, s)
-        return worst_of_c(F, W, W[AT_REG], 1)
+        return worst_of_c(F, W, W[AT_REG], WHOLE(1))
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def bracket_first(F, W, K, h):
@@ -84,7 +85,7 @@ def _build(stamp: int):
         high, value_high = 1.0, 1.0
         for lane in range(3):
             part = C1 if lane == 0 else (C2 if lane == 1 else 1.0)
-            value = worst_of_c(F, W, W[AT_REG3] + lane, 3)
+            value = worst_of_c(F, W, W[AT_REG3] + lane, WHOLE(3))
             if value > 0.0:
                 high, value_high = part, value
                 break
@@ -133,7 +134,7 @@ def _build(stamp: int):
             W[N_RELOCATIONS] += 1
             if status != DONE:
                 return (FACTORS_FULL if status == FACTORS_FULL else NO_CONVERGENCE), 0.0
-            value = worst_of_c(F, W, W[AT_REG3] + 2, 3)
+            value = worst_of_c(F, W, W[AT_REG3] + 2, WHOLE(3))
             if value > 0.0:
                 high = size
             else:
@@ -169,7 +170,7 @@ def _build(stamp: int):
                 value = F[reg + lanes * W[switch_reg + s]]
                 beyond = violation_c(F, W, s, value)
                 if beyond / F[switch_now + s] >= nearest or beyond >= -band * F[switch_scale + s]:
-                    status = set_mode_c(F, W, s, next_mode_c(F, W, s, value, False))
+                    status = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(0)))
                     if status != DONE:
                         return status
                     watched = watched or W[W[AT_SWITCH_WATCHED] + s] != 0

@@ -2,7 +2,7 @@
 
 A (n × n) is given by columns: col_ptr, row_idx and values. With columns taken in a given order and rows in the order of their pivots, A = L U,
 L with unit diagonal. L and U are kept by columns; entries name pivot positions; the diagonal of U is kept inverted. V is the arena of the values,
-F or C; `f` is the factors' group of entries in W (layout.REAL, COMPLEX, RESTART). Indices inside the loops are unsigned (U): that spares a test per access.
+F or C; `f` is the factors' group of entries in W (layout.REAL, COMPLEX, RESTART). Indices in hot loops are unsigned: that spares a test.
 
 Pivot search: left-looking, each column by a sparse triangular solve whose pattern a depth-first search finds first; a row's diagonal is
 preferred as pivot within DIAGONAL_PREFERENCE of the largest entry, which keeps the fill that the column order was chosen for.

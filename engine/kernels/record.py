@@ -8,7 +8,7 @@ from polewise.kernels.layout import AT_OUT_REG, AT_RECORD, AT_REG, AT_REG3, AT_X
 from polewise.kernels.program import Program
 from polewise.kernels.radau import C1, C2
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.tape import residual_at_c, segment_c
+from polewise.kernels.tape import WHOLE, residual_at_c, segment_c, segment_three_c
 from polewise.kernels.workspace import (
     FLAG_BEFORE,
     FLAG_STAGE,
@@ -43,9 +43,9 @@ def _build(stamp: int):
         """Append a row at the present point (runs RESIDUAL, OUTPUT)."""
         _ = stamp
         if W[N_REG_AT_START] == 0:
-            residual_at_c(F, W, K, W[AT_X], False)
-        segment_c(F, W, K, 2, 1)
-        write_row_c(F, W, F[S_T], flag, W[AT_REG], 1)
+            residual_at_c(F, W, K, W[AT_X], WHOLE(0))
+        segment_c(F, W, K, WHOLE(2))
+        write_row_c(F, W, F[S_T], flag, W[AT_REG], WHOLE(1))
 
     @njit(cache=True, nogil=True, error_model="numpy")
     def record_step(F, W, K, h, t_new, flag):
@@ -53,11 +53,11 @@ def _build(stamp: int):
         _ = stamp
         if F[S_RECORD_EVERY] > 0.0 and t_new - F[S_RECORD_T] < F[S_RECORD_EVERY] and flag != FLAG_BEFORE:
             return
-        segment_c(F, W, K, 2, 3)
+        segment_three_c(F, W, K, WHOLE(2))
         if W[N_RECORD_STAGES] != 0:
-            write_row_c(F, W, F[S_T] + C1 * h, FLAG_STAGE, W[AT_REG3], 3)
-            write_row_c(F, W, F[S_T] + C2 * h, FLAG_STAGE, W[AT_REG3] + 1, 3)
-        write_row_c(F, W, t_new, flag, W[AT_REG3] + 2, 3)
+            write_row_c(F, W, F[S_T] + C1 * h, FLAG_STAGE, W[AT_REG3], WHOLE(3))
+            write_row_c(F, W, F[S_T] + C2 * h, FLAG_STAGE, W[AT_REG3] + 1, WHOLE(3))
+        write_row_c(F, W, t_new, flag, W[AT_REG3] + 2, WHOLE(3))
 
     return write_row, record_point, record_step
 

@@ -44,7 +44,7 @@ from polewise.kernels.opcodes import Status
 from polewise.kernels.program import Program
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
-from polewise.kernels.tape import residual_at_c, segment_c
+from polewise.kernels.tape import WHOLE, residual_at_c, segment_c
 from polewise.kernels.workspace import (
     N_FULL_FACTORS,
     N_JACOBIANS,
@@ -84,7 +84,7 @@ def _build(stamp: int):
     def mismatch(F, W, K):
         """RESIDUAL at x; dx = dx_try = kept charges minus charges, or minus f."""
         _ = stamp
-        residual_at_c(F, W, K, W[AT_X], False)
+        residual_at_c(F, W, K, W[AT_X], WHOLE(0))
         reg, f_reg, q_reg, q_keep, dx, dx_try = W[AT_REG], W[AT_F_REG], W[AT_Q_REG], W[AT_Q_KEEP], W[AT_DX], W[AT_DX_TRY]
         for i in range(W[SIZE_N]):
             value = F[q_keep + i] - F[reg + W[q_reg + i]] if W[q_reg + i] >= 0 else -F[reg + W[f_reg + i]]
@@ -98,7 +98,7 @@ def _build(stamp: int):
         n, dx_try, scale, x, row_scale = W[SIZE_N], W[AT_DX_TRY], W[AT_SCALE], W[AT_X], W[AT_RESTART_SCALE]
         for i in range(n):
             F[dx_try + i] *= F[row_scale + i]
-        lu_solve_c(W, F, RESTART, dx_try)
+        lu_solve_c(W, F, WHOLE(RESTART), dx_try)
         norm = 0.0
         for i in range(n):
             size = abs(F[dx_try + i]) / (abs(F[x + i]) + F[scale + i])
@@ -113,7 +113,7 @@ def _build(stamp: int):
     def restart_factorise(F, W, K):
         """Jacobian of the restart equations at x (RESIDUAL has been run there) and its factors."""
         _ = stamp
-        segment_c(F, W, K, 1, 1)
+        segment_c(F, W, K, WHOLE(1))
         W[N_JACOBIANS] += 1
         n, reg, q_reg, jf_reg, jq_reg = W[SIZE_N], W[AT_REG], W[AT_Q_REG], W[AT_JF_REG], W[AT_JQ_REG]
         col_ptr, row_idx, matrix, row_scale, scale = W[AT_COL_PTR], W[AT_ROW_IDX], W[AT_RESTART_MATRIX], W[AT_RESTART_SCALE], W[AT_SCALE]
@@ -129,7 +129,7 @@ def _build(stamp: int):
             F[row_scale + i] = 1.0 / F[row_scale + i] if F[row_scale + i] > 0.0 else 1.0
         for e in range(W[col_ptr + n]):
             F[matrix + e] *= F[row_scale + W[row_idx + e]]
-        result = lu_factor_c(W, F, RESTART, matrix)
+        result = lu_factor_c(W, F, WHOLE(RESTART), matrix)
         W[N_RESTART_FACTORS] = 1 if result == LU_DONE else 0
         if result != LU_DONE:
             W[N_SINGULAR] = W[RESTART + LU_COLUMN]
@@ -206,7 +206,7 @@ def _build(stamp: int):
             F[f_start + i] = F[reg + W[f_reg + i]]
             F[q_start + i] = F[W[AT_Q_KEEP] + i] if W[q_reg + i] >= 0 else 0.0
         if W[SIZE_DELAY] > 0:
-            segment_c(F, W, K, 3, 1)
+            segment_c(F, W, K, WHOLE(3))
             for d in range(W[SIZE_DELAY]):
                 F[W[AT_HISTORY_START] + d] = F[reg + W[W[AT_DELAY_IN_REG] + d]]
         W[N_NEEDS_RESTART] = 0
@@ -220,7 +220,7 @@ def _build(stamp: int):
         W[N_RESTARTS] += 1
         W[N_START_READY] = 0
         W[N_MADE_JUMP] = 1
-        load_delayed_c(F, W, True)
+        load_delayed_c(F, W, WHOLE(1))
         switch_reg, switch_scale, reg = W[AT_SWITCH_REG], W[AT_SWITCH_SCALE], W[AT_REG]
         for round_number in range(ROUND_LIMIT):
             status = solve_frozen_c(F, W, K)
@@ -231,7 +231,7 @@ def _build(stamp: int):
                 value = F[reg + W[switch_reg + s]]
                 if violation_c(F, W, s, value) > F[switch_scale + s] * F[S_BAND]:
                     flips += 1
-                    trouble = set_mode_c(F, W, s, next_mode_c(F, W, s, value, True))
+                    trouble = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(1)))
                     if trouble != DONE:
                         return trouble
                     W[N_WORST_SWITCH] = s

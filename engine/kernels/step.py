@@ -94,7 +94,7 @@ from polewise.kernels.radau import (
     V33,
 )
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.tape import jacobian_c, load_point_c, residual_at_c, run_one_c, segment_c
+from polewise.kernels.tape import WHOLE, jacobian_c, load_point_c, residual_at_c, run_one_c, segment_c, segment_three_c
 from polewise.kernels.workspace import (
     N_FACTORISATIONS,
     N_FACTORS_READY,
@@ -140,7 +140,7 @@ def _build(stamp: int):
     def prepare_start(F, W, K):
         """f_start, q_start and history_start at the present point. Returns DONE or NOT_FINITE."""
         _ = stamp
-        residual_at_c(F, W, K, W[AT_X], False)
+        residual_at_c(F, W, K, W[AT_X], WHOLE(0))
         reg, f_reg, q_reg, f_start, q_start = W[AT_REG], W[AT_F_REG], W[AT_Q_REG], W[AT_F_START], W[AT_Q_START]
         total = 0.0
         for i in range(W[SIZE_N]):
@@ -148,7 +148,7 @@ def _build(stamp: int):
             F[q_start + i] = F[reg + W[q_reg + i]] if W[q_reg + i] >= 0 else 0.0
             total += F[f_start + i] + F[q_start + i]
         if W[SIZE_DELAY] > 0:
-            segment_c(F, W, K, 3, 1)
+            segment_c(F, W, K, WHOLE(3))
             for d in range(W[SIZE_DELAY]):
                 F[W[AT_HISTORY_START] + d] = F[reg + W[W[AT_DELAY_IN_REG] + d]]
         W[N_START_READY] = 1
@@ -177,11 +177,11 @@ def _build(stamp: int):
             C[matrix_complex + e] = r * (complex_factor * F[jac_q + e] + F[jac_f + e])
         W[N_FACTORISATIONS] += 1
         W[N_FULL_FACTORS] = 0
-        result = lu_factor_c(W, F, REAL, matrix)
+        result = lu_factor_c(W, F, WHOLE(REAL), matrix)
         column = W[REAL + LU_COLUMN]
         if result == LU_DONE:
             W[N_FULL_FACTORS] = 1
-            result = lu_factor_c(W, C, COMPLEX, matrix_complex)
+            result = lu_factor_c(W, C, WHOLE(COMPLEX), matrix_complex)
             column = W[COMPLEX + LU_COLUMN]
         W[N_PIVOT_SEARCHES] = W[REAL + LU_SEARCHES] + W[COMPLEX + LU_SEARCHES] + W[RESTART + LU_SEARCHES]
         if result != LU_DONE:
@@ -222,7 +222,7 @@ def _build(stamp: int):
             F[base + 3 * j + 2] = value
         for d in range(W[SIZE_DELAY]):
             for s in range(3):
-                F[base + 3 * W[W[AT_DELAY_P] + d] + s] = delayed_value_c(F, W, d, F[times + s], False)
+                F[base + 3 * W[W[AT_DELAY_P] + d] + s] = delayed_value_c(F, W, d, F[times + s], WHOLE(0))
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def run_stages(F, W, K):
@@ -233,7 +233,7 @@ def _build(stamp: int):
             value = F[x + i]
             for s in range(3):
                 F[base + 3 * i + s] = value + F[z + 3 * i + s]
-        segment_c(F, W, K, 0, 3)
+        segment_three_c(F, W, K, WHOLE(0))
         W[N_RESIDUALS] += 3
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
@@ -257,8 +257,8 @@ def _build(stamp: int):
             r = -F[row_scale + i]
             F[b + i] = r * (I11 * g1 + I12 * g2 + I13 * g3)
             C[bc + i] = complex(r * (I21 * g1 + I22 * g2 + I23 * g3), r * (I31 * g1 + I32 * g2 + I33 * g3))
-        lu_solve_c(W, F, REAL, b)
-        lu_solve_c(W, C, COMPLEX, bc)
+        lu_solve_c(W, F, WHOLE(REAL), b)
+        lu_solve_c(W, C, WHOLE(COMPLEX), bc)
         W[N_SOLVES] += 1
         norm = 0.0
         for i in range(n):
@@ -322,7 +322,7 @@ def _build(stamp: int):
         norm = 0.0
         for attempt in range(2):
             if attempt == 1:
-                residual_at_c(F, W, K, x_try, False)
+                residual_at_c(F, W, K, x_try, WHOLE(0))
             for i in range(n):
                 F[dx + i] = 0.0
                 if W[q_reg + i] >= 0:
@@ -330,7 +330,7 @@ def _build(stamp: int):
                     at = reg3 + 3 * W[q_reg + i]
                     q = F[q_start + i]
                     F[dx + i] = F[row_scale + i] * ((E1 * (F[at] - q) + E2 * (F[at + 1] - q) + E3 * (F[at + 2] - q)) * inverse_h - f)
-            lu_solve_c(W, F, REAL, dx)
+            lu_solve_c(W, F, WHOLE(REAL), dx)
             norm = 0.0
             for i in range(n):
                 size = abs(F[dx + i]) * F[weight + i] * F[in_error + i]
@@ -356,7 +356,7 @@ def _build(stamp: int):
         while True:
             if W[N_JACOBIAN_AGE] == 0:
                 if W[N_REG_AT_START] == 0:
-                    residual_at_c(F, W, K, x, False)
+                    residual_at_c(F, W, K, x, WHOLE(0))
                     W[N_REG_AT_START] = 1
                 jacobian_c(F, W, K)
                 W[N_JACOBIAN_AGE] = 2
@@ -388,8 +388,8 @@ def _build(stamp: int):
         t = F[S_T] + s * h
         load_point_c(F, W, x_try, t)
         for d in range(W[SIZE_DELAY]):
-            F[reg + W[P_REG] + W[W[AT_DELAY_P] + d]] = delayed_value_c(F, W, d, t, s <= 0.0)
-        run_one_c(F, W, K, reg, 0, W[W[AT_SEGMENT_END]], False)
+            F[reg + W[P_REG] + W[W[AT_DELAY_P] + d]] = delayed_value_c(F, W, d, t, WHOLE(1 if s <= 0.0 else 0))
+        run_one_c(F, W, K, reg, WHOLE(0), W[W[AT_SEGMENT_END]], WHOLE(0))
         W[N_RESIDUALS] += 1
 
     return (

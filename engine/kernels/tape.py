@@ -69,6 +69,7 @@ from polewise.kernels.stamp import STAMP
 from polewise.kernels.workspace import N_JACOBIANS, N_REG_AT_START, N_RESIDUALS, S_T, Workspace
 
 FLOOR_LIMIT = 4.0e18  # beyond it a floor no longer fits a whole number
+WHOLE = np.int64  # a number written out in a call is a type of its own to the compiler, WHOLE(number) is not
 U = np.uint64  # an unsigned index needs no test for counting from the end
 
 
@@ -133,7 +134,7 @@ def _build_tape(lanes: int, stamp: int):
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def run(F, W, K, at_reg, first, last, live):
-        """Operations [first, last) on the registers from F[at_reg] on. `live`: switches follow lane 0 and write the modes."""
+        """Operations [first, last) on the registers from F[at_reg] on. live 1: switches follow lane 0 and write the modes."""
         _ = stamp
         at_mode, at_table, at_knots, at_coef = W[AT_MODE], W[AT_TABLE_PTR], W[AT_TABLE_KNOTS], W[AT_TABLE_COEF]
         reg = U(at_reg)
@@ -161,9 +162,9 @@ def _build_tape(lanes: int, stamp: int):
                 c = reg + U(K[U(k + 4)]) * U(lanes)
                 for s in range(lanes):
                     F[d + U(s)] = F[b + U(s)] if F[a + U(s)] != 0.0 else F[c + U(s)]
-            elif op == POSITIVE or op == FLOOR:
+            elif op in (POSITIVE, FLOOR):
                 mode = U(at_mode + K[U(k + 3)])
-                if live:
+                if live == 1:
                     u = F[a]
                     if op == POSITIVE:
                         W[mode] = 1 if u > 0.0 else 0
@@ -171,11 +172,11 @@ def _build_tape(lanes: int, stamp: int):
                         W[mode] = np.int64(np.floor(u)) if abs(u) < FLOOR_LIMIT else 0
                 for s in range(lanes):
                     F[d + U(s)] = W[mode]
-            elif op == TABLE or op == TABLE_SLOPE:
+            elif op in (TABLE, TABLE_SLOPE):
                 table = np.int64(K[U(k + 4)])
                 mode = U(at_mode + K[U(k + 3)])
                 start = at_knots + W[at_table + table]
-                if live:
+                if live == 1:
                     W[mode] = table_segment_c(F, start, at_knots + W[at_table + table + 1], F[a])
                 segment = W[mode]
                 row = U(at_coef + 4 * (W[at_table + table] + table + segment))
@@ -214,48 +215,51 @@ def _build(stamp: int):
 
     @njit(cache=True, nogil=True, error_model="numpy")
     def residual_at(F, W, K, at_x, live):
-        """RESIDUAL at (F[at_x:], state[S_T], p) → reg; modes frozen, or `live`: following their values, which sets them."""
+        """RESIDUAL at (F[at_x:], state[S_T], p) → reg; modes frozen, or live (1): following their values, which sets them."""
         _ = stamp
         load_point_c(F, W, at_x, F[S_T])
-        run_one_c(F, W, K, W[AT_REG], 0, W[W[AT_SEGMENT_END]], live)
+        run_one_c(F, W, K, W[AT_REG], WHOLE(0), W[W[AT_SEGMENT_END]], live)
         W[N_RESIDUALS] += 1
 
     @njit(cache=True, nogil=True, error_model="numpy")
-    def segment(F, W, K, k, lanes):
-        """Operations of segment k on reg (lanes = 1) or reg3 (lanes = 3) as they stand."""
+    def segment(F, W, K, k):
+        """Operations of segment k on reg as it stands."""
         _ = stamp
         at = W[AT_SEGMENT_END] + k
-        first = W[at - 1] if k > 0 else 0
-        if lanes == 3:
-            run_three_c(F, W, K, W[AT_REG3], first, W[at], False)
-        else:
-            run_one_c(F, W, K, W[AT_REG], first, W[at], False)
+        run_one_c(F, W, K, W[AT_REG], W[at - 1], W[at], WHOLE(0))
+
+    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    def segment_three(F, W, K, k):
+        """Operations of segment k on reg3, the three stages, as it stands."""
+        _ = stamp
+        at = W[AT_SEGMENT_END] + k
+        run_three_c(F, W, K, W[AT_REG3], W[at - 1] if k > 0 else 0, W[at], WHOLE(0))
 
     @njit(cache=True, nogil=True, error_model="numpy")
     def jacobian(F, W, K):
         """JACOBIAN on reg (run a residual first) → jac_f, jac_q."""
         _ = stamp
-        segment_c(F, W, K, 1, 1)
+        segment_c(F, W, K, WHOLE(1))
         reg, jac_f, jac_q, jf_reg, jq_reg = W[AT_REG], W[AT_JAC_F], W[AT_JAC_Q], W[AT_JF_REG], W[AT_JQ_REG]
         for e in range(W[SIZE_NNZ]):
             F[jac_f + e] = F[reg + W[jf_reg + e]]
             F[jac_q + e] = F[reg + W[jq_reg + e]]
         W[N_JACOBIANS] += 1
 
-    return load_point, residual_at, segment, jacobian
+    return load_point, residual_at, segment, segment_three, jacobian
 
 
-(load_point_c, residual_at_c, segment_c, jacobian_c) = _build(STAMP)
+(load_point_c, residual_at_c, segment_c, segment_three_c, jacobian_c) = _build(STAMP)
 
 
 def run_residual(program: Program, work: Workspace) -> None:
     """RESIDUAL at (work.x, state[S_T], work.p, work.mode) → work.reg."""
-    residual_at_c(work.F, work.W, work.K, work.W[AT_X], False)
+    residual_at_c(work.F, work.W, work.K, work.W[AT_X], 0)
 
 
 def run_residual_live(program: Program, work: Workspace) -> None:
     """RESIDUAL at work.x with every switch live, written to work.mode. One pass suffices: a switch's input comes before it on the tape."""
-    residual_at_c(work.F, work.W, work.K, work.W[AT_X], True)
+    residual_at_c(work.F, work.W, work.K, work.W[AT_X], 1)
 
 
 live_modes = run_residual_live
@@ -263,7 +267,10 @@ live_modes = run_residual_live
 
 def run_segment(program: Program, work: Workspace, k: int) -> None:
     """Operations of segment k on work.reg as it stands (0 RESIDUAL, 1 JACOBIAN, 2 OUTPUT, 3 DELAY, 4 + c CLOCK c)."""
-    segment_c(work.F, work.W, work.K, k, 1)
+    if k == 0:
+        run_residual(program, work)
+    else:
+        segment_c(work.F, work.W, work.K, k)
 
 
 def run_jacobian(program: Program, work: Workspace) -> None:
