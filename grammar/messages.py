@@ -35,6 +35,12 @@ def too_many_tokens(span: Span, most: int) -> Diagnostic:
     return _error("text-too-long", f"this text has more than {most:,} words and marks", span, hint="Split it with `use`.")
 
 
+def statement_too_long(span: Span, most: int) -> Diagnostic:
+    """One statement with more words and marks than any sensible one."""
+    hint = "Long tables are read `from` a CSV file; elsewhere a bracket may be left open."
+    return _error("statement-too-long", f"this statement has more than {most:,} words and marks", span, hint=hint)
+
+
 def too_many_errors(span: Span) -> Diagnostic:
     """The rest of the errors is left out."""
     return _error("too-many-errors", "too many errors; reading stopped here", span)

@@ -56,6 +56,11 @@ _CALLED = {
     "RANGE": "`..`",
     "RATE_OF": "`d/dt`",
     "SEMICOLON": "`;`",
+    "TOLERANCE_MARK": "`+-`",
+    "SIGN": "`+` or `-`",
+    "TIMES": "`*` or `/`",
+    "POWER": "`^`",
+    "COMPARE": "a comparison",
     "_INDEX_CLOSE": "`}`",
 }
 
@@ -399,6 +404,9 @@ def _equals(m: Mistake) -> Diagnostic | None:
             return messages.single_equals(m.span)
         if "EQUAL" in before:
             return messages.second_equals(m.span)
+    following = m.following
+    if token.type == "COLON" and following is not None and following.type == "EQUAL" and following.start == token.end:
+        return messages.colon_equals(m.span_of(token, following))
     if token.type == "COMPARE":
         if token.text == "==" and m.accepts("EQUAL") and not m.accepts("COMPARE"):
             return messages.double_equals(m.span)

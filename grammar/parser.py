@@ -282,7 +282,7 @@ class _Reading:
         """Say what is wrong, unless a wrong character or number earlier in the statement already explains it."""
         token = mistake.tokens[mistake.index]
         begins = mistake.tokens[mistake.statement].start
-        if bisect_right(self.lexical_at, token.end) > bisect_left(self.lexical_at, begins):
+        if bisect_right(self.lexical_at, token.start) > bisect_left(self.lexical_at, begins):
             return
         self.diagnostics.append(explain(mistake))
         if len(self.diagnostics) >= MAX_ERRORS:

@@ -12,7 +12,8 @@ from polewise.grammar.source import SourceText, Span
 from polewise.grammar.units import NO_UNIT, UNIT_SHAPE, Unit, nearest_unit, parse_unit, unit_run
 from polewise.grammar.words import EXPRESSION_WORDS, OPENERS, SOFT_WORDS, STATEMENT_WORDS, nearest_word
 
-MAX_TOKENS = 400_000  # about 30,000 lines; a file of the permitted size with more than that is no netlist
+MAX_TOKENS = 300_000  # about 28,000 lines; a file of the permitted size with more than that is no netlist
+MAX_STATEMENT_TOKENS = 20_000  # up to its end or its block; a table of 3,000 points has that many, larger ones belong in a CSV file
 MAX_DEPTH = 100  # open brackets and braces at one place
 MAX_LEXICAL_ERRORS = 50
 
@@ -61,13 +62,13 @@ _MARKS = {
 _SCAN = re.compile(
     r"([ \t\r\f\v\u00a0\ufeff]+|\#[^\n]*)"  # 1 blank or comment
     r"|([A-Za-z_][A-Za-z0-9_]*)"  # 2 word
-    r"|(\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)"  # 3 number
+    r"|([0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?)"  # 3 number
     r"|(--|\.\.|\+-|<=|>=|==|!=|[-+*/^()\[\]|:;,.=<>])"  # 4 mark
-    r"|(\n)"  # 5 newline
+    r"|(\n(?:[ \t\r\n\f\v]+|\#[^\n]*)*)"  # 5 newline, with blank and comment lines behind it
     r"|([{}])"  # 6 brace
     r'|("[^"\n]*"?)'  # 7 string
 ).match
-_UNKNOWN = re.compile(r"[^\s\w()\[\]{}:;,.=<>+\-*/^|\"#]+|[^\W\d]+").match
+_UNKNOWN = re.compile(r"[^\s\w()\[\]{}:;,.=<>+\-*/^|\"#]+|[^\W0-9]+").match
 _QUOTED = re.compile(r"[“”„«'‘’]([^\"“”„»'‘’\n]*)[\"“”»'‘’]").match
 # Characters that come from a word processor or another notation, with what was meant.
 LIKELY_MARKS = {
@@ -78,7 +79,8 @@ _REST = re.compile(r"[A-Za-z0-9_]+").match
 _RATE_OF = re.compile(r"/dt(?![A-Za-z0-9_])").match
 _WORD = re.compile(r"[A-Za-z_\u00b5\u03bc\u03a9\u2126%°][A-Za-z0-9_\u00b5\u03bc\u03a9\u2126%°]*").match
 _UNIT_ALONE = re.compile(r"[ \t]*((?:1(?=/))?/?[A-Za-z\u00b5\u03bc\u03a9\u2126%°][\w%°^*/-]*|1(?!\w))").match
-_DECIMALS = re.compile(r"\d+(?:[eE][+-]?\d+)?").match
+_LINE_ENDS = re.compile(r"[ \t\r]*(?:\#[^\n]*)?(?:\n|\Z)").match
+_DECIMALS = re.compile(r"[0-9]+(?:[eE][+-]?[0-9]+)?").match
 
 # A newline after one of these goes on with the statement.
 _GOES_ON = frozenset(
@@ -86,10 +88,10 @@ _GOES_ON = frozenset(
 )
 # What opens a line of its own and so shows that a bracket or a path before it was left open.
 _NEW_STATEMENT = re.compile(
-    r"\s*(?:\#[^\n]*\s*)*(?:\}|d/dt\b(?=\s+[A-Za-z_][\w{}+-]*\s*=[^=])|(?:" + "|".join(sorted(OPENERS - {"at"})) + r")\b(?!\s*[.(=,)\]])"
+    r"(?:\}|d/dt\b(?=\s+[A-Za-z_][\w{}+-]*\s*=[^=])|(?:" + "|".join(sorted(OPENERS - {"at"})) + r")\b(?!\s*[.(=,)\]])"
     r"|[A-Za-z_]\w*(?:\{[^}\n]*\}\w*)*\s*:)"
 ).match
-_NEW_PATH = re.compile(r"\s*(?:\#[^\n]*\s*)*[A-Za-z_][\w.]*(?:\{[^}\n]*\}[\w.]*)*\s*--").match
+_NEW_PATH = re.compile(r"[A-Za-z_][\w.]*(?:\{[^}\n]*\}[\w.]*)*\s*--").match
 
 
 def tokenise(source: SourceText) -> Tokens:
@@ -133,7 +135,7 @@ class _Tokeniser:
                 end = self._number(match[3], at, end)
             elif kind == 4:
                 mark = match[4]
-                if mark == "." and text[end : end + 1].isdigit() and last != "NAME" and last != "NAME_REST" and last != "_INDEX_CLOSE":
+                if mark == "." and _DECIMALS(text, end) and last != "NAME" and last != "NAME_REST" and last != "_INDEX_CLOSE":
                     end = self._bare_decimal(at, end)
                 else:
                     type = marks[mark]
@@ -163,6 +165,10 @@ class _Tokeniser:
                     return self._stopped(messages.too_deep(self._span(at, end), MAX_DEPTH))
                 if len(tokens) > MAX_TOKENS:
                     return self._stopped(messages.too_many_tokens(self._span(at, end), MAX_TOKENS))
+                if len(tokens) - self.line_start > MAX_STATEMENT_TOKENS:
+                    return self._stopped(messages.statement_too_long(self._span(tokens[self.line_start].start, at), MAX_STATEMENT_TOKENS))
+                if len(self.diagnostics) > MAX_LEXICAL_ERRORS:
+                    return self._stopped(messages.too_many_errors(self._span(at, end)))
             at = end
         self._end_statement(length, length)
         append(Token("$END", "", length, length))
@@ -235,7 +241,8 @@ class _Tokeniser:
         tokens, brackets = self.tokens, self.brackets
         if brace == "{":
             touching = tokens[-1] if tokens and tokens[-1].end == at else None
-            if touching is not None and touching.type in ("NAME", "NAME_REST", "_INDEX_CLOSE"):
+            is_name = touching is not None and touching.type in ("NAME", "NAME_REST", "_INDEX_CLOSE")
+            if is_name and not _LINE_ENDS(self.text, end):  # an index is never broken over lines, so such a brace opens a block
                 brackets.append("_INDEX_OPEN")
                 tokens.append(Token("_INDEX_OPEN", brace, at, end))
             else:
@@ -272,7 +279,7 @@ class _Tokeniser:
                 brackets.pop()
         elif last in _GOES_ON and not _NEW_STATEMENT(self.text, end):
             return
-        self._end_statement(at, end)
+        self._end_statement(at, at + 1)
 
     def _end_statement(self, at: int, end: int) -> None:
         tokens = self.tokens

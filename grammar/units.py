@@ -174,11 +174,11 @@ def _symbol_table() -> dict[str, tuple[float, Dimension, str | None]]:
 
 _SYMBOLS = _symbol_table()
 
-_WORD = r"[A-Za-z\u00b5\u03bc\u03a9\u2126%°]+"
-_FACTOR = rf"{_WORD}(?:\^-?\d+)?(?!\w)"
+_WORD = r"[A-Za-z\u00b5\u03bc\u03a9\u2126%°]{1,20}"
+_FACTOR = rf"{_WORD}(?:\^-?[0-9]+)?(?!\w)"
 # A unit's outer shape: what follows a number without blanks inside. Which of its words are units is decided word by word.
-UNIT_SHAPE = re.compile(rf"/?{_FACTOR}(?:[*/]{_FACTOR})*")
-_PIECE = re.compile(rf"([*/]?)({_WORD})(?:\^(-?\d+))?(?!\w)")
+UNIT_SHAPE = re.compile(rf"/?{_FACTOR}(?:[*/]{_FACTOR}){{0,15}}")
+_PIECE = re.compile(rf"([*/]?)({_WORD})(?:\^(-?[0-9]+))?(?!\w)")
 
 
 @dataclass(frozen=True, slots=True)
@@ -248,7 +248,7 @@ def unit_run(text: str) -> UnitRun:
 
 
 def parse_unit(text: str) -> Unit | None:
-    """Read a whole text as one unit: "mohm", "V/us", "kg*m^2", "/V", "1/V"; "1" is a plain number. None where it is not one."""
+    """Read a whole text as one unit: "mohm", "V/us", "kg*m^2", "/V"; "1/V" is "/V", "1" a plain number. None where it is not one."""
     text = text.strip()
     if text == "1":
         return Unit("1", 1.0, NONE)
@@ -266,7 +266,7 @@ def joined_symbols(unit: Unit) -> tuple[str, ...]:
 
 # ---------------------------------------------------------------- reading and printing values
 
-_VALUE = re.compile(r"\s*([+-]?)\s*(\d+(?:\.\d+)?(?:[eE][+-]?\d+)?)\s?(.*?)\s*\Z", re.DOTALL)
+_VALUE = re.compile(r"\s*([+-]?)\s*([0-9]+(?:\.[0-9]+)?(?:[eE][+-]?[0-9]+)?)\s?(.*?)\s*\Z", re.DOTALL)
 
 
 def read_value(text: str) -> tuple[float, Dimension] | None:
@@ -349,6 +349,9 @@ def _composed(dimension: Dimension) -> str:
     for a in _BLOCKS:
         if of[a] ** 2 == dimension:
             return f"{a}^2"
+    for a in ("V", "A", "K", "W", "ohm"):
+        if (of[a] * TIME) ** -1 == dimension:
+            return f"/{a}/s"
     for form in ("{a}/{b}", "{a}*{b}"):
         for a in _BLOCKS:
             for b in _DIVISORS:
@@ -387,11 +390,11 @@ def format_value(value: float, dimension: Dimension, *, digits: int = 4, prefer:
     """
     symbol = unit_text(dimension, prefer=prefer)
     if symbol == "1":
-        return f"{value:.{digits}g}"
+        return f"{value + 0.0:.{digits}g}"
     first = _PIECE.match(symbol)
     plain = first is None or first[1] == "/" or first[3] is not None or first[2] in _NO_PREFIX
     if plain or value == 0 or not math.isfinite(value):
-        return f"{value:.{digits}g} {symbol}"
+        return f"{value + 0.0:.{digits}g} {symbol}"  # + 0.0 takes the sign from a zero
     rounded = float(f"{value:.{digits}g}")
     size = abs(rounded)
     scale, prefix = next((pair for pair in _ENGINEERING if size >= pair[0] * (1 - 1e-12)), _ENGINEERING[-1])
@@ -412,7 +415,7 @@ _SPOKEN = {
     "farads": "F", "henry": "H", "henries": "H", "hertz": "Hz", "sec": "s", "secs": "s", "second": "s", "seconds": "s", "msec": "ms", "usec": "us",
     "mins": "min", "minute": "min", "minutes": "min", "hr": "h", "hrs": "h", "hour": "h", "hours": "h", "days": "day", "kelvin": "K",
     "celsius": "degC", "°c": "degC", "°": "deg", "degree": "deg", "degrees": "deg", "nm": "N*m", "joule": "J", "joules": "J", "siemens": "S",
-    "mho": "S", "weber": "Wb", "tesla": "T", "newton": "N", "percent": "%", "pct": "%", "r/min": "rpm", "meg": "M", "mil": "mm", "cm": "mm",
+    "mho": "S", "weber": "Wb", "tesla": "T", "newton": "N", "percent": "%", "pct": "%", "r/min": "rpm", "mil": "mm", "cm": "mm",
     "mhos": "S", "coulomb": "C",
 }  # fmt: skip
 
