@@ -15,8 +15,10 @@ from __future__ import annotations
 from bisect import bisect_left, insort
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, field
+from typing import TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
 from polewise.equations.system import EquationSystem, Target
 from polewise.grammar.source import Span, no_span
@@ -25,6 +27,7 @@ from polewise.kernels.program import RANK_EVENTS
 from polewise.kernels.workspace import (
     FLAG_AFTER,
     N_FACTORS_READY,
+    N_FLIPS,
     N_JACOBIAN_AGE,
     N_MADE_JUMP,
     N_NEEDS_RESTART,
@@ -36,8 +39,10 @@ from polewise.kernels.workspace import (
     S_T,
     Workspace,
 )
-from polewise.solve import diagnosis
+from polewise.solve import diagnosis, kernel_calls
 from polewise.solve.problem import DaeProblem, Reader, reader
+
+BoolArray: TypeAlias = NDArray[np.bool_]
 
 MERGE_S = 1e-12  # instants this close are one (numerics.md)
 MERGE_RELATIVE = 4 * 2.220446049250313e-16
@@ -84,7 +89,7 @@ class EventState:
     next_timed: index into `timed`, sorted by time. log: everything that happened.
     """
 
-    truth: np.ndarray  # type: ignore[type-arg]
+    truth: BoolArray
     timers: list[tuple[float, int]] = field(default_factory=list)
     next_timed: int = 0
     log: list[EventEntry] = field(default_factory=list)
@@ -170,47 +175,40 @@ class Events:
 
     def _sample(self) -> bool:
         """Step 2: sampled signals, rank by rank, from the values just before. Returns whether a value changed."""
-        from polewise.kernels import clocks
-
         if not len(self.problem.program.clock_period):
             return False
         work, program, changed = self.work, self.problem.program, 0
-        rank = clocks.next_rank(program, work, -1)
+        rank = kernel_calls.next_rank(program, work, -1)
         while 0 <= rank < RANK_EVENTS:
-            work.counter[N_REG_AT_START] = 0
-            changed += clocks.fire_clocks(program, work, rank)
-            rank = clocks.next_rank(program, work, rank)
+            changed += kernel_calls.fire_clocks(program, work, rank)
+            rank = kernel_calls.next_rank(program, work, rank)
         return changed > 0
 
     def _settle_watched(self) -> None:
         """Let the switches of conditions agree with the present values, nothing solved again."""
-        from polewise.kernels import switches, tape
-
         work, program = self.work, self.problem.program
         if not len(self.watched):
             return
         for _ in range(SETTLE_ROUNDS):
-            tape.run_residual(program, work)
+            kernel_calls.run_residual(program, work)
             work.counter[N_REG_AT_START] = 0
             wrong = 0
             for s in self.watched:
                 value = work.reg[program.switch_reg[s]]
-                if switches.violation(program, work.mode, s, value) > program.switch_scale[s] * work.state[S_BAND]:
-                    work.mode[s] = switches.live_mode(program, s, value)
+                if kernel_calls.violation(program, work, int(s), value) > program.switch_scale[s] * work.state[S_BAND]:
+                    work.mode[s] = kernel_calls.live_mode(program, int(s), value)
                     wrong += 1
             if wrong == 0:
                 return
             self._changed()
 
-    def _read_truth(self) -> np.ndarray:  # type: ignore[type-arg]
+    def _read_truth(self) -> BoolArray:
         """Step 3: the conditions with the switches as they stand."""
-        from polewise.kernels import tape
-
         if not len(self.system.conditionals):
             return np.zeros(0, dtype=bool)
-        tape.run_residual(self.problem.program, self.work)
+        kernel_calls.run_residual(self.problem.program, self.work)
         self.work.counter[N_REG_AT_START] = 0
-        truth: np.ndarray = self.work.reg[self.problem.condition_register] != 0.0  # type: ignore[type-arg]
+        truth: BoolArray = self.work.reg[self.problem.condition_register] != 0.0
         return truth
 
     def _became_true(self, t: float) -> list[int]:
@@ -308,12 +306,10 @@ class Events:
 
     def _set_states(self, states: list[tuple[int, float]]) -> None:
         """The charges of set states follow them; all others stay as they were."""
-        from polewise.kernels import tape
-
         work, program = self.work, self.problem.program
         for index, value in states:
             work.x[index] = value
-        tape.run_residual(program, work)
+        kernel_calls.run_residual(program, work)
         for index, _ in states:
             if program.q_reg[index] >= 0:
                 work.q_keep[index] = work.reg[program.q_reg[index]]
@@ -340,10 +336,9 @@ class Events:
 
     def _solve_again(self) -> None:
         """Step 5, and the record's row after the jump."""
-        from polewise.kernels import record
-
         self._changed()
+        self.work.counter[N_FLIPS] = 0  # rounds have their own limit
         self.work = self.restart(self.work)
         assert self.work.counter[N_NEEDS_RESTART] == 0
         if self.work.counter[N_RECORD] != 0:
-            record.record_point(self.problem.program, self.work, FLAG_AFTER)
+            kernel_calls.record_point(self.problem.program, self.work, FLAG_AFTER)

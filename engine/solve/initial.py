@@ -16,7 +16,7 @@ from polewise.solve import diagnosis
 from polewise.solve.newton import solve_newton
 from polewise.solve.operating_point import OperatingPoint, find_operating_point
 from polewise.solve.problem import DaeProblem, reader
-from polewise.solve.square_system import SquareSystem, start_rows
+from polewise.solve.square_system import SquareSystem, kept_at_start, start_rows
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -140,15 +140,14 @@ def _set_latches(square: SquareSystem, start_latches: Mapping[str, float]) -> No
 def _solved(problem: DaeProblem, square: SquareSystem, start: FloatArray, kind: Literal["cold", "from"]) -> StartState:
     """States as in `start`, the rest from their laws."""
     system = problem.system
-    for i, unknown in enumerate(system.unknowns):
-        if unknown.is_state:
-            square.offset[i] = start[i]
+    states = [i for i, unknown in enumerate(system.unknowns) if unknown.is_state]
+    kept = reader(system, [kept_at_start(system, i) for i in states])(start, 0.0, square.p)
+    square.offset[states] = kept
     z = np.concatenate([start, square.p[square.solved_p]])
     outcome = solve_newton(square, z)
     if not outcome.converged:
         # A guess far from zero for everything that isn't stated often is better than zero.
         again = np.where(z == 0.0, 1e-2 * square.scale, z)
-        again[: square.n_x] = np.where(square.offset[: square.n_x] != 0.0, square.offset[: square.n_x], again[: square.n_x])
         outcome = solve_newton(square, again)
     factors = outcome.factors
     if factors is not None and not factors.exact:

@@ -44,7 +44,8 @@ class SparseMatrix:
 
     def times(self, x: FloatArray) -> FloatArray:
         """A x."""
-        return np.bincount(self.row_idx, self.values * x[self.column_of_entry], minlength=self.n)
+        product: FloatArray = np.bincount(self.row_idx, self.values * x[self.column_of_entry], minlength=self.n).astype(float)
+        return product
 
     def scaled(self, row_scale: FloatArray, column_scale: FloatArray) -> SparseMatrix:
         """diag(row_scale) A diag(column_scale)."""

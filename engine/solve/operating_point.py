@@ -103,7 +103,8 @@ class _Search:
         if not self.powered:
             return self._accept(*self._unpowered())
         square.p[system.power_scale] = 0.0
-        base, strategy = self._newton(self.start), "newton"
+        strategy: Strategy = "newton"
+        base = self._newton(self.start)
         if not base.converged:
             base, strategy = self._unpowered()
         self._refuse_singular(base)

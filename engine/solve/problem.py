@@ -2,16 +2,22 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from polewise.equations.system import EquationSystem
+from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import SYMBOL, ExpressionGraph, Node
 from polewise.expression.tape import ClockSegment, CompiledProgram, DelaySegment, compile_program
+from polewise.kernels import opcodes as op
 from polewise.kernels.program import RANK_EVENTS, FloatArray, IntArray, Program
 from polewise.kernels.workspace import Workspace, kernel_program, make_workspace
+
+STEPS_PER_PERIOD = 8  # at least this many steps per period of a sine of time
+ORDERED_FROM = 12  # unknowns; below, any order will do
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -25,7 +31,8 @@ class DaeProblem:
         scale: shape (n,), natural size of each unknown, SI.
         condition_register: shape (number of conditionals,), register of each conditional's condition (RESIDUAL segment).
         sampling_ranks: ranks of the clocks that update sampled signals, ascending; `every` events have rank RANK_EVENTS and are not in it.
-        order: shape (n,), order of elimination of the columns, or None for small systems.
+        step_largest_s: no step may be longer, or a wave that no state follows would be stepped over; inf without waves.
+        order: shape (n,), order of elimination of the columns, or None for small systems. fill: entries of the factors in that order.
     """
 
     system: EquationSystem
@@ -34,7 +41,9 @@ class DaeProblem:
     scale: FloatArray
     condition_register: IntArray
     sampling_ranks: tuple[int, ...]
+    step_largest_s: float
     order: IntArray | None
+    fill: int | None
 
     @property
     def n(self) -> int:
@@ -75,6 +84,7 @@ def build_problem(system: EquationSystem) -> DaeProblem:
         also=conditions,
     )
     program = kernel_program(compiled.program)
+    order, fill = _elimination_order(program)
     return DaeProblem(
         system=system,
         compiled=compiled,
@@ -82,8 +92,33 @@ def build_problem(system: EquationSystem) -> DaeProblem:
         scale=program.scale,
         condition_register=np.array([compiled.registers[node] for node in conditions], dtype=np.int64),
         sampling_ranks=tuple(sorted({c.rank for c in system.clocks if c.rank < RANK_EVENTS})),
-        order=None,
+        step_largest_s=_shortest_period(system) / STEPS_PER_PERIOD,
+        order=order,
+        fill=fill,
     )
+
+
+def _shortest_period(system: EquationSystem) -> float:
+    """Period of the fastest sine or cosine of time in the laws, conditions and outputs, s; inf without one.
+
+    The error test sees states only: a law without states, or an output, could be stepped over.
+    """
+    graph = system.graph
+    roots = [*(u.residual for u in system.unknowns), *(c.condition for c in system.conditionals), *(o.expression for o in system.outputs)]
+    waves = [graph.a[k] for k in graph.reachable(roots) if graph.operation[k] in (op.SIN, op.COS)]
+    slopes = Differentiator(graph, [system.time]).gradients(waves)
+    rates = [graph.value_of(slope[system.time]) for slope in slopes if system.time in slope]
+    fastest = max((abs(rate) for rate in rates if rate is not None), default=0.0)
+    return 2.0 * math.pi / fastest if fastest > 0.0 else math.inf
+
+
+def _elimination_order(program: Program) -> tuple[IntArray | None, int | None]:
+    """A column order that keeps the factors sparse; small systems need none."""
+    if program.n <= ORDERED_FROM:
+        return None, None
+    from polewise.solve.ordering import elimination_order
+
+    return elimination_order(program)
 
 
 def new_workspace(problem: DaeProblem, tolerance: float, *, record_rows: int = 4096) -> Workspace:
@@ -93,7 +128,7 @@ def new_workspace(problem: DaeProblem, tolerance: float, *, record_rows: int = 4
         tolerance: relative tolerance of the unknowns; absolute ones are tolerance * scale.
         record_rows: rows that the record holds before it must be emptied.
     """
-    return make_workspace(problem.program, tolerance, order=problem.order, record_rows=record_rows)
+    return make_workspace(problem.program, tolerance, order=problem.order, fill=problem.fill, record_rows=record_rows)
 
 
 @dataclass(frozen=True, slots=True)

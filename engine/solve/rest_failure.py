@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from polewise.equations.system import EquationSystem, Unknown
 from polewise.expression.derivative import Differentiator
@@ -72,15 +73,16 @@ def explain_singular(square: SquareSystem, z: FloatArray) -> RestFailure | None:
         if right.shape[1] == 0:
             return None
     moves, bound = _taking_part(right), _taking_part(left)
-    integrators = [int(k) for k in np.flatnonzero(moves & bound) if _is_integrator(square, int(k))]
+    integrators = [k for k in np.flatnonzero(moves & bound).tolist() if _is_integrator(square, k)]
     if not integrators:
         # Rows without any unknown have no right vector of their own.
-        integrators = [k for k in np.flatnonzero(bound) if _is_integrator(square, int(k)) and not np.any(matrix.values[matrix.row_idx == k])]
+        empty = np.bincount(matrix.row_idx, np.abs(matrix.values), minlength=matrix.n) == 0.0
+        integrators = [k for k in np.flatnonzero(bound & empty).tolist() if _is_integrator(square, k)]
     if integrators:
         rows = tuple(square.rows[k] for k in integrators)
         f = square.residual(_rest_of_circuit(square, z, integrators))
         violation = np.abs(f) / row_sizes(square.jacobian(), square.scale)
-        rates = tuple(_rate(square, int(k), f) for k in integrators)
+        rates = tuple(_rate(square, k, f) for k in integrators)
         if len(integrators) > right.shape[1]:
             same = all(violation[k] <= RESIDUAL_ZERO for k in integrators)
             return RestFailure("share" if same else "fight", rows, rates)
@@ -118,9 +120,10 @@ def _rest_of_circuit(square: SquareSystem, z: FloatArray, integrators: list[int]
     return outcome.z if outcome.converged else z
 
 
-def _taking_part(vectors: FloatArray) -> np.ndarray:  # type: ignore[type-arg]
+def _taking_part(vectors: FloatArray) -> NDArray[np.bool_]:
     size = np.sqrt(np.sum(vectors**2, axis=1))
-    return size > COMPONENT_LARGE * float(np.max(size, initial=0.0))
+    taking: NDArray[np.bool_] = size > COMPONENT_LARGE * float(np.max(size, initial=0.0))
+    return taking
 
 
 def _unknown(square: SquareSystem, k: int) -> Unknown | None:

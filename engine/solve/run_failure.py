@@ -11,22 +11,20 @@ from polewise.grammar.source import Span
 from polewise.kernels import opcodes
 from polewise.kernels.opcodes import Status
 from polewise.kernels.workspace import N_CHATTER_LIMIT, N_REG_AT_START, N_SINGULAR, N_WORST, N_WORST_SWITCH, S_H, S_T, Workspace
-from polewise.solve import diagnosis
+from polewise.solve import diagnosis, kernel_calls
 from polewise.solve.diagnosis import Named
 from polewise.solve.problem import DaeProblem
 
 
 def explain_failure(problem: DaeProblem, work: Workspace, status: Status, *, in_restart: bool = False) -> SolverError:
     """The exception for a failing status, with its place in the netlist."""
-    from polewise.kernels import tape
-
     system, t = problem.system, float(work.state[S_T])
     worst = _unknown(system, int(work.counter[N_WORST]))
     if status == Status.SINGULAR:
         return diagnosis.singular_in_run(t, _unknown(system, int(work.counter[N_SINGULAR])))
     if status in (Status.CHATTER, Status.OUTSIDE_TABLE):
         return _switch_failure(problem, work, status, t)
-    tape.run_residual(problem.program, work)
+    kernel_calls.run_residual(problem.program, work)
     work.counter[N_REG_AT_START] = 0
     bad = np.flatnonzero(~np.isfinite(work.reg[problem.program.f_reg]))
     if status == Status.NOT_FINITE or len(bad):

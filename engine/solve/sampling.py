@@ -15,9 +15,9 @@ INSTANT_COST_PER_UNKNOWN_S = 1e-6
 
 
 def count_instants(system: EquationSystem, run_for_s: float) -> float:
-    """Number of instants at which clocks fire in a run of that length; clocks of one period share theirs."""
-    periods = {c.period_s for c in system.clocks}
-    return float(sum(math.floor(run_for_s / period * (1.0 + 1e-12)) + 1 for period in periods if period > 0.0))
+    """Number of instants at which clocks fire in a run of that length; clocks of one period and offset share theirs."""
+    grids = {(c.period_s, c.offset_s) for c in system.clocks}
+    return float(sum(math.floor((run_for_s - offset) / period * (1.0 + 1e-12)) + 1 for period, offset in grids if run_for_s >= offset))
 
 
 def require_choice(system: EquationSystem, run_for_s: float, sampling: str | None, *, study: str, span: Span | None) -> None:

@@ -13,6 +13,7 @@ from polewise.expression.graph import Node
 from polewise.expression.tape import compile_program
 from polewise.kernels.program import FloatArray, IntArray, Program
 from polewise.kernels.workspace import S_T, Workspace, kernel_program, make_workspace
+from polewise.solve import kernel_calls
 from polewise.solve.linear import SparseMatrix
 
 
@@ -80,11 +81,9 @@ class SquareSystem:
 
     def residual(self, z: FloatArray) -> FloatArray:
         """F(z), every switch live."""
-        from polewise.kernels import tape
-
         self.work.x[:] = z
         self.work.p[:] = self.p[self.other_p]
-        tape.run_residual_live(self.program, self.work)
+        kernel_calls.run_residual_live(self.program, self.work)
         value: FloatArray = self.work.reg[self.program.f_reg] - self.offset
         return value
 
@@ -95,9 +94,7 @@ class SquareSystem:
 
     def jacobian(self) -> SparseMatrix:
         """dF/dz at the point of the last `residual`."""
-        from polewise.kernels import tape
-
-        tape.run_jacobian(self.program, self.work)
+        kernel_calls.run_jacobian(self.program, self.work)
         return SparseMatrix(self.program.col_ptr, self.program.row_idx, self.work.jac_f.copy())
 
     def charge_jacobian(self) -> FloatArray:
@@ -129,10 +126,20 @@ def rest_rows(system: EquationSystem) -> list[Row]:
 
 
 def start_rows(system: EquationSystem) -> list[Row]:
-    """Rows of a consistent start: states as stated (x_i - offset_i), algebraic rows as they are, held values that start from their expressions."""
+    """Rows of a consistent start: states as stated, algebraic rows as they are, held values that start from their expressions.
+
+    A state's row is x_i - offset_i. A charge that does not read its own unknown (the unknown is then its rate) is kept itself: q_i(x) - offset_i.
+    """
     graph = system.graph
-    rows = [Row("x", i, u.symbol if u.charge is not None else u.residual) for i, u in enumerate(system.unknowns)]
+    rows = [Row("x", i, u.residual if u.charge is None else kept_at_start(system, i)) for i, u in enumerate(system.unknowns)]
     for j, q in enumerate(system.parameters):
         if q.rest is not None and q.initial is None:
             rows.append(Row("p", j, graph.subtract(q.symbol, q.rest)))
     return rows
+
+
+def kept_at_start(system: EquationSystem, i: int) -> Node:
+    """What a state's start value fixes: the unknown itself, or its charge where that does not read the unknown."""
+    unknown = system.unknowns[i]
+    assert unknown.charge is not None
+    return unknown.symbol if unknown.symbol in system.graph.symbols_under([unknown.charge]) else unknown.charge

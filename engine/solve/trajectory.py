@@ -52,7 +52,8 @@ class MemorySink:
     @property
     def ends(self) -> FloatArray:
         """Rows without the stage points inside steps."""
-        return self.rows[self.rows[:, 1] != FLAG_STAGE]
+        closed: FloatArray = self.rows[self.rows[:, 1] != FLAG_STAGE]
+        return closed
 
     @property
     def time(self) -> FloatArray:

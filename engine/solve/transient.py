@@ -28,11 +28,11 @@ from polewise.kernels.workspace import (
     N_SOLVES,
     N_STEPS,
     N_TICKS,
+    S_H_MAX,
     S_T,
     Workspace,
-    grow,
 )
-from polewise.solve import diagnosis
+from polewise.solve import diagnosis, kernel_calls
 from polewise.solve.averages import Rebase
 from polewise.solve.events import EventEntry, Events, merge_distance
 from polewise.solve.initial import Snapshot, StartState, take_snapshot
@@ -41,6 +41,7 @@ from polewise.solve.run_failure import explain_failure
 from polewise.solve.trajectory import Sink
 
 STEPS_FIRST_CALL = 200  # of the first call of the kernel; later ones follow the clock
+STEPS_FEWEST = 50  # of a run: what only outputs show is drawn with at least so many points
 CALL_AIM_S = 0.1  # wall time of a call: how often progress is told and a stop is heeded
 STEPS_LARGEST_CALL = 1_000_000
 GROWN_MOST = 40  # times that buffers may double
@@ -165,26 +166,22 @@ class _Run:
 
     def _begin(self) -> None:
         """Put the start into the workspace, make it consistent, record it, and do all that is due at 0."""
-        from polewise.kernels import history, record, tape
-
         work, program = self.work, self.problem.program
         work.x[:] = self.start.x
         work.p[:] = self.start.p
+        work.state[S_H_MAX] = min(self.stop_s / STEPS_FEWEST, self.problem.step_largest_s)
+        work.clock_offset[:] = [c.offset_s for c in self.problem.system.clocks]
         work.state[S_T] = 0.0
         if len(program.delay_p):
             _load_past(work, self.start)
-            history.load_delayed(program, work, True)
-            history.push_breaks(program, work, 0.0, 0)
-        tape.run_residual_live(program, work)
+        kernel_calls.run_residual_live(program, work)
         work.q_keep[:] = np.where(program.q_reg >= 0, work.reg[program.q_reg], 0.0)
         self.events.work = self._restart(work)
-        record.record_point(program, self.work, FLAG_AFTER)
+        kernel_calls.record_point(program, self.work, FLAG_AFTER)
         self.events.begin()
 
     def _loop(self) -> str:
         """Advance from instant to instant. Returns "" at the stop time, else why it ended before."""
-        from polewise.kernels import advance
-
         budget, told = STEPS_FIRST_CALL, self.began
         while True:
             t = float(self.work.state[S_T])
@@ -196,7 +193,7 @@ class _Run:
                 if budget <= 0:
                     return "step limit"
             before, steps = clock.perf_counter(), int(self.work.counter[N_STEPS])
-            status = Status(advance.advance(self.problem.program, self.work, target, budget))
+            status = kernel_calls.advance(self.problem.program, self.work, target, budget)
             now = clock.perf_counter()
             self._act_on(status, target)
             done = int(self.work.counter[N_STEPS]) - steps
@@ -237,11 +234,9 @@ class _Run:
 
     def _restart(self, work: Workspace) -> Workspace:
         """A consistent point at the present time; the workspace may be replaced by a larger one."""
-        from polewise.kernels import restart
-
         self.work = work
         while True:
-            status = Status(restart.restart(self.problem.program, self.work))
+            status = kernel_calls.restart(self.problem.program, self.work)
             if status == Status.DONE:
                 self.work.counter[N_NEEDS_RESTART] = 0
                 self.work.counter[N_MADE_JUMP] = 1
@@ -255,7 +250,7 @@ class _Run:
         self.grown += 1
         if self.grown > GROWN_MOST:
             raise explain_failure(self.problem, self.work, status)
-        self.work = grow(self.work, status)
+        self.work = kernel_calls.larger(self.problem.program, self.work, status)
         self.events.work = self.work
 
     def _flush(self) -> None:
