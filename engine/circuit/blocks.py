@@ -138,9 +138,7 @@ def _read_settings(x: Expansion, block: BlockThing, kind: BlockKind) -> Written 
 def _limits(x: Expansion, written: Written, quality: Quality) -> tuple[Node | None, Node | None]:
     """Nodes of `low` and `high`."""
     asked = Asked(quality, f"the output of `{written.block.flat}`", written.block.written.kind_span)
-    low, high = (
-        wanted(x, written.settings[name].value, written.env, asked) if name in written.settings else None for name in ("low", "high")
-    )
+    low, high = (wanted(x, written.settings[name].value, written.env, asked) if name in written.settings else None for name in ("low", "high"))
     if low is not None and high is not None:
         a, b = x.graph.value_of(low), x.graph.value_of(high)
         if a is not None and b is not None and a > b:

@@ -10,15 +10,15 @@ from polewise.circuit.device_settings import device_settings
 from polewise.circuit.dimensions import CONDITION, POISON, TIME, ZERO, Quality
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.model import Branch, Device, Domain, Law
-from polewise.circuit.scope import Env
 from polewise.circuit.things import ACROSS, THROUGH, BoxThing
 from polewise.devices.kind import KINDS, DeviceKind, SettingValue
 from polewise.expression.graph import Node
 from polewise.grammar import syntax
 from polewise.grammar.source import Span
+from polewise.grammar.units import Dimension
 
 
-def _laws_by_unit(domain: Domain) -> dict[dimensions.Dimension, Law]:
+def _laws_by_unit(domain: Domain) -> dict[Dimension, Law]:
     across, through = domain.across_dimension, domain.through_dimension
     second = TIME.dimension
     laws = {
@@ -57,7 +57,9 @@ def finish_box(x: Expansion, box: BoxThing) -> None:
         _value(x, box, content.value)
 
 
-def _add_branch(x: Expansion, box: BoxThing, law: Law, expression: Node | None, initial: Node | None, value_span: Span | None, device: str | None = None) -> None:
+def _add_branch(
+    x: Expansion, box: BoxThing, law: Law, expression: Node | None, initial: Node | None, value_span: Span | None, device: str | None = None
+) -> None:
     x.branches[box.flat] = Branch(
         box.flat,
         x.root(box.left.key),
@@ -97,6 +99,8 @@ def _value(x: Expansion, box: BoxThing, e: syntax.Expression) -> None:
     if value is not None and _wrong_constant(x, e, law, value, quality):
         return
     initial = _initially(x, box, law, node)
+    if law in (Law.CHARGE, Law.FLUX):  # the law's expression is the charge C*v or the flux L*i
+        node = x.graph.multiply(node, box.across(x) if law is Law.CHARGE else box.through(x))
     _add_branch(x, box, law, node, initial, e.span)
 
 
@@ -252,7 +256,7 @@ def _equation(x: Expansion, box: BoxThing, content: syntax.EquationBox) -> None:
 
 
 def _own_name(e: syntax.Expression, domain: Domain) -> str:
-    """"across" or "through" where an expression is just the box's own v or i."""
+    """ "across" or "through" where an expression is just the box's own v or i."""
     if not isinstance(e, syntax.Reference) or len(e.parts) != 1:
         return ""
     name = e.parts[0].plain

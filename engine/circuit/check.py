@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Iterator
 
 from polewise.circuit import messages
+from polewise.circuit.declare import each_line
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.near import looks_mistyped, nearest
 from polewise.circuit.things import NodeThing, PortThing
@@ -17,7 +18,7 @@ def check_values(x: Expansion) -> None:
     for scope, each in x.each_variables:
         known = scope.names.get(each.variable)
         if known is not None:
-            x.report.add(messages.each_variable_declared(each.span, each.variable, known.word, known.span))
+            x.report.add(messages.each_variable_declared(each_line(each), each.variable, known.word, known.span))
     if not x.unfinished:
         return  # reading signals on demand met every circle there is
     circle = _circle(x, list(x.signals), lambda name: _signals_in(x, x.signals[name].expression))
@@ -36,30 +37,20 @@ def _circle(x: Expansion, roots: Iterable[str], needs: Callable[[str], Iterable[
     """The first circle met in a walk along `needs`, depth first."""
     done: set[str] = set()
     for root in roots:
-        path: list[str] = []
-        on_path: set[str] = set()
-        stack: list[tuple[str, Iterator[str]]] = []
-
-        def enter(name: str) -> None:
-            path.append(name)
-            on_path.add(name)
-            stack.append((name, iter(list(needs(name)))))
-
         if root in done:
             continue
-        enter(root)
-        while stack:
-            name, rest = stack[-1]
+        path: dict[str, Iterator[str]] = {root: iter(list(needs(root)))}  # from the root to where the walk is
+        while path:
+            at, rest = next(reversed(path.items()))
             following = next(rest, None)
             if following is None:
-                stack.pop()
-                path.pop()
-                on_path.discard(name)
-                done.add(name)
-            elif following in on_path:
-                return path[path.index(following) :]
+                del path[at]
+                done.add(at)
+            elif following in path:
+                names = list(path)
+                return names[names.index(following) :]
             elif following not in done:
-                enter(following)
+                path[following] = iter(list(needs(following)))
     return None
 
 

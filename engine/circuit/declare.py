@@ -86,7 +86,7 @@ def _each(x: Expansion, scope: Scope, each: syntax.Each, frame: Frame) -> None:
     if first is None or last is None:
         return
     if each.variable in frame or each.variable in VALUE_NAMES:
-        x.report.add(messages.each_variable_taken(each.span, each.variable))
+        x.report.add(messages.each_variable_taken(each_line(each), each.variable))
         return
     if (last - first + 1) * max(1, len(each.body)) > ELEMENTS_MAX - x.elements:
         x.report.add(messages.each_too_many(each.first.span.to(each.last.span), last - first + 1, ELEMENTS_MAX))
@@ -96,6 +96,11 @@ def _each(x: Expansion, scope: Scope, each: syntax.Each, frame: Frame) -> None:
     x.each_variables.append((scope, each))
     for number in range(first, last + 1):
         _body(x, scope, each.body, {**frame, each.variable: number})
+
+
+def each_line(each: syntax.Each) -> Span:
+    """The opening line of an `each`."""
+    return Span(each.span.source, each.span.start, each.last.span.end)
 
 
 # ---------------------------------------------------------------- size before anything is done
@@ -118,7 +123,12 @@ def _check_size(x: Expansion, statements: list[syntax.Statement]) -> None:
                         x.report.add(messages.each_too_many(statement.first.span.to(statement.last.span), copies, ELEMENTS_MAX))
                         raise TooLarge
                     total += inner
-            elif isinstance(statement, syntax.Placement) and statement.kind in assemblies and statement.kind not in inside and len(inside) < NESTING_MAX:
+            elif (
+                isinstance(statement, syntax.Placement)
+                and statement.kind in assemblies
+                and statement.kind not in inside
+                and len(inside) < NESTING_MAX
+            ):
                 if statement.kind not in sizes:
                     sizes[statement.kind] = size(assemblies[statement.kind].body, (*inside, statement.kind))
                 total += sizes[statement.kind]
@@ -394,7 +404,7 @@ def _boxes(x: Expansion, scope: Scope, statement: syntax.Path, ends: list[NodeTh
     """The boxes of a path from left to right; bare wires in between join their nodes."""
     items = statement.items
     result: list[tuple[BoxThing, ...]] = []
-    count = sum(1 if type(item) is syntax.Box else len(item.boxes) for item in items if not isinstance(item, syntax.Reference))
+    count = sum(len(item.boxes) if isinstance(item, syntax.ParallelBoxes) else 1 for item in items if not isinstance(item, syntax.Reference))
     single = count == 1
     at = ends[0]
     assert at is not None
@@ -554,7 +564,9 @@ def _terminals(
             wrong = True
         given[setting.name] = setting.value
     if len(statement.arguments) > len(terminals) + extra:
-        x.report.add(messages.too_many_arguments(statement.arguments[len(terminals) + extra].span, statement.kind, terminals, len(statement.arguments)))
+        x.report.add(
+            messages.too_many_arguments(statement.arguments[len(terminals) + extra].span, statement.kind, terminals, len(statement.arguments))
+        )
         wrong = True
     missing = [terminal for terminal in terminals if terminal not in given]
     if missing:

@@ -6,7 +6,7 @@ from fractions import Fraction
 from typing import Final, Literal
 
 from polewise.grammar import units
-from polewise.grammar.units import Dimension, Unit
+from polewise.grammar.units import Dimension, Exponent, Unit
 
 Sort = Literal["number", "condition", "zero", "unknown", "poison"]
 
@@ -198,9 +198,9 @@ def unit_text(kind: Quality | Dimension) -> str:
 def _composed(dimension: Dimension) -> str:
     """A unit in V, A, s, m, K, which reads better among circuits than kg, m, s, A, K: kg = V*A*s^3/m^2."""
     kg, m, s, a, k = dimension.exponents
-    parts = (("V", kg), ("A", a + kg), ("s", s + 3 * kg), ("m", m - 2 * kg), ("K", k))
-    above = [symbol if power == 1 else f"{symbol}^{power}" for symbol, power in parts if power > 0]
-    below = [symbol if power == -1 else f"{symbol}^{-power}" for symbol, power in parts if power < 0]
+    parts: tuple[tuple[str, Exponent], ...] = (("V", kg), ("A", a + kg), ("s", s + 3 * kg), ("m", m - 2 * kg), ("K", k))
+    above = [symbol if power == 1 else f"{symbol}^{power}" for symbol, power in parts if float(power) > 0]
+    below = [symbol if power == -1 else f"{symbol}^{-1 * power}" for symbol, power in parts if float(power) < 0]
     return "/".join(["*".join(above) if above else "1", *below])
 
 

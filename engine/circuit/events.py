@@ -58,9 +58,7 @@ def event_name(x: Expansion, prefix: str) -> str:
     return f"{key}#{number}"
 
 
-def _whenever(
-    x: Expansion, statement: syntax.Whenever, env: Env, name: str, actions: tuple[Assignment, ...], into: list[ConditionEvent]
-) -> None:
+def _whenever(x: Expansion, statement: syntax.Whenever, env: Env, name: str, actions: tuple[Assignment, ...], into: list[ConditionEvent]) -> None:
     g = x.graph
     lasting = 0.0
     if statement.lasting is not None:
@@ -152,7 +150,11 @@ def _set_hint(thing: Thing) -> str | None:
     if thing.word == "signal":
         return f"Make it a latch: `latch {thing.flat.rpartition('.')[2]} = …`."
     if isinstance(thing, InputThing):
-        return "Bind the input to a latch where the assembly is placed, and set that." if thing.scope.top is not None else "Use a latch; an input at top level is set from Python."
+        return (
+            "Bind the input to a latch where the assembly is placed, and set that."
+            if thing.scope.top is not None
+            else "Use a latch; an input at top level is set from Python."
+        )
     if thing.word == "given":
         return "A given is fixed for a run; make it a latch."
     return None
@@ -266,9 +268,7 @@ def _escape(
     x.condition_events.append(ConditionEvent(f"{thing.flat}.{step.name}#else", waiting, after, False, change, step.span, text))
 
 
-def _change(
-    x: Expansion, thing: SequenceThing, old: str, new: str, entries: dict[str, tuple[Assignment, ...]], span: Span
-) -> tuple[Assignment, ...]:
+def _change(x: Expansion, thing: SequenceThing, old: str, new: str, entries: dict[str, tuple[Assignment, ...]], span: Span) -> tuple[Assignment, ...]:
     g = x.graph
     latches = {} if old == new else {old: 0.0, new: 1.0}
     own = [Assignment("latch", thing.steps[name].flat, g.constant(value), span) for name, value in latches.items()]

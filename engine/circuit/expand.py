@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
 from typing import Final
 
 from polewise.circuit import messages, values
@@ -40,8 +39,6 @@ from polewise.circuit.things import (
     InputThing,
     InstanceThing,
     LatchThing,
-    NodeThing,
-    PortThing,
     SequenceThing,
     SignalThing,
     SolveThing,
@@ -57,7 +54,9 @@ from polewise.grammar.source import no_span
 assert catalogue.KINDS  # the registry is full once this module is imported
 
 
-def expand(sources: Sources, *, overrides: Mapping[str, str] | None = None, study: str | None = None) -> tuple[Circuit | None, tuple[Diagnostic, ...]]:
+def expand(
+    sources: Sources, *, overrides: Mapping[str, str] | None = None, study: str | None = None
+) -> tuple[Circuit | None, tuple[Diagnostic, ...]]:
     """Expand a netlist.
 
     Args:
@@ -79,7 +78,7 @@ def expand(sources: Sources, *, overrides: Mapping[str, str] | None = None, stud
         find_domains(x)
         _finish(x)
         for name, thing in x.studies_by_name.items():
-            studies[name] = _guarded(x, thing, finish_study) or _no_study(thing)
+            _guarded(x, thing, lambda x, t: studies.update({t.flat: finish_study(x, t)}))
             if name != study:
                 check_study_givens(x, thing)
         check_values(x)
@@ -96,6 +95,7 @@ def expand(sources: Sources, *, overrides: Mapping[str, str] | None = None, stud
 def _wire_up(x: Expansion, sources: Sources) -> None:
     x.lower = lambda e, env: lower(x, e, env)
     x.csv = sources.csv
+    x.report.take_over(sources.broken_names, sources.lacks_files, sources.reported)
     x.makers = {
         GivenThing: values.work_out_given,
         InputThing: values.work_out_input,
@@ -114,24 +114,18 @@ def _in_order(x: Expansion, sources: Sources) -> tuple[Diagnostic, ...]:
 # ---------------------------------------------------------------- second pass
 
 
-@dataclass(frozen=True, slots=True)
-class _Nothing:
-    """Result of a step that failed on a depth no netlist needs."""
-
-
-def _guarded(x: Expansion, thing: Thing, make: Callable[[Expansion, Thing], object]) -> object:
+def _guarded(x: Expansion, thing: Thing, make: Callable[..., object]) -> None:
     try:
-        return make(x, thing)
+        make(x, thing)
     except RecursionError:
         x.report.add(messages.too_deep(thing.span, thing.flat))
-        return None
 
 
 def _finish(x: Expansion) -> None:
     # Values first: all that others read by name is known then, and what met something unfinished is checked once more.
     for thing in x.order:
         if isinstance(thing, ValueThing):
-            _guarded(x, thing, lambda x, t: x.ensure(t))
+            _guarded(x, thing, Expansion.ensure)
     for thing in x.recheck:
         _guarded(x, thing, values.lower_again)
     for thing in x.order:
@@ -197,10 +191,6 @@ _FINISH: Final[dict[type, Callable[..., None]]] = {
 # ---------------------------------------------------------------- the result
 
 
-def _no_study(thing: Thing) -> StudyDef:
-    return StudyDef(thing.flat, None, "settled", None, None, None, (), (), (), (), (), None, None, False, thing.span)
-
-
 def _circuit(x: Expansion, sources: Sources, studies: dict[str, StudyDef]) -> Circuit:
     nodes: dict[str, CircuitNode] = {}
     aliases: dict[str, str] = {}
@@ -257,6 +247,3 @@ def _circuit(x: Expansion, sources: Sources, studies: dict[str, StudyDef]) -> Ci
         inputs=tuple(x.inputs),
         names=x,
     )
-
-
-_ = (NodeThing, PortThing)

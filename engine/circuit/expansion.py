@@ -59,6 +59,8 @@ NESTING_MAX: Final = 40
 # Values that need one another are worked out by recursion to this depth, beyond it from a list.
 RECURSION_MAX: Final = 25
 DIAGNOSTICS_MAX: Final = 100
+# Codes that say that a name means nothing.
+MISSING_CODES: Final = frozenset({"unknown-name", "unknown-kind", "unknown-function", "unknown-reading", "unknown-setting", "unknown-given", "unknown-step"})
 
 
 class TooLarge(Exception):
@@ -78,13 +80,29 @@ class Report:
     def __init__(self) -> None:
         self.found: dict[tuple[str, str, int, int], Diagnostic] = {}
         self.mute = 0
+        self.broken_names: frozenset[str] = frozenset()
+        self.lacks_files = False
+        self.reported: frozenset[tuple[str, int, int]] = frozenset()
+
+    def take_over(self, broken_names: frozenset[str], lacks_files: bool, reported: frozenset[tuple[str, int, int]]) -> None:
+        """What reading found, so that nothing is said twice."""
+        self.broken_names, self.lacks_files, self.reported = broken_names, lacks_files, reported
 
     def add(self, diagnostic: Diagnostic) -> None:
         """Keep a diagnostic unless its place already has one of its code."""
-        if self.mute or len(self.found) >= DIAGNOSTICS_MAX:
+        if self.mute or len(self.found) >= DIAGNOSTICS_MAX or self._follows_from_reading(diagnostic):
             return
         span = diagnostic.span
         self.found.setdefault((diagnostic.code, span.source.name, span.start, span.end), diagnostic)
+
+    def _follows_from_reading(self, diagnostic: Diagnostic) -> bool:
+        """Whether something is only missing because its line or its file could not be read, which is reported already."""
+        span = diagnostic.span
+        if (span.source.name, span.start, span.end) in self.reported:
+            return True
+        if diagnostic.code not in MISSING_CODES:
+            return False
+        return (self.lacks_files and diagnostic.code in ("unknown-kind", "unknown-function")) or diagnostic.span.text in self.broken_names
 
     def note_call(self, first: int, span: Span, name: str) -> None:
         """Add to the diagnostics found since there were `first` that a call of a function led to them."""
@@ -214,7 +232,7 @@ class Expansion:
         self.time_events: list[TimeEvent] = []
         self.clock_events: list[ClockEvent] = []
         self.condition_events: list[ConditionEvent] = []
-        self.makers: dict[type, Callable[[Expansion, ValueThing], Quality]] = {}
+        self.makers: dict[type, Callable[..., Quality]] = {}
         # lowering an expression, set by circuit.lower
         self.lower: Callable[[syntax.Expression, Env], Value]
 
@@ -313,7 +331,8 @@ class Expansion:
         if thing.stage == BUSY:
             self.unfinished += 1
             if isinstance(thing, GivenThing | LatchThing):
-                self.report.add(messages.needs_itself(thing.span, thing.word, [t.flat for t in self.stack[self.stack.index(thing) :]]))
+                chain = self.stack[self.stack.index(thing) :] if thing in self.stack else [thing]
+                self.report.add(messages.needs_itself(thing.span, thing.word, [t.flat for t in chain]))
                 thing.quality = POISON
             return
         if self.depth >= RECURSION_MAX:
@@ -330,13 +349,10 @@ class Expansion:
                 self._work_out(waiting[-1])
                 waiting.pop()
             except _Needed as needed:
-                if needed.thing in waiting:  # a circle longer than the recursion: read as unknown, then found by the loop check
-                    circle = waiting[waiting.index(needed.thing) :]
-                    self.report.add(messages.algebraic_loop(needed.thing.span, [t.flat for t in circle]))
-                    for member in circle:
-                        member.quality, member.stage = POISON, DONE
-                    return
-                waiting.append(needed.thing)
+                if needed.thing in waiting:
+                    needed.thing.stage = BUSY  # a circle longer than the recursion: read as unknown here, told by circuit.check
+                else:
+                    waiting.append(needed.thing)
 
     def _work_out(self, thing: ValueThing) -> None:
         if thing.stage == DONE:

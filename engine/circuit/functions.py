@@ -18,6 +18,7 @@ from polewise.circuit.things import DefinitionThing
 from polewise.devices.kind import KINDS, PARTS
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import syntax
+from polewise.grammar.diagnostics import Diagnostic
 from polewise.kernels import opcodes as op
 
 if TYPE_CHECKING:
@@ -68,7 +69,7 @@ def lower_call(x: Expansion, e: syntax.Call, env: Env) -> Value:
     return _call_built_in(x, e, env, built_in)
 
 
-def _no_function(e: syntax.Call, scope: Scope, word: str | None) -> messages.Diagnostic:
+def _no_function(e: syntax.Call, scope: Scope, word: str | None) -> Diagnostic:
     if word is not None:
         return messages.not_a_function(e.name_span, e.name, word)
     if e.name in KINDS or e.name in PARTS:
@@ -123,10 +124,10 @@ def _call_built_in(x: Expansion, e: syntax.Call, env: Env, function: BuiltIn) ->
             x.report.add(messages.condition_as_number(place.span, f"`{e.name}`"))
             return poisoned(x)
         qualities.append(quality)
-    quality = _quality_of_call(x, e, function, qualities, places)
-    if quality is None:
+    result = _quality_of_call(x, e, function, qualities, places)
+    if result is None:
         return poisoned(x)
-    return function.make(x.graph, [node for node, _ in values]), quality
+    return function.make(x.graph, [node for node, _ in values]), result
 
 
 def _quality_of_call(x: Expansion, e: syntax.Call, function: BuiltIn, qualities: list[Quality], places: list[syntax.Expression]) -> Quality | None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from importlib.resources import files as package_files
@@ -21,6 +22,7 @@ CSV_BYTES_MAX: Final = 50_000_000
 FILES_MAX: Final = 200
 # `use "parts/berth.pole"` finds a file beside the using one first, then this part among the installed ones.
 PARTS_PREFIX: Final = "parts/"
+_WORD: Final = re.compile(r"[A-Za-z_][A-Za-z0-9_]*")
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,12 +34,18 @@ class Sources:
         csv: (name of the text, path as written in it) → a table's file.
         files: names of all netlists in the same order.
         has_errors: whether reading found errors; the circuit can still be looked through for more.
+        broken_names: words on lines that could not be read: what is declared there is not missing, and no second error.
+        reported: places (source name, start, end) of the errors found in reading, which are not said again.
+        lacks_files: whether a used file could not be read; then assemblies, functions and tables may be missing for that reason.
     """
 
     netlists: tuple[syntax.Netlist, ...]
     csv: Mapping[tuple[str, str], CsvFile]
     files: tuple[str, ...]
     has_errors: bool
+    broken_names: frozenset[str] = frozenset()
+    lacks_files: bool = False
+    reported: frozenset[tuple[str, int, int]] = frozenset()
 
     @property
     def statements(self) -> Iterator[syntax.Statement]:
@@ -99,18 +107,27 @@ class _Reader:
         self.csv: dict[tuple[str, str], CsvFile] = {}
         self.csv_read: dict[Path, CsvFile] = {}
         self.diagnostics: list[Diagnostic] = []
+        self.broken_names: set[str] = set()
+        self.lacks_files = False
         self.read: set[Path] = set()  # resolved
         self.open: list[_File] = []  # being read, outermost first
 
     def sources(self) -> tuple[Sources, tuple[Diagnostic, ...]]:
         """The result."""
         has_errors = any(d.is_error for d in self.diagnostics)
-        return Sources(tuple(self.netlists.values()), self.csv, tuple(self.netlists), has_errors), tuple(self.diagnostics)
+        reported = frozenset((d.span.source.name, d.span.start, d.span.end) for d in self.diagnostics if d.is_error)
+        sources = Sources(
+            tuple(self.netlists.values()), self.csv, tuple(self.netlists), has_errors, frozenset(self.broken_names), self.lacks_files, reported
+        )
+        return sources, tuple(self.diagnostics)
 
     def take(self, source: SourceText, file: _File) -> None:
         """Parse a text, read what it uses, then enter it."""
         netlist, found = parse(source)
         self.diagnostics += found
+        for diagnostic in found:
+            if diagnostic.is_error:
+                self.broken_names.update(_words_of_lines(diagnostic.span))
         if file.path is not None:
             self.read.add(file.path.resolve())
         self.open.append(file)
@@ -131,6 +148,7 @@ class _Reader:
             return
         found = self._find(use.path, span, user)
         if found is None:
+            self.lacks_files = True
             return
         assert found.path is not None
         resolved = found.path.resolve()
@@ -145,7 +163,9 @@ class _Reader:
             self.diagnostics.append(messages.too_many_files(span, FILES_MAX))
             return
         text = self.read_text(found.path, use.path, span, NETLIST_BYTES_MAX)
-        if text is not None:
+        if text is None:
+            self.lacks_files = True
+        else:
             self.take(SourceText(found.name, text), found)
 
     def _find(self, written: str, span: Span, user: _File) -> _File | None:
@@ -228,6 +248,12 @@ class _Reader:
             self.diagnostics.append(messages.not_utf8(place, name, line, problem.start))
             return None
         return text.replace("\r\n", "\n").replace("\r", "\n")
+
+
+def _words_of_lines(span: Span) -> list[str]:
+    """Names on the lines a span touches."""
+    last = span.source.position(max(span.start, span.end - 1))[0]
+    return [word for line in range(span.line, last + 1) for word in _WORD.findall(span.source.line_text(line))]
 
 
 def _refused_spelling(written: str) -> str | None:

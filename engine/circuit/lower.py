@@ -46,7 +46,7 @@ def _number_once(x: Expansion, e: syntax.Number, env: Env) -> Value:
         thing = env.scope.find(symbol)
         # A node called `m` is no factor; only names that have a value could have been meant.
         if symbol in env.frame or (env.parameters is not None and symbol in env.parameters) or (thing is not None and _could_multiply(thing)):
-            x.report.add(messages.unit_or_name(e.span, e.unit.symbol, symbol, None if thing is None else thing.span))
+            x.report.add(messages.joined_name(e.span, e.unit.symbol, symbol, None if thing is None else thing.span))
             return node, POISON
     return node, dimensions.quality_of_unit(e.unit)
 

@@ -77,7 +77,9 @@ def not_utf8(span: Span, name: str, line: int, offset: int) -> Diagnostic:
 
 def path_refused(span: Span, path: str, reason: str) -> Diagnostic:
     """Outside of what a netlist may read."""
-    return _error("path-refused", f"`{path}` is not read: {reason}", span, hint="A netlist reads its own folder, folders inside it, and installed parts.")
+    return _error(
+        "path-refused", f"`{path}` is not read: {reason}", span, hint="A netlist reads its own folder, folders inside it, and installed parts."
+    )
 
 
 def use_ending(span: Span, path: str) -> Diagnostic:
@@ -102,7 +104,9 @@ def csv_unreadable(span: Span, path: str) -> Diagnostic:
 
 def csv_columns_needed(span: Span, path: str, header: Sequence[str]) -> Diagnostic:
     """More than two columns and none named."""
-    return _error("csv-column", f"`{path}` has the columns {_listed(header)}; two must be chosen", span, hint='Write `columns "x", "y"` behind the file.')
+    return _error(
+        "csv-column", f"`{path}` has the columns {_listed(header)}; two must be chosen", span, hint='Write `columns "x", "y"` behind the file.'
+    )
 
 
 def csv_no_column(span: Span, path: str, column: str, header: Sequence[str]) -> Diagnostic:
@@ -200,7 +204,9 @@ def port_with_brace(span: Span) -> Diagnostic:
 
 def near_name(span: Span, name: str, other: str, other_span: Span) -> Diagnostic:
     """A node used once, close to another."""
-    return _warning("near-name", f"the node `{name}` is used once and looks like `{other}`", span, labels=_at(other_span, "the other node"), hint=_meant(other))
+    return _warning(
+        "near-name", f"the node `{name}` is used once and looks like `{other}`", span, labels=_at(other_span, "the other node"), hint=_meant(other)
+    )
 
 
 # ---------------------------------------------------------------- using names
@@ -213,7 +219,11 @@ def unknown_name(span: Span, name: str, nearest: str | None) -> Diagnostic:
 
 def outside_assembly(span: Span, name: str, word: str, declared: Span, assembly: str) -> Diagnostic:
     """An assembly that reaches out."""
-    hint = f"Make `{name}` a port of `{assembly}`." if word == "node" else f"Hand it in: `input {name}` in `{assembly}`, `{name} = {name}` where it is placed."
+    hint = (
+        f"Make `{name}` a port of `{assembly}`."
+        if word == "node"
+        else f"Hand it in: `input {name}` in `{assembly}`, `{name} = {name}` where it is placed."
+    )
     headline = f"the assembly `{assembly}` does not see the {word} `{name}` outside it"
     return _error("outside-assembly", headline, span, labels=_declared(declared), hint=hint)
 
@@ -252,7 +262,9 @@ def not_a_value(span: Span, name: str, word: str, readings: Sequence[str], decla
 
 def star_misplaced(span: Span) -> Diagnostic:
     """`{*}` where one thing is asked."""
-    return _error("star-misplaced", "`{*}` stands for many things; here one is asked for", span, hint="Use it in `sum(…)`, `min(…)`, `max(…)` or `keep`.")
+    return _error(
+        "star-misplaced", "`{*}` stands for many things; here one is asked for", span, hint="Use it in `sum(…)`, `min(…)`, `max(…)` or `keep`."
+    )
 
 
 def nothing_selected(span: Span) -> Diagnostic:
@@ -279,7 +291,7 @@ def own_name_hides(span: Span, name: str, word: str, declared: Span) -> Diagnost
 
 def filter_variable_outside(span: Span, name: str) -> Diagnostic:
     """`s` outside `filtered by`."""
-    return _error("filter-variable", f"`{name}` is the variable of a filter and stands behind `filtered by`", span)
+    return _error("filter-letter", f"`{name}` is the variable of a filter and stands behind `filtered by`", span)
 
 
 def function_reads_outside(span: Span, name: str, word: str, declared: Span | None) -> Diagnostic:
@@ -393,7 +405,9 @@ def varying_exponent(span: Span, base: Span, of_base: Quality) -> Diagnostic:
     """(5 V) ^ n with n varying."""
     labels = _at(base, describe(of_base))
     headline = "with an exponent that varies, what is raised must be a plain number"
-    return _error("exponent", headline, span, labels=labels, hint=f"Divide by a value in {unit_text(of_base)} first: `(x / 1 {unit_text(of_base)})^n`.")
+    return _error(
+        "exponent", headline, span, labels=labels, hint=f"Divide by a value in {unit_text(of_base)} first: `(x / 1 {unit_text(of_base)})^n`."
+    )
 
 
 def exponent_too_large(span: Span, base: Span, of_base: Quality) -> Diagnostic:
@@ -401,16 +415,22 @@ def exponent_too_large(span: Span, base: Span, of_base: Quality) -> Diagnostic:
     return _error("exponent", "this exponent gives a unit beyond all physics", span, labels=_at(base, describe(of_base)))
 
 
-def unit_or_name(span: Span, unit: str, symbol: str, declared: Span | None) -> Diagnostic:
+def joined_name(span: Span, unit: str, symbol: str, declared: Span | None) -> Diagnostic:
     """`50 Hz*T` with a given T."""
     headline = f"`{symbol}` in `{unit}` is a unit here, and it is also a name that is declared"
     hint = f"For arithmetic leave a blank before the operator; for the unit rename `{symbol}`."
-    return _error("unit-or-name", headline, span, labels=_declared(declared), hint=hint)
+    return _error("joined-name", headline, span, labels=_declared(declared), hint=hint)
 
 
 def degrees_added(span: Span, right: Span) -> Diagnostic:
     """20 degC + 5 degC."""
-    return _error("degrees-added", "degC is a point on a scale that starts at -273.15; a difference is in K", right, labels=_at(span, "this adds"), hint="Write `5 K`.")
+    return _error(
+        "degrees-added",
+        "degC is a point on a scale that starts at -273.15; a difference is in K",
+        right,
+        labels=_at(span, "this adds"),
+        hint="Write `5 K`.",
+    )
 
 
 def division_by_zero(span: Span) -> Diagnostic:
@@ -464,18 +484,32 @@ def given_missing(span: Span, name: str, document: str | None, declared: Span) -
     """`given x in V` that nobody supplies."""
     meaning = f" ({document})" if document else ""
     labels = _declared(declared) if declared != span else ()
-    return _error("given-missing", f"the given `{name}`{meaning} has no value", span, labels=labels, hint=f"Supply it: `{name.rpartition('.')[2]} = …`, or from outside.")
+    return _error(
+        "given-missing",
+        f"the given `{name}`{meaning} has no value",
+        span,
+        labels=labels,
+        hint=f"Supply it: `{name.rpartition('.')[2]} = …`, or from outside.",
+    )
 
 
 def input_missing(span: Span, name: str, document: str | None, declared: Span | None) -> Diagnostic:
     """An input without default that is not bound."""
     meaning = f" ({document})" if document else ""
-    return _error("input-missing", f"the input `{name}`{meaning} is not supplied", span, labels=_declared(declared), hint=f"Write `{name.rpartition('.')[2]} = …`.")
+    return _error(
+        "input-missing",
+        f"the input `{name}`{meaning} is not supplied",
+        span,
+        labels=_declared(declared),
+        hint=f"Write `{name.rpartition('.')[2]} = …`.",
+    )
 
 
 def override_unreadable(span: Span, path: str, text: str) -> Diagnostic:
     """--given x=abc."""
-    return _error("override-value", f"`{text}` is no value for `{path}`", span, hint="Write a number with its unit, such as `200 uH`, or `true` or `false`.")
+    return _error(
+        "override-value", f"`{text}` is no value for `{path}`", span, hint="Write a number with its unit, such as `200 uH`, or `true` or `false`."
+    )
 
 
 def unknown_given(span: Span, path: str, nearest: str | None, word: str | None) -> Diagnostic:
@@ -561,7 +595,9 @@ def samplers_in_circle(span: Span, others: Sequence[Span]) -> Diagnostic:
     """Sampled values that need one another."""
     labels = [Label(other, "and this") for other in others[:LISTED_MAX]]
     headline = "sampled values need one another at the same instant"
-    return _error("samplers-in-circle", headline, span, labels=labels, hint="Let one of them take the value of the period before: `filtered by z^-1 in z at …`.")
+    return _error(
+        "samplers-in-circle", headline, span, labels=labels, hint="Let one of them take the value of the period before: `filtered by z^-1 in z at …`."
+    )
 
 
 # ---------------------------------------------------------------- tables
@@ -623,7 +659,9 @@ def kinds_joined(span: Span, kind_a: str, place_a: Span, kind_b: str, place_b: S
     """A box between a shaft and a wire."""
     labels = (Label(place_a, f"{kind_a} from here"), Label(place_b, f"{kind_b} from here"))
     headline = f"this joins an island of {kind_a} with one of {kind_b}"
-    return _error("kinds-joined", headline, span, labels=labels, hint="Couple them by equations that read the other side, as in `[emf: v = k * shaft.speed]`.")
+    return _error(
+        "kinds-joined", headline, span, labels=labels, hint="Couple them by equations that read the other side, as in `[emf: v = k * shaft.speed]`."
+    )
 
 
 _BOX_UNITS: Final = {
@@ -669,8 +707,12 @@ def power_bound_not_positive(span: Span, relation: str) -> Diagnostic:
 def power_relation(span: Span, relation: str, value: float) -> Diagnostic:
     """-5 kW above 300 V."""
     if relation == "above":
-        return _error("power-relation", "a negative power delivers; it is bounded `below` its highest voltage", span, hint="Write `below` and that voltage.")
-    return _error("power-relation", "a positive power is a load; it is bounded `above` its lowest voltage", span, hint="Write `above`, or a negative power.")
+        return _error(
+            "power-relation", "a negative power delivers; it is bounded `below` its highest voltage", span, hint="Write `below` and that voltage."
+        )
+    return _error(
+        "power-relation", "a positive power is a load; it is bounded `above` its lowest voltage", span, hint="Write `above`, or a negative power."
+    )
 
 
 def storage_not_positive(span: Span, found: Quality, value: float) -> Diagnostic:
@@ -680,7 +722,9 @@ def storage_not_positive(span: Span, found: Quality, value: float) -> Diagnostic
 
 def no_resistance(span: Span) -> Diagnostic:
     """[0 ohm]."""
-    return _error("not-positive", "a resistance of zero is a bare wire", span, hint="Write `a -- b`; with a name, `link: a -- b`, its current can be read.")
+    return _error(
+        "not-positive", "a resistance of zero is a bare wire", span, hint="Write `a -- b`; with a name, `link: a -- b`, its current can be read."
+    )
 
 
 def spring_by_stiffness(span: Span, unit: str) -> Diagnostic:
@@ -702,7 +746,12 @@ def stored_of_varying(span: Span, found: Quality, direct: Quality) -> Diagnostic
 
 def equation_without_own(span: Span, across: str, through: str) -> Diagnostic:
     """[bus.v = 400 V]."""
-    return _error("equation-own", f"this equation does not hold the box's own `{across}` or `{through}`", span, hint="For any other equation write `solve … from …`.")
+    return _error(
+        "equation-own",
+        f"this equation does not hold the box's own `{across}` or `{through}`",
+        span,
+        hint="For any other equation write `solve … from …`.",
+    )
 
 
 # ---------------------------------------------------------------- placements and settings
@@ -743,7 +792,12 @@ def terminal_needs_node(span: Span, terminal: str, kind: str) -> Diagnostic:
 
 def too_many_arguments(span: Span, kind: str, terminals: Sequence[str], count: int) -> Diagnostic:
     """berth(a, b, c, d)."""
-    return _error("too-many-arguments", f"`{kind}` has {_plural(len(terminals), 'terminal')}: {_listed(terminals)}; {count} given", span, hint="Settings have names: `name = value`.")
+    return _error(
+        "too-many-arguments",
+        f"`{kind}` has {_plural(len(terminals), 'terminal')}: {_listed(terminals)}; {count} given",
+        span,
+        hint="Settings have names: `name = value`.",
+    )
 
 
 def too_many_settings(span: Span, kind: str, names: Sequence[str]) -> Diagnostic:
@@ -758,7 +812,9 @@ def unknown_setting(span: Span, name: str, kind: str, nearest: str | None, known
     if hint is None and known:
         hint = f"It has {_listed(known)}."
     if word is not None:
-        return _error("unknown-setting", f"`{name}` is {_a(word)} inside `{kind}` and can't be set from outside", span, hint="Make it a `given` or an `input`.")
+        return _error(
+            "unknown-setting", f"`{name}` is {_a(word)} inside `{kind}` and can't be set from outside", span, hint="Make it a `given` or an `input`."
+        )
     return _error("unknown-setting", f"`{kind}` has no setting `{name}`", span, hint=hint, replace=nearest)
 
 
@@ -808,7 +864,12 @@ def inductor_wanted(span: Span, setting: str, word: str | None) -> Diagnostic:
 
 def block_argument(span: Span, kind: str, count: int, settings: Sequence[str]) -> Diagnostic:
     """pi_control()."""
-    return _error("block-argument", f"`{kind}` takes one input; {'none' if count == 0 else count} given", span, hint=f"Settings have names: {_listed(settings)}.")
+    return _error(
+        "block-argument",
+        f"`{kind}` takes one input; {'none' if count == 0 else count} given",
+        span,
+        hint=f"Settings have names: {_listed(settings)}.",
+    )
 
 
 def pi_gains_differ(span: Span, ki: Quality, kp_span: Span, kp: Quality) -> Diagnostic:
@@ -855,7 +916,12 @@ def sequence_empty(span: Span, name: str) -> Diagnostic:
 
 def no_next_step(span: Span, step: str, sequence: str) -> Diagnostic:
     """until in the last step."""
-    return _error("sequence-end", f"`{step}` is the last step of `{sequence}`; its `until` leads nowhere", span, hint="Leave `until` out, or add a step behind it.")
+    return _error(
+        "sequence-end",
+        f"`{step}` is the last step of `{sequence}`; its `until` leads nowhere",
+        span,
+        hint="Leave `until` out, or add a step behind it.",
+    )
 
 
 def unknown_step(span: Span, name: str, sequence: str, nearest: str | None) -> Diagnostic:
@@ -904,7 +970,12 @@ def requirement_without_bound(span: Span, subject: Span) -> Diagnostic:
 
 def condition_with_bound(span: Span, relation: str) -> Diagnostic:
     """require a > b above 5."""
-    return _error("requirement-bound", f"this is true or false; `{relation}` asks for a number", span, hint="Leave the bound out: the condition itself must hold.")
+    return _error(
+        "requirement-bound",
+        f"this is true or false; `{relation}` asks for a number",
+        span,
+        hint="Leave the bound out: the condition itself must hold.",
+    )
 
 
 def unknown_measure(span: Span, name: str, nearest: str | None, known: Sequence[str]) -> Diagnostic:

@@ -41,6 +41,8 @@ def nearest(name: str, candidates: Iterable[str]) -> str | None:
             continue
         if candidate.casefold() == folded:
             return candidate
+        if len(name) < 2 or len(candidate) < 2:
+            continue
         d = distance(folded, candidate.casefold(), limit)
         if d <= limit and (best is None or (d, candidate) < best):
             best = d, candidate

@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import messages
 from polewise.circuit.asking import Asked, constant_number, fits, positive_time
 from polewise.circuit.declare import declare_path_given
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, TIME, Quality, settled
@@ -14,10 +14,10 @@ from polewise.circuit.events import finish_event
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.functions import BUILT_IN
 from polewise.circuit.model import ClockEvent, ConditionEvent, Quantity, Requirement, StudyDef, TimeEvent
-from polewise.circuit.naming import has_star, selected
+from polewise.circuit.naming import find_thing, has_star, selected
 from polewise.circuit.near import nearest
 from polewise.circuit.scope import Env
-from polewise.circuit.things import StudyThing
+from polewise.circuit.things import GivenThing, StudyThing, Thing
 from polewise.expression.graph import Node
 from polewise.grammar import syntax
 from polewise.grammar.source import Span
@@ -68,8 +68,6 @@ def declare_study_givens(x: Expansion, name: str) -> None:
 
 def check_study_givens(x: Expansion, thing: StudyThing) -> None:
     """Givens of a study that this expansion is not made for: their targets and units, all the same."""
-    from polewise.circuit.things import GivenThing
-
     for order in thing.written.orders:
         if not isinstance(order, syntax.Given) or order.value is None:
             continue
@@ -80,7 +78,11 @@ def check_study_givens(x: Expansion, thing: StudyThing) -> None:
         target = _quiet_find(x, order.target, env)
         if not isinstance(target, GivenThing):
             known = list(x.givens)
-            x.report.add(messages.unknown_given(order.target.span, order.target.span.text, nearest(order.target.span.text, known), None if target is None else target.word))
+            x.report.add(
+                messages.unknown_given(
+                    order.target.span, order.target.span.text, nearest(order.target.span.text, known), None if target is None else target.word
+                )
+            )
             continue
         if quality is POISON:
             continue
@@ -91,9 +93,7 @@ def check_study_givens(x: Expansion, thing: StudyThing) -> None:
         fits(x, quality, Asked(target.quality, f"the given `{target.flat}`", target.span), order.value.span)
 
 
-def _quiet_find(x: Expansion, reference: syntax.Reference, env: Env) -> object:
-    from polewise.circuit.naming import find_thing
-
+def _quiet_find(x: Expansion, reference: syntax.Reference, env: Env) -> Thing | None:
     x.report.mute += 1
     try:
         return find_thing(x, reference, env)
@@ -104,8 +104,9 @@ def _quiet_find(x: Expansion, reference: syntax.Reference, env: Env) -> object:
 def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
     """A study as read."""
     written = thing.written
-    start, start_study, start_time = "cold", None, None
     start = "settled"
+    start_study: str | None = None
+    start_time: float | None = None
     run_for = tolerance = None
     sampling = None
     keep: list[Quantity] = []
@@ -227,7 +228,8 @@ def _check_requirement_name(x: Expansion, made: Requirement, others: list[Requir
 
 def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> Requirement | None:
     subject = order.subject
-    measure, parameters = "value", ()
+    measure = "value"
+    parameters: tuple[float, ...] = ()
     document = order.document
     text = " ".join(_text_of(order).split())
     name = order.name if order.name is not None else f"requirement {number}"
@@ -278,14 +280,16 @@ def _text_of(order: syntax.Require) -> str:
     return order.subject.span.to(end).text
 
 
-def _measured(
-    x: Expansion, call: syntax.Call, rule: MeasureRule, env: Env
-) -> tuple[tuple[Node, Quality], tuple[float, ...], Quality, Span] | None:
+def _measured(x: Expansion, call: syntax.Call, rule: MeasureRule, env: Env) -> tuple[tuple[Node, Quality], tuple[float, ...], Quality, Span] | None:
     wanted_count = 1 + len(rule.parameters)
     by_name = {s.name: s for s in call.settings}
     extra = [s for s in call.settings if s.name not in rule.parameters]
     if extra:
-        x.report.add(messages.unknown_setting(extra[0].name_span, extra[0].name, rule.name, nearest(extra[0].name, rule.parameters), list(rule.parameters), None))
+        x.report.add(
+            messages.unknown_setting(
+                extra[0].name_span, extra[0].name, rule.name, nearest(extra[0].name, rule.parameters), list(rule.parameters), None
+            )
+        )
         return None
     if len(call.arguments) + len(by_name) != wanted_count or not call.arguments:
         x.report.add(messages.argument_count(call.span, rule.name, len(call.arguments), ", ".join(("x", *rule.parameters)), None))

@@ -39,7 +39,9 @@ def read_table(x: Expansion, e: syntax.Call, env: Env, thing: DefinitionThing) -
     value = x.graph.value_of(node)
     cubic = x.graph.tables[thing.number]
     if value is not None and cubic.closed and not cubic.knots[0] <= value <= cubic.knots[-1]:
-        x.report.add(messages.outside_table(e.arguments[0].span, table.name, value, cubic.knots[0], cubic.knots[-1], thing.quality_in, table.name_span))
+        x.report.add(
+            messages.outside_table(e.arguments[0].span, table.name, value, cubic.knots[0], cubic.knots[-1], thing.quality_in, table.name_span)
+        )
         return poisoned(x)
     if table.outside is not None and "repeat" in table.outside:
         node = _wrapped(x, node, cubic.knots[0], cubic.knots[-1])

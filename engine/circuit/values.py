@@ -53,11 +53,11 @@ def work_out_given(x: Expansion, thing: GivenThing) -> Quality:
 def _chosen_value(x: Expansion, thing: GivenThing, default: Value | None, asked: Quality) -> tuple[Value | None, syntax.Tolerance | None]:
     """The value that wins, and the tolerance written with it."""
     wants = Asked(asked, f"the given `{thing.flat}`", thing.span)
+    outer = x.path_givens.outermost(thing.flat)
     text = x.overrides.get(thing.flat)
     if text is not None:
         x.used_overrides.add(thing.flat)
         return value_from_outside(x, thing.flat, text, wants), None
-    outer = x.path_givens.outermost(thing.flat)
     if outer is not None:
         written = outer.written
         assert written.value is not None
@@ -149,7 +149,15 @@ def finish_given(x: Expansion, thing: GivenThing) -> None:
     written = thing.written
     normal = written.tolerance.normal if written.tolerance is not None else False
     x.givens[thing.flat] = GivenDef(
-        thing.flat, thing.number, thing.quality.dimension, thing.tolerance, normal, written.document, thing.scope.path, thing.span, thing.quality is CONDITION
+        thing.flat,
+        thing.number,
+        thing.quality.dimension,
+        thing.tolerance,
+        normal,
+        written.document,
+        thing.scope.path,
+        thing.span,
+        thing.quality is CONDITION,
     )
 
 
@@ -212,9 +220,7 @@ def finish_input(x: Expansion, thing: InputThing) -> None:
         x.inputs.append(thing.flat)
         x.latches[thing.flat] = LatchDef(thing.flat, thing.node, thing.quality.dimension, thing.quality is CONDITION, "", thing.span)
     else:
-        x.signals[thing.flat] = SignalDef(
-            thing.flat, thing.node, thing.quality.dimension, thing.scope.path, thing.span, thing.quality is CONDITION
-        )
+        x.signals[thing.flat] = SignalDef(thing.flat, thing.node, thing.quality.dimension, thing.scope.path, thing.span, thing.quality is CONDITION)
 
 
 # ---------------------------------------------------------------- signals, states, unknowns, latches
@@ -336,9 +342,7 @@ def finish_latch(x: Expansion, thing: LatchThing) -> None:
     x.ensure(thing)
     if thing.quality is POISON or thing.initial < 0:
         return
-    x.latches[thing.flat] = LatchDef(
-        thing.flat, thing.initial, thing.quality.dimension, thing.quality is CONDITION, thing.scope.path, thing.span
-    )
+    x.latches[thing.flat] = LatchDef(thing.flat, thing.initial, thing.quality.dimension, thing.quality is CONDITION, thing.scope.path, thing.span)
 
 
 def lower_again(x: Expansion, thing: ValueThing) -> None:
@@ -347,4 +351,3 @@ def lower_again(x: Expansion, thing: ValueThing) -> None:
         quality = thing.quality
         thing.work_out(x)
         thing.quality = quality
-
