@@ -219,7 +219,7 @@ def set_tolerance(work: Workspace, rtol: float) -> None:
     work.state[S_BAND] = max(1.0, tolerance * work.state[S_NEWTON_TOL] / BAND_RELATIVE)
 
 
-def grow(work: Workspace, status: int) -> Workspace:
+def grow(program: Program, work: Workspace, status: int) -> Workspace:
     """A workspace with twice the room that a status asked for and the same contents; the old one must not be used again."""
     head = work.W
     sizes = _Sizes(int(head[layout.SIZE_RECORD]), int(head[layout.SIZE_HISTORY]), int(head[layout.SIZE_FACTORS]))
@@ -230,7 +230,7 @@ def grow(work: Workspace, status: int) -> Workspace:
     elif status == Status.BUFFER_FULL:
         sizes = sizes._replace(record=2 * sizes.record)
     at = int(head[layout.REAL + layout.LU_ORDER])
-    new = _allocate(work.program, sizes, head[at : at + work.program.n].copy())
+    new = _allocate(program, sizes, head[at : at + program.n].copy())
     new.state[:], new.counter[:] = work.state, work.counter
     for name in _VIEWS:
         if not name.startswith("history_") or name == "history_start":
