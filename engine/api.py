@@ -103,7 +103,7 @@ def read_text(text: str, *, name: str = "<text>", given: Mapping[str, Value] | N
 
 
 def _read(sources: Sources, found: Sequence[Diagnostic], given: Mapping[str, Value] | None) -> tuple[System | None, tuple[Diagnostic, ...]]:
-    overrides = {name: value_text(value) for name, value in (given or {}).items()}
+    overrides = {name: _outside(value) for name, value in (given or {}).items()}
     prepared, more = _prepare(sources, overrides, None)
     found = _joined(found, more)
     if prepared is None:
@@ -128,11 +128,11 @@ def _checked(system: System | None, found: Sequence[Diagnostic]) -> System:
     return system
 
 
-def value_text(value: Value) -> str:
-    """A value from outside as text: numbers are in SI, texts as in a netlist ("200 uH")."""
+def _outside(value: Value) -> str | float:
+    """A value from outside as the circuit stage takes it: a text as in a netlist ("200 uH", "true"), or a number in SI."""
     if isinstance(value, bool):
         return "true" if value else "false"
-    return value if isinstance(value, str) else repr(float(value))
+    return value if isinstance(value, str) else float(value)
 
 
 @dataclass(frozen=True, slots=True)
@@ -143,7 +143,7 @@ class _Prepared:
     network: Network
 
 
-def _prepare(sources: Sources, overrides: Mapping[str, str], study: str | None) -> tuple[_Prepared | None, tuple[Diagnostic, ...]]:
+def _prepare(sources: Sources, overrides: Mapping[str, str | float], study: str | None) -> tuple[_Prepared | None, tuple[Diagnostic, ...]]:
     """Expand and check the structure."""
     from polewise.network.structure import check_structure
 
@@ -180,7 +180,7 @@ class System:
     def __init__(
         self,
         sources: Sources,
-        overrides: Mapping[str, str],
+        overrides: Mapping[str, str | float],
         prepared: _Prepared,
         diagnostics: tuple[Diagnostic, ...],
         inputs: Mapping[str, float] | None = None,
@@ -248,7 +248,7 @@ class System:
         >>> round(divider.with_given({"r": "6 kohm"}).settled()["mid.v"], 6)
         9.0
         """
-        overrides = {**self._overrides, **{name: value_text(value) for name, value in values.items()}}
+        overrides = {**self._overrides, **{name: _outside(value) for name, value in values.items()}}
         other = _checked(*_read(self._sources, (), overrides))
         other._inputs = {name: value for name, value in self._inputs.items() if name in other.circuit.inputs}
         return other

@@ -137,7 +137,7 @@ def check_overrides(x: Expansion) -> None:
         x.report.add(messages.unknown_given(given.written.target.span, given.text, nearest(given.text, known), _word_at(x, given.text)))
     for path, text in x.overrides.items():
         if path not in x.used_overrides:
-            span = Span(SourceText(f"given {path}", text), 0, len(text))
+            span = Span(SourceText(f"given {path}", str(text)), 0, len(str(text)))
             x.report.add(messages.unknown_given(span, path, nearest(path, [*known, *x.inputs]), _word_at(x, path)))
 
 

@@ -55,13 +55,13 @@ assert catalogue.KINDS  # the registry is full once this module is imported
 
 
 def expand(
-    sources: Sources, *, overrides: Mapping[str, str] | None = None, study: str | None = None
+    sources: Sources, *, overrides: Mapping[str, str | float] | None = None, study: str | None = None
 ) -> tuple[Circuit | None, tuple[Diagnostic, ...]]:
     """Expand a netlist.
 
     Args:
         sources: what circuit.load read; its own diagnostics are not repeated here.
-        overrides: path of a given → value as text, "200 uH", "true"; they count before everything the files say.
+        overrides: path of a given → value as text, "200 uH", "true", or a number in SI; they count before everything the files say.
         study: the study whose givens apply.
     Returns:
         The circuit, None where there are errors (those of `sources` included), and what is wrong or doubtful, in the order of the text.

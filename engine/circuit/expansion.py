@@ -60,7 +60,7 @@ NESTING_MAX: Final = 40
 RECURSION_MAX: Final = 25
 DIAGNOSTICS_MAX: Final = 100
 # Codes that say that a name means nothing.
-MISSING_CODES: Final = frozenset({"unknown-name", "unknown-kind", "unknown-function", "unknown-reading", "unknown-setting", "unknown-given", "unknown-step"})
+MISSING_CODES: Final = frozenset(f"unknown-{what}" for what in ("name", "kind", "function", "reading", "setting", "given", "step"))
 
 
 class TooLarge(Exception):
@@ -180,7 +180,7 @@ class PathGivens:
 class Expansion:
     """State of one expansion. Nothing outside circuit.expand keeps it, but the reading index of the finished circuit."""
 
-    def __init__(self, overrides: Mapping[str, str]) -> None:
+    def __init__(self, overrides: Mapping[str, str | float]) -> None:
         self.graph = ExpressionGraph()
         self.report = Report()
         self.top = Scope("", "", {})

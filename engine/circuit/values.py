@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Final
 
 from polewise.circuit import dimensions, messages
@@ -92,8 +93,12 @@ def _varying_leaf(x: Expansion, node: Node) -> str:
     return "time" if kind == "time" else name
 
 
-def value_from_outside(x: Expansion, path: str, text: str, asked: Asked) -> Value | None:
-    """A value as text, from a command line or from Python."""
+def value_from_outside(x: Expansion, path: str, text: str | float, asked: Asked) -> Value | None:
+    """A value from a command line or from Python: a text with its unit, or a number in SI of what is asked for."""
+    if isinstance(text, float):
+        if asked.quality.is_number and asked.quality is not UNKNOWN and math.isfinite(text):
+            return x.graph.constant(text), asked.quality
+        text = repr(text)
     source = SourceText(f"given {path}", text)
     span = Span(source, 0, len(text))
     plain = text.strip()

@@ -43,7 +43,7 @@ _WORDS: Final[dict[Dimension, str]] = {
     units.CHARGE: "charge",
     units.FLUX: "flux",
     units.TIME: "time",
-    units.NONE: "number",
+    units.NONE: "plain number",
 }
 
 

@@ -120,6 +120,10 @@ class ParquetSink:
         """
         try:
             self.flush()
+        except OutputFailed:
+            self.abandon()
+            raise
+        try:
             self._writer.add_key_value_metadata({f"{_PREFIX}complete": json.dumps(complete), f"{_PREFIX}end_s": repr(end_s)})
             self._writer.close()
             self._file.close()

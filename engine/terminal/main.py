@@ -48,13 +48,14 @@ def run_command_line(arguments: Sequence[str] | None = None) -> int:
         click.echo("stopped", err=True)
         return EXIT_NOT_FINISHED
     except PolewiseError as error:
-        tell(error.diagnostics)
+        if "--json" in (sys.argv[1:] if arguments is None else arguments):
+            tell_as_json(error.diagnostics, error.exit_code)
+        else:
+            tell(error.diagnostics)
         return error.exit_code
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())  # whoever read our output has gone: end quietly
         return EXIT_NOT_FINISHED
-    except RecursionError as error:
-        return _apologise(error)
     except Exception as error:
         return _apologise(error)
 
@@ -114,7 +115,7 @@ def commands() -> None:
     """
 
 
-@commands.command(epilog=_CODES)
+@commands.command(epilog=_CODES, short_help="Read FILE; say what is in it, or all that is wrong.")
 @_file
 @_givens
 @_as_json
@@ -128,7 +129,7 @@ def check(file: Path, given: dict[str, str], as_json: bool) -> int:
     return run_check(file, given, as_json)
 
 
-@commands.command(epilog=_CODES)
+@commands.command(epilog=_CODES, short_help="Find the operating point of FILE.")
 @_file
 @_givens
 @click.option("--all", "inner", is_flag=True, help="Nodes and paths inside assemblies too.")
@@ -143,15 +144,22 @@ def settle(file: Path, given: dict[str, str], inner: bool, as_json: bool) -> int
     return run_settle(file, given, inner, as_json)
 
 
-@commands.command(epilog=_CODES + " A run stopped by Ctrl-C keeps what is done, marks it incomplete, and ends with 3.")
+@commands.command(
+    epilog=_CODES + " A run stopped by Ctrl-C keeps what is done, marks it incomplete, and ends with 3.",
+    short_help="Run the studies of FILE and judge its requirements.",
+)
 @_file
 @click.argument("studies", nargs=-1, metavar="[STUDY]...")
 @_givens
-@click.option("--out", type=click.Path(path_type=Path, file_okay=False), help="Folder for Parquet, figures and summaries; made if missing.")
+@click.option(
+    "--out", metavar="FOLDER", type=click.Path(path_type=Path, file_okay=False), help="Folder for Parquet, figures and summaries; made if missing."
+)
 @click.option("--csv", "csv", is_flag=True, help="Also write CSV into the --out folder.")
 @click.option("--no-figure", is_flag=True, help="Draw no figures.")
 @click.option("--junit", type=click.Path(path_type=Path, dir_okay=False), help="Write the verdicts as JUnit XML to this file.")
-@click.option("--tolerance", type=click.FloatRange(1e-12, 1e-2), help="Relative tolerance of the solver, instead of the studies' own.")
+@click.option(
+    "--tolerance", type=click.FloatRange(1e-12, 1e-2), metavar="NUMBER", help="Relative tolerance of the solver, instead of the studies' own."
+)
 @click.option("--sampling", type=click.Choice(["exact", "mean"]), help="Sampled blocks: every instant, or their mean equivalents.")
 @_as_json
 def run(
@@ -178,16 +186,16 @@ def run(
     return run_studies(file, studies, options)
 
 
-@commands.command()
+@commands.command(short_help="Explain a message by its code.")
 @click.argument("code", required=False)
 def explain(code: str | None) -> int:
-    """Explain a message by its CODE, such as unit-mismatch; without CODE, list all codes."""
+    """Explain a message by its CODE, such as dangling-node; without CODE, list all codes."""
     from polewise.terminal.explain_command import run_explain
 
     return run_explain(code)
 
 
-@commands.command(name="format")
+@commands.command(name="format", short_help="Print FILE in canonical layout.")
 @_file
 def format_file(file: Path) -> int:
     """Print FILE in canonical layout.
@@ -209,12 +217,17 @@ def read_or_tell(file: Path, given: dict[str, str], as_json: bool) -> System | N
     system, found = read(file, given=given)
     if system is None:
         if as_json:
-            from polewise.terminal.json_form import diagnostics_content
-
-            print_json({"exit_code": EXIT_NETLIST_WRONG, "diagnostics": diagnostics_content(found)})
+            tell_as_json(found, EXIT_NETLIST_WRONG)
         else:
             tell(found)
     return system
+
+
+def tell_as_json(diagnostics: Sequence[Diagnostic], exit_code: int) -> None:
+    """Diagnostics as one JSON object on the output."""
+    from polewise.terminal.json_form import diagnostics_content
+
+    print_json({"exit_code": exit_code, "diagnostics": diagnostics_content(diagnostics)})
 
 
 def print_json(content: dict[str, Any]) -> None:

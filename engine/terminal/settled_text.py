@@ -202,8 +202,8 @@ def _assemblies(settled: Settled, circuit: Circuit, style: Style) -> list[str]:
         else:
             total = sum(losses[m] for m in members)
             rows.append([f"{name} ({len(members)})", circuit.assemblies[members[0]].kind, f"{format_value(total, POWER)} in all"])
-    headings = (Heading("assembly", most=44), Heading("kind"), Heading("lost inside", right=True))
-    return ["", title_line("Losses", style), *table(headings, rows[:_ROWS_MAX], style)]
+    headings = (Heading("assembly", most=44), Heading("kind"), Heading("power", right=True))
+    return ["", title_line("Dissipated inside assemblies", style), *table(headings, rows[:_ROWS_MAX], style)]
 
 
 def _power(settled: Settled, style: Style) -> list[str]:
@@ -211,7 +211,7 @@ def _power(settled: Settled, style: Style) -> list[str]:
     rows = [
         ["delivered", format_value(balance.delivered_w, POWER), ""],
         ["absorbed by loads", format_value(balance.absorbed_w, POWER), _share(balance.absorbed_w, balance.delivered_w)],
-        ["lost", format_value(balance.lost_w, POWER), _share(balance.lost_w, balance.delivered_w)],
+        ["dissipated", format_value(balance.lost_w, POWER), _share(balance.lost_w, balance.delivered_w)],
         ["left over", format_value(balance.residual_w, POWER, digits=2), "what the solution's tolerance leaves"],
     ]
     if abs(balance.stored_w) > 1e-9 * max(balance.delivered_w, 1e-300):

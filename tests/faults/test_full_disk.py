@@ -67,13 +67,12 @@ def test_csv() -> None:
 def test_temporary_file_of_a_long_run(monkeypatch: pytest.MonkeyPatch) -> None:
     import tempfile
 
-    monkeypatch.setattr(tempfile, "TemporaryFile", lambda **_: FULL.open("wb"))
+    monkeypatch.setattr(tempfile, "TemporaryFile", lambda **_: FULL.open("wb", buffering=0))
     sink = MemorySink(COLUMNS, limit_bytes=1000)
     with pytest.raises(OutputFailed, match="temporary file"):
         _fill(sink)
     assert sink._file is not None
-    with pytest.raises(OSError, match="No space"):
-        sink._file.close()
+    sink._file.close()
 
 
 def test_summary_stays_the_old_one(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

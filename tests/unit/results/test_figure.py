@@ -46,7 +46,7 @@ def test_one_panel_per_unit_with_units_on_every_axis(tmp_path: Path) -> None:
     record = _record(columns, [lambda t: 700 + t, lambda t: 0.02 * t, lambda t: 690 - t, lambda t: 0.4, lambda t: float(t > 0.05)])
     figure = _figure(record)
     labels = [ax.get_ylabel() for ax in figure.axes]
-    assert labels[:3] == ["voltage (V)", "current (mA)", "number (1)"]
+    assert labels[:3] == ["voltage (V)", "current (mA)", "plain number (1)"]
     assert figure.axes[-1].get_xlabel() == "time (ms)"
     for ending in ("png", "svg"):
         figure.savefig(tmp_path / f"f.{ending}")
