@@ -83,15 +83,12 @@ def number_too_large(span: Span) -> Diagnostic:
     return _error("number-too-large", "this number is too large to compute with", span)
 
 
-def unknown_unit(span: Span, name: str, nearest: str | None, number: Span | None, *, touching: bool) -> Diagnostic:
+def unknown_unit(span: Span, name: str, nearest: str | None, number: Span | None) -> Diagnostic:
     """A word behind a number, or behind `in`, that is no unit."""
     if nearest is not None:
         return _error("unknown-unit", f"`{name}` is not a known unit", span, hint=f"Did you mean `{nearest}`?", mended=nearest)
-    if number is not None and touching:
-        return _error("unknown-unit", f"`{name}` is not a known unit", span, hint=f"For a product write `{number.text} * {name}`.")
-    if number is not None:
-        return _error("unknown-unit", f"`{name}` is not a known unit", span, hint=f"For a product write `{number.text} * {name}`.")
-    return _error("unknown-unit", f"`{name}` is not a known unit", span)
+    hint = None if number is None else f"For a product write `{number.text} * {name}`."
+    return _error("unknown-unit", f"`{name}` is not a known unit", span, hint=hint)
 
 
 def star_after_slash(span: Span, symbol: str) -> Diagnostic:

@@ -305,7 +305,6 @@ def _order(m: Mistake) -> Diagnostic | None:
 
 
 _ORDERS = frozenset({*ORDER_WORDS, "at", "every", "whenever", "given"})
-_STATEMENTS = OPENERS
 
 
 def _step(m: Mistake) -> Diagnostic | None:
@@ -342,7 +341,7 @@ def _statement(m: Mistake) -> Diagnostic | None:
     if token.type == "SIGN" and token.text == "-":
         return messages.wire_mark(m.span)
     if token.type in ("NAME", "NUMBER", "STRING", "_NEWLINE", "$END", "RATE_OF", *_WORD_TYPES):
-        return messages.unknown_statement(span, first.text, nearest_word(first.text, _STATEMENTS))
+        return messages.unknown_statement(span, first.text, nearest_word(first.text, OPENERS))
     return None
 
 

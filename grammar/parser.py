@@ -19,6 +19,7 @@ from polewise.grammar.words import SOFT_WORDS
 
 MAX_CHARACTERS = 1_000_000
 MAX_ERRORS = 50  # more than anyone reads in one go
+MAX_APART = 3  # wrong opening lines inside each other, each read anew inside the last
 # Control characters, and what stands for bytes that are no UTF-8.
 _STRANGE = re.compile("[\x00-\x08\x0e-\x1f\x7f\ufffd]")
 
@@ -85,8 +86,9 @@ class _Stop(Exception):
 class _Reading:
     """One text being read."""
 
-    def __init__(self, source: SourceText, tokens: Tokens) -> None:
+    def __init__(self, source: SourceText, tokens: Tokens, depth: int = 0) -> None:
         self.source = source
+        self.depth = depth
         self.tokens = tokens.tokens
         self.lexical = tokens.diagnostics
         self.lexical_at = [diagnostic.span.start for diagnostic in tokens.diagnostics]
@@ -261,7 +263,9 @@ class _Reading:
 
     def _read_apart(self, body: str, tokens: list[Token], end: Token) -> None:
         """Read the inside of a block whose opening line was wrong; only its errors are of use."""
-        apart = _Reading(self.source, Tokens([*tokens, Token("$END", "", end.start, end.start)], self.lexical, 0, True))
+        if self.depth >= MAX_APART:
+            return
+        apart = _Reading(self.source, Tokens([*tokens, Token("$END", "", end.start, end.start)], self.lexical, 0, True), self.depth + 1)
         apart.read(body, 0, len(tokens))
         self.diagnostics += apart.diagnostics
         self.builder.diagnostics += apart.builder.diagnostics

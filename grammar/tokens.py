@@ -339,7 +339,7 @@ class _Tokeniser:
         if not blank and previous is not None and ((previous.type in ("WIRE", "COLON") and not self.brackets) or previous.text in OPENERS):
             self._report(messages.name_starts_with_digit(self._span(at, word.end())))
             return word.end()
-        self._report(messages.unknown_unit(self._span(start, word.end()), name, nearest_unit(name), self._span(at, end), touching=not blank))
+        self._report(messages.unknown_unit(self._span(start, word.end()), name, nearest_unit(name), self._span(at, end)))
         return word.end()
 
     def _bare_decimal(self, at: int, end: int) -> int:
@@ -366,6 +366,6 @@ class _Tokeniser:
             elif run.length == len(symbol):
                 self._report(messages.degrees_joined(span, symbol))
             else:
-                self._report(messages.unknown_unit(span, symbol, nearest_unit(symbol), None, touching=False))
+                self._report(messages.unknown_unit(span, symbol, nearest_unit(symbol), None))
         self.tokens.append(Token("UNIT", symbol, start, end, 0.0, unit))
         return end
