@@ -288,17 +288,16 @@ class _Assembler:
         for k, named in enumerate(resolved):
             names = {g.symbols[s][1] for s in g.symbols_under([node for _, node in named]) if g.symbols[s][0] == "p"}
             reads.append({of_parameter[n] for n in names if n in of_parameter} - {k})
-        rank: dict[int, int] = {}
-
-        def rank_of(k: int, path: frozenset[int]) -> int:
-            if k not in rank:
-                inner = [rank_of(m, path | {k}) for m in reads[k] if m not in path]
-                rank[k] = max(inner, default=-1) + 1
-            return rank[k]
+        # The circuit lists blocks in the order in which they update: one reads the new values of those before it, the old ones of those after.
+        rank = [0] * len(self.sketch.clocks)
+        for k in range(len(rank)):
+            later_than = [rank[m] + 1 for m in reads[k] if m < k]
+            not_before = [rank[m] for m in range(k) if k in reads[m]]
+            rank[k] = max([0, *later_than, *not_before])
 
         groups: dict[tuple[float, float, int], tuple[str, list[tuple[int, Node]]]] = {}
         for k, clock in enumerate(self.sketch.clocks):
-            key = (clock.period_s, clock.offset_s, RANK_EVENTS if clock.events else rank_of(k, frozenset()))
+            key = (clock.period_s, clock.offset_s, RANK_EVENTS if clock.events else rank[k])
             _, updates = groups.setdefault(key, (clock.name, []))
             updates.extend((index_of[name], node) for name, node in resolved[k])
         return tuple(Clock(name, period, order, tuple(updates), offset) for (period, offset, order), (name, updates) in groups.items())
