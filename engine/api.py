@@ -285,7 +285,7 @@ class System:
         """
         prepared = self._prepared[""]
         with self._lock:
-            system = _assemble(prepared.circuit, prepared.network, None, (), "exact")
+            system = _assemble(prepared.circuit, prepared.network, None, _whole_network(prepared.circuit), "exact")
             point = find_point(system, self._inputs)
         return self._settled(prepared, system, point)
 
@@ -517,6 +517,16 @@ def default_quantities(circuit: Circuit) -> list[Quantity]:
             names.append(f"{path.name}.{circuit.branches[branches[0]].domain.through}")
     found = [find(circuit, name) for name in names]
     return [q for q in found if isinstance(q, Quantity)]
+
+
+def _whole_network(circuit: Circuit) -> list[Quantity]:
+    """Every voltage, current and potential: equations that can tell them can tell everything else afterwards."""
+    g = circuit.graph
+    outputs = [Quantity(n.name, g.symbol("potential", n.name), n.domain.across_dimension) for n in circuit.nodes.values()]
+    for b in circuit.branches.values():
+        outputs.append(Quantity(f"{b.name}.{b.domain.across}", g.symbol("v", b.name), b.domain.across_dimension))
+        outputs.append(Quantity(f"{b.name}.{b.domain.through}", g.symbol("i", b.name), b.domain.through_dimension))
+    return outputs
 
 
 def _length_s(study: StudyDef) -> float:

@@ -121,12 +121,12 @@ def factorise(matrix: SparseMatrix, column_scale: FloatArray) -> Factors:
 def _dense(matrix: SparseMatrix, scaled: SparseMatrix, row_size: FloatArray, column_scale: FloatArray) -> Factors:
     from scipy.linalg import lapack
 
+    if matrix.n == 0:  # everything follows explicitly
+        return Factors(matrix, row_size, column_scale, 1, True, lambda b: b, lambda b: b)
     full = scaled.dense()
     lu, pivots, info = lapack.dgetrf(full)
     diagonal = np.diagonal(lu)
-    if info != 0 or matrix.n == 0 or np.min(np.abs(diagonal)) < SINGULAR_RELATIVE:
-        if matrix.n == 0:
-            return Factors(matrix, row_size, column_scale, 1, True, lambda b: b, lambda b: b)
+    if info != 0 or np.min(np.abs(diagonal)) < SINGULAR_RELATIVE:
         left, values, right_t = np.linalg.svd(full)
         keep = values > SINGULAR_RELATIVE * max(values[0], 1e-300) * matrix.n
         inverse = np.where(keep, 1.0 / np.where(keep, values, 1.0), 0.0)

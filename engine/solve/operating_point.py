@@ -185,6 +185,8 @@ class _Search:
 
     def _refuse_singular(self, outcome: NewtonOutcome) -> None:
         """A solution with a singular Jacobian is one of many: name what is open."""
+        if self.square.n == 0:
+            return
         if outcome.factors is not None and outcome.factors.exact:
             smallest, _, _ = outcome.factors.smallest_singular()
             if smallest > SINGULAR_RELATIVE * self.square.n:

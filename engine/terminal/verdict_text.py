@@ -63,8 +63,10 @@ def result_lines(result: Result, style: Style) -> list[str]:
     reached = format_value(facts.reached_s, TIME)
     planned = format_value(facts.planned_s, TIME)
     state = f"{reached} simulated in {_duration(facts.elapsed_s)}" if facts.complete else f"INCOMPLETE: stopped at {reached} of {planned}"
-    counters = ", ".join(f"{number} {name}" for name, number in facts.counters.items())
-    lines = [title_line(facts.study, style), f"  {state}{'; ' + counters if counters else ''}"]
+    counters = ", ".join(f"{number} {name}" for name, number in facts.counters.items() if number)
+    lines = [title_line(facts.study, style), f"  {state}"]
+    if counters:
+        lines.append(style.paint(f"  {counters}", "faint"))
     if facts.sampling == "mean":
         lines.append("  sampled blocks as their mean s-domain equivalents")
     return [*lines, *_event_lines(result, style), "", *verdict_lines(result.verdict, style), "  " + summary_line(result.verdict, style)]

@@ -78,7 +78,7 @@ def test_pole_in_discontinuous_conduction_and_blocked() -> None:
 
 
 def test_collapsed_load_is_a_failure_with_its_figure() -> None:
-    text = "reference gnd\ns: a --[100 V]-- gnd\nline: a --[0.1 ohm]-- b\nload: b --[{p} kW above 50 V]-- gnd\n"
+    text = "reference gnd\nsource: a --[100 V]-- gnd\nline: a --[0.1 ohm]-- b\nload: b --[{p} kW above 50 V]-- gnd\n"
     assert polewise.from_text(text.format(p=20)).settled()["b.v"] == pytest.approx(72.360679775, rel=1e-9)  # (100 + sqrt(100^2 - 4*0.1*20000))/2
     with pytest.raises(polewise.NoOperatingPoint, match="25 kW"):
         polewise.from_text(text.format(p=30)).settled()

@@ -48,6 +48,22 @@ study idle {
     steady: require out.v within 0 V .. 24 V
 }
 """
+TOO_MUCH = """title "More than the line can carry"
+reference gnd
+line:   gnd --[u: -100 V]--[r: 0.1 ohm]-- b
+load:   b --[30 kW above 50 V]-- gnd
+keeper: b --[1 mF]-- gnd
+study one {
+    start settled
+    run for 1 ms
+}
+study two {
+    start cold
+    run for 1 us
+    keep b.v
+    require b.v below 200 V
+}
+"""
 FAILING = GOOD.replace("out.v above 5 V", "out.v above 20 V")
 
 
@@ -267,7 +283,7 @@ def test_unknown_study(good: Path, say) -> None:
 
 def test_no_study(tmp_path: Path, say) -> None:
     path = tmp_path / "a.pole"
-    path.write_text("reference gnd\ns: a --[5 V]-- gnd\nr: a --[1 ohm]-- gnd\n", encoding="utf-8")
+    path.write_text("reference gnd\nsource: a --[5 V]-- gnd\nr: a --[1 ohm]-- gnd\n", encoding="utf-8")
     code, _, err = say("run", path)
     assert code == 2
     assert "no study" in err
@@ -275,13 +291,7 @@ def test_no_study(tmp_path: Path, say) -> None:
 
 def test_no_operating_point_ends_with_3_and_the_rest_runs(tmp_path: Path, say) -> None:
     path = tmp_path / "a.pole"
-    path.write_text(
-        'title "Too much"\nreference gnd\ns: a --[100 V]--[r: 0.1 ohm]-- b\nload: b --[30 kW above 50 V]-- gnd\nkeeper: b --[1 mF]-- gnd\n'.replace(
-            "s: a --[100 V]--[r: 0.1 ohm]-- b", "s: gnd --[u: -100 V]--[r: 0.1 ohm]-- b"
-        )
-        + "study one {\n start settled\n run for 1 ms\n}\nstudy two {\n start cold\n run for 1 us\n keep b.v\n require b.v below 200 V\n}\n",
-        encoding="utf-8",
-    )
+    path.write_text(TOO_MUCH, encoding="utf-8")
     code, out, err = say("run", path, "--junit", tmp_path / "j.xml")
     assert code == 3
     assert "study one could not be finished" in err
