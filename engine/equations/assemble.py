@@ -14,6 +14,7 @@ from polewise.equations.reduce import LoopOfConditions, Reduction, UnforeseenLoo
 from polewise.equations.sketch import ClockSketch, DelaySketch, SystemSketch
 from polewise.equations.system import Clock, Conditional, DelayLine, EquationSystem, Flag, Output, Parameter, Target, Timed, Unknown
 from polewise.errors import NetlistError
+from polewise.expression.collection import no_collection
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 from polewise.grammar.source import Span, no_span
@@ -43,7 +44,8 @@ def assemble(
     Raises:
         NetlistError: a loop of conditions, a derivative that cannot be determined, or an event that cannot be carried out.
     """
-    return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean", picture == "edges").assemble(outputs)
+    with no_collection():
+        return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean", picture == "edges").assemble(outputs)
 
 
 class _Assembler:

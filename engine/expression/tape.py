@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
+from polewise.expression.collection import no_collection
 from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import CONSTANT, OPERATION_NAMES, SYMBOL, ExpressionGraph, Node
 from polewise.kernels import opcodes as op
@@ -79,7 +80,8 @@ def compile_program(
     """
     if len(residuals) != len(unknowns) or len(charges) != len(unknowns):
         raise ValueError("one residual and one charge (or None) for each unknown")
-    return _Writer(graph, time, unknowns, parameters).write(residuals, charges, scales, outputs, delays, clocks, watched, also)
+    with no_collection():
+        return _Writer(graph, time, unknowns, parameters).write(residuals, charges, scales, outputs, delays, clocks, watched, also)
 
 
 class _Writer:
@@ -213,6 +215,7 @@ class _Writer:
             coefficients.extend(table.coefficients)
             table_ptr.append(len(knots))
         clock_ptr = np.cumsum([0, *(len(c.updates) for c in clocks)])
+        size_of = dict(zip(self.unknowns, scales, strict=True))
         program = Program(
             n=n,
             n_const=n_const,
@@ -237,7 +240,7 @@ class _Writer:
             switch_kind=_ints([kinds[graph.operation[k]] for k in switch_nodes]),
             switch_reg=_ints([register[graph.a[k]] for k in switch_nodes]),
             switch_table=_ints([graph.c[k] if graph.operation[k] == op.TABLE else -1 for k in switch_nodes]),
-            switch_scale=np.array([self._band(k, scales) for k in switch_nodes], dtype=float),
+            switch_scale=np.array([self._band(k, size_of) for k in switch_nodes], dtype=float),
             switch_watched=_ints([1 if k in watched_switches else 0 for k in switch_nodes]),
             table_ptr=_ints(table_ptr),
             table_knots=np.array(knots, dtype=float),
@@ -257,10 +260,9 @@ class _Writer:
         )
         return CompiledProgram(program, tuple(switch_nodes), register)
 
-    def _band(self, switch: Node, scales: Sequence[float]) -> float:
+    def _band(self, switch: Node, size_of: Mapping[Node, float]) -> float:
         """A size for "zero" of a switch's input from the sizes of what it is made of: the largest constant or scale that is added in it."""
         graph = self.graph
-        size_of = {symbol: scale for symbol, scale in zip(self.unknowns, scales, strict=True)}
         size = 0.0
         stack = [graph.a[switch]]
         while stack:
