@@ -39,6 +39,8 @@ LAWS: Final = {domain: _laws_by_unit(domain) for domain in Domain}
 def finish_box(x: Expansion, box: BoxThing) -> None:
     """The branch of a box, and its device where it has one."""
     written = box.written
+    if box.flat in x.between_kinds:
+        return
     if written is None:
         _add_branch(x, box, Law.VOLTAGE, x.graph.constant(0.0), None, None)
         return

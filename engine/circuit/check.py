@@ -70,6 +70,8 @@ def order_samplers(x: Expansion) -> None:
         needs[memory].append(name)
     circle = _circle(x, list(x.samplers), lambda name: needs[name]) or itself[:1]
     if circle:
+        first = min(range(len(circle)), key=lambda k: x.samplers[circle[k]].span.start)
+        circle = [*circle[first:], *circle[:first]]
         x.report.add(messages.samplers_in_circle(x.samplers[circle[0]].span, [x.samplers[name].span for name in circle[1:]]))
         return
     ordered: dict[str, None] = {}

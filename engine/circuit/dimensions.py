@@ -139,10 +139,10 @@ def raised(base: Quality, exponent: float) -> Quality | None:
         power: int | Fraction = int(exponent)
     else:
         power = Fraction(exponent).limit_denominator(1000)
-    if abs(power) > EXPONENT_MAX:
+    if abs(float(power)) > EXPONENT_MAX:
         return None
     result = base.dimension**power
-    return quality(result) if all(abs(k) <= EXPONENT_MAX for k in result.exponents) else None
+    return quality(result) if all(abs(float(k)) <= EXPONENT_MAX for k in result.exponents) else None
 
 
 def settled(kind: Quality) -> Quality:

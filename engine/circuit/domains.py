@@ -33,6 +33,7 @@ def find_domains(x: Expansion) -> None:
         if isinstance(thing, BoxThing):
             clash = islands.join(x.root(thing.left.key), x.root(thing.right.key))
             if clash is not None:
+                x.between_kinds.add(thing.flat)
                 (a, place_a), (b, place_b) = clash
                 x.report.add(messages.kinds_joined(thing.span, a.name.lower(), place_a, b.name.lower(), place_b))
     for key in x.nodes:

@@ -192,6 +192,7 @@ class Expansion:
         self.parent: dict[str, str] = {}  # union of keys joined by bare wires
         self.references: set[str] = set()  # roots, once declared
         self.domains: dict[str, Domain] = {}  # by root; empty where all is electrical
+        self.between_kinds: set[str] = set()  # boxes that join two kinds of islands, reported
         self.port_currents: dict[int, Node | None] = {}
         # given values from outside
         self.overrides = dict(overrides)

@@ -38,7 +38,7 @@ def lower_sampled(x: Expansion, e: syntax.Sampled, env: Env) -> Value:
         return node, quality
     name = x.hidden_name(env, e)
     x.samplers[name] = SamplerDef(name, 1.0 / rate, ((name, node),), (quality.dimension,), env.scope.path, e.span)
-    return x.graph.symbol("sampled", name), settled(quality)
+    return x.graph.symbol("sampled", name), quality
 
 
 def lower_delayed(x: Expansion, e: syntax.Delayed, env: Env) -> Value:
@@ -51,7 +51,7 @@ def lower_delayed(x: Expansion, e: syntax.Delayed, env: Env) -> Value:
         return node, quality
     name = x.hidden_name(env, e)
     x.delays[name] = DelayDef(name, node, delay, quality.dimension, env.scope.path, e.span)
-    return x.graph.symbol("delayed", name), settled(quality)
+    return x.graph.symbol("delayed", name), quality
 
 
 def lower_averaged(x: Expansion, e: syntax.Averaged, env: Env) -> Value:
@@ -64,7 +64,7 @@ def lower_averaged(x: Expansion, e: syntax.Averaged, env: Env) -> Value:
         return node, quality
     name = x.hidden_name(env, e)
     x.averages[name] = AverageDef(name, node, window, quality.dimension, env.scope.path, e.span)
-    return x.graph.symbol("averaged", name), settled(quality)
+    return x.graph.symbol("averaged", name), quality
 
 
 # ---------------------------------------------------------------- filtered by

@@ -658,7 +658,7 @@ def reference_is_port(span: Span, name: str, declared: Span) -> Diagnostic:
 def kinds_joined(span: Span, kind_a: str, place_a: Span, kind_b: str, place_b: Span) -> Diagnostic:
     """A box between a shaft and a wire."""
     labels = (Label(place_a, f"{kind_a} from here"), Label(place_b, f"{kind_b} from here"))
-    headline = f"this joins an island of {kind_a} with one of {kind_b}"
+    headline = f"this joins {_a(kind_a)} island with {_a(kind_b)} island"
     return _error(
         "kinds-joined", headline, span, labels=labels, hint="Couple them by equations that read the other side, as in `[emf: v = k * shaft.speed]`."
     )
@@ -771,7 +771,7 @@ def device_belongs_in_box(span: Span, kind: str, name: str) -> Diagnostic:
 
 def device_not_electrical(span: Span, kind: str, domain: str) -> Diagnostic:
     """A diode in a heat island."""
-    return _error("device-domain", f"`{kind}` is electrical and can't stand in an island of {domain}", span)
+    return _error("device-domain", f"`{kind}` is electrical and can't stand in {_a(domain)} island", span)
 
 
 def terminals_missing(span: Span, kind: str, terminals: Sequence[str], missing: Sequence[str]) -> Diagnostic:

@@ -32,7 +32,7 @@ def distance(a: str, b: str, limit: int) -> int:
 def nearest(name: str, candidates: Iterable[str]) -> str | None:
     """The candidate closest to a name, None where none is close (a third of its letters, at least one, at most three)."""
     limit = max(1, min(3, len(name) // 3))
-    best: tuple[int, str] | None = None
+    best: tuple[int, int, str] | None = None  # fewest edits, then the same length, then the alphabet
     folded = name.casefold()
     for count, candidate in enumerate(candidates):
         if count >= CANDIDATES_MAX:
@@ -44,9 +44,10 @@ def nearest(name: str, candidates: Iterable[str]) -> str | None:
         if len(name) < 2 or len(candidate) < 2:
             continue
         d = distance(folded, candidate.casefold(), limit)
-        if d <= limit and (best is None or (d, candidate) < best):
-            best = d, candidate
-    return None if best is None else best[1]
+        rank = (d, abs(len(candidate) - len(name)), candidate)
+        if d <= limit and (best is None or rank < best):
+            best = rank
+    return None if best is None else best[2]
 
 
 def looks_mistyped(name: str, other: str) -> bool:

@@ -38,7 +38,8 @@ def test_the_unit_says_what_it_is(build, box, law, number):
 def test_branch_names_follow_the_path(build):
     circuit = build(
         HEAD
-        + "feeder: src --[r: 6 mohm]--[l: 25 uH]-- bus\nsupply: src --[800 V]-- gnd\nbus --[1 ohm]-- gnd\nbus --[2 ohm]-- gnd\nm: bus --[1 S]--[2 S]-- gnd\n"
+        + "feeder: src --[r: 6 mohm]--[l: 25 uH]-- bus\nsupply: src --[800 V]-- gnd\n"
+        + "bus --[1 ohm]-- gnd\nbus --[2 ohm]-- gnd\nm: bus --[1 S]--[2 S]-- gnd\n"
     )
     assert list(circuit.branches) == ["feeder.r", "feeder.l", "supply", "bus--gnd", "bus--gnd#2", "m#1", "m#2"]
     assert circuit.branches["feeder.r"].right == circuit.branches["feeder.l"].left == "feeder#1"

@@ -30,11 +30,8 @@ def test_port_currents(build, value):
 
 
 def test_port_currents_through_nested_assemblies_and_inner_wires(build, value):
-    text = (
-        HEAD
-        + BERTH
-        + "assembly rack(p, n, o) {\n p -- q\n one: berth(q, n, o)\n two: berth(p, n, o)\n q --[5 ohm]-- n\n signal y = p.i\n}\nr: rack(a, gnd, b)\na --[5 V]-- gnd\n"
-    )
+    rack = "assembly rack(p, n, o) {\n p -- q\n one: berth(q, n, o)\n two: berth(p, n, o)\n q --[5 ohm]-- n\n signal y = p.i\n}\n"
+    text = HEAD + BERTH + rack + "r: rack(a, gnd, b)\na --[5 V]-- gnd\n"
     circuit = build(text)
     at = {"i r.one.r": 1.0, "i r.two.r": 2.0, "i r.q--r.n": 4.0}
     assert value(circuit, "r.y", at) == 7.0
@@ -148,7 +145,7 @@ signal q = leg.loss
     assert upper.kind == "transistor"
     assert circuit.graph.value_of(upper.values["resistance"]) == 0.008
     assert circuit.graph.value_of(device.settings["rate"]) == 20e3
-    slots = {s: b for s, b in device.branches.items()}
+    slots = device.branches
     assert all(circuit.branches[name].device == "leg" for name in slots.values())
     arms = {f"i {name}": float(k) for k, name in enumerate(slots.values(), start=1)}
     expected = sum(v * (1 if circuit.branches[k[2:]].left == "m" else -1 if circuit.branches[k[2:]].right == "m" else 0) for k, v in arms.items())
@@ -172,7 +169,7 @@ signal q = leg.loss
 )
 def test_too_large_ends_quickly(check, text):
     begin = time.perf_counter()
-    (found,) = check(HEAD + text, [("too-large", pytest_any)])
+    (found,) = check(HEAD + text, [("too-large", ANYTHING)])
     assert "1,000,000" in found.headline
     assert time.perf_counter() - begin < 5.0
 
@@ -185,7 +182,7 @@ class _Any:
         return 0
 
 
-pytest_any = _Any()
+ANYTHING = _Any()
 
 
 def test_recursive_assemblies(check):

@@ -4,7 +4,18 @@ import math
 
 import pytest
 
-HEAD = "reference gnd\na --[1 ohm]-- gnd\na --[5 V]-- gnd\nlatch u = 5 V\nlatch j = 2 A\nlatch ok = true\nlatch f = 50 Hz\nlatch w = 80 rad/s\nlatch n = 3\n"
+from polewise.circuit.dimensions import unit_text
+
+HEAD = """reference gnd
+a --[1 ohm]-- gnd
+a --[5 V]-- gnd
+latch u = 5 V
+latch j = 2 A
+latch ok = true
+latch f = 50 Hz
+latch w = 80 rad/s
+latch n = 3
+"""
 
 
 @pytest.mark.parametrize(
@@ -51,8 +62,6 @@ def test_right_expressions(build, value, expression, number, unit):
     circuit = build(f"{HEAD}signal x = {expression}\n")
     at = {"time": 0.02, "latch u": 5.0, "latch j": 2.0, "latch ok": 1.0, "latch n": 3.0}
     assert value(circuit, "x", at) == pytest.approx(number, rel=1e-12)
-    from polewise.circuit.dimensions import unit_text
-
     assert unit_text(circuit.signals["x"].dimension) == unit
 
 
@@ -136,7 +145,8 @@ def test_a_joined_symbol_that_is_a_name_asks_for_a_blank(check, build):
 
 def test_wrong_parts_do_not_cascade(check):
     check(
-        f"{HEAD}signal x = nothing_of_it * 3 + 5 V\nsignal y = x + 3 A\nsignal z1 = y * 2\nb --[x]-- gnd\nb --[z1 + 3 V]-- gnd\nwhenever x > 3 V: set u = y\n",
+        f"{HEAD}signal x = nothing_of_it * 3 + 5 V\nsignal y = x + 3 A\nsignal z1 = y * 2\nb --[x]-- gnd\nb --[z1 + 3 V]-- gnd\n"
+        "whenever x > 3 V: set u = y\n",
         [("unknown-name", "nothing_of_it")],
     )
 
