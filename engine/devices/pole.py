@@ -29,6 +29,8 @@ from polewise.grammar import units
 RIPPLE_LOSS_FADE = 0.05
 # Below this rail voltage the loss drawn from the rails is set to zero: its current would be a quotient of two small numbers.
 RAIL_VOLTAGE_MIN_V = 1e-3
+# A duty below this is none: an exact zero would sit on the edge of its own switch.
+DUTY_MIN = 1e-9
 # Smallest width (A) of the current band in which dead time changes sign, where no output capacitance gives one.
 DEAD_TIME_BAND_MIN_A = 1e-3
 
@@ -249,7 +251,7 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         raising = g.subtract(rail, far) if lower_diode else far
         lowering = g.add(far, drop) if lower_diode else g.subtract(g.add(rail, drop), far)
         driven = g.invert(g.positive(lowering))  # the diode is driven on
-        can_rise = g.both(g.positive(raising), g.positive(d))
+        can_rise = g.both(g.positive(raising), g.greater(d, g.constant(DUTY_MIN)))
         ordinary = g.both(can_rise, g.invert(driven))
         blocked = g.both(g.invert(g.positive(j)), g.both(g.invert(driven), g.invert(can_rise)))
         # delta = limit(j(2Lf/d + R + r)/a, d, 1), written without dividing by d or a outside the branch where both are positive.

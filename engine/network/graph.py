@@ -91,6 +91,21 @@ def form_of(circuit: Circuit, branch: Branch) -> str:
     return "nonlinear" if own in under else "current"
 
 
+# Within "resistance": v = R*i bears R = 0 and belongs into the tree, i = G*v bears G = 0 and belongs outside.
+VARYING_RESISTANCE_RANK = 1.9
+CONDUCTANCE_RANK = 2.1
+
+
+def rank_of(circuit: Circuit, branch: Branch, form: str) -> float:
+    """RANK with the two ways of writing a resistance told apart where it matters."""
+    if form == "resistance":
+        if branch.law is Law.CONDUCTANCE:
+            return CONDUCTANCE_RANK
+        if branch.law is Law.RESISTANCE and branch.expression is not None and not circuit.graph.is_constant(branch.expression):
+            return VARYING_RESISTANCE_RANK
+    return RANK[form]
+
+
 def spanning_tree(circuit: Circuit, forms: Mapping[str, str]) -> frozenset[str]:
     """Branches of the tree of least rank (Kruskal 1956); ties go by the order of the text."""
     parent: dict[str, str] = {name: name for name in circuit.nodes}
@@ -102,7 +117,7 @@ def spanning_tree(circuit: Circuit, forms: Mapping[str, str]) -> frozenset[str]:
         return node
 
     chosen = []
-    for name in sorted(circuit.branches, key=lambda k: RANK[forms[k]]):
+    for name in sorted(circuit.branches, key=lambda k: rank_of(circuit, circuit.branches[k], forms[k])):
         branch = circuit.branches[name]
         left, right = find(branch.left), find(branch.right)
         if left != right:
