@@ -16,7 +16,8 @@ from polewise.solve import diagnosis
 from polewise.solve.newton import solve_newton
 from polewise.solve.operating_point import OperatingPoint, find_operating_point
 from polewise.solve.problem import DaeProblem, reader
-from polewise.solve.square_system import SquareSystem, kept_at_start, start_rows
+from polewise.solve.residual_ramp import solve_by_residual_ramp
+from polewise.solve.square_system import Row, SquareSystem, kept_at_start, start_rows
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -107,6 +108,23 @@ def start_from(problem: DaeProblem, snapshot: Snapshot, *, start_latches: Mappin
     return StartState(state.x, state.p, past, "from", state.warnings)
 
 
+def rescue_restart(problem: DaeProblem, work: Workspace) -> bool:
+    """Find the consistent point that the kernel's own iterations missed, with charges and fluxes as kept; writes it into work.x.
+
+    Returns whether it was found.
+    """
+    system = problem.system
+    rows = [Row("x", i, u.residual if u.charge is None else u.charge) for i, u in enumerate(system.unknowns)]
+    square = SquareSystem(system, rows)
+    square.p[:] = work.p
+    square.at_time(float(work.state[S_T]))
+    square.offset[:] = np.where(problem.program.q_reg >= 0, work.q_keep, 0.0)
+    outcome = solve_by_residual_ramp(square, work.x.copy())
+    if outcome.converged:
+        work.x[:] = outcome.z
+    return outcome.converged
+
+
 def take_snapshot(problem: DaeProblem, work: Workspace) -> Snapshot:
     """Where a run stands now."""
     system = problem.system
@@ -149,6 +167,8 @@ def _solved(problem: DaeProblem, square: SquareSystem, start: FloatArray, kind: 
         # A guess far from zero for everything that isn't stated often is better than zero.
         again = np.where(z == 0.0, 1e-2 * square.scale, z)
         outcome = solve_newton(square, again)
+    if not outcome.converged:
+        outcome = solve_by_residual_ramp(square, z)
     factors = outcome.factors
     if factors is not None and not factors.exact:
         _, right, _ = factors.smallest_singular()

@@ -35,7 +35,7 @@ from polewise.kernels.workspace import (
 from polewise.solve import diagnosis, kernel_calls
 from polewise.solve.averages import Rebase
 from polewise.solve.events import EventEntry, Events, merge_distance
-from polewise.solve.initial import Snapshot, StartState, take_snapshot
+from polewise.solve.initial import Snapshot, StartState, rescue_restart, take_snapshot
 from polewise.solve.problem import DaeProblem, new_workspace
 from polewise.solve.run_failure import explain_failure
 from polewise.solve.trajectory import Sink
@@ -224,6 +224,8 @@ class _Run:
                 self.rebase.apply(work)
             self.events.instant()
             self.work = self.events.work
+        elif status in (Status.NO_CONVERGENCE, Status.NOT_FINITE) and work.counter[N_NEEDS_RESTART] == 1:
+            self._restart(work)
         elif status != Status.DONE:
             raise explain_failure(self.problem, work, status)
 
@@ -235,8 +237,16 @@ class _Run:
     def _restart(self, work: Workspace) -> Workspace:
         """A consistent point at the present time; the workspace may be replaced by a larger one."""
         self.work = work
+        rescued = False
         while True:
+            guess = self.work.x.copy()
             status = kernel_calls.restart(self.problem.program, self.work)
+            if status in (Status.NO_CONVERGENCE, Status.NOT_FINITE) and not rescued:
+                rescued = True
+                self.work.x[:] = guess
+                if rescue_restart(self.problem, self.work):
+                    kernel_calls.run_residual_live(self.problem.program, self.work)
+                    continue
             if status == Status.DONE:
                 self.work.counter[N_NEEDS_RESTART] = 0
                 self.work.counter[N_MADE_JUMP] = 1
