@@ -365,6 +365,8 @@ def _path(x: Expansion, scope: Scope, statement: syntax.Path, frame: Frame) -> N
     ends = [_node(x, scope, item, env) if type(item) is syntax.Reference else None for item in items]
     if any(end is None and type(item) is syntax.Reference for end, item in zip(ends, items)):
         return
+    if ends[0] is None or ends[-1] is None:
+        return  # it ends in a box: reported by the parser
     name = ""
     if statement.name is not None:
         named = _named(x, scope, statement.name, env)

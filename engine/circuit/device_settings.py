@@ -42,11 +42,13 @@ def device_settings(
         x.report.add(messages.too_many_settings(extra.span, kind.name, kind.positional))
         return None
     written: dict[str, tuple[syntax.Expression, Span]] = {name: (e, e.span) for name, e in zip(kind.positional, positional)}
-    before = len(x.report.found)
+    wrong = False
     for setting in by_name:
         if setting.name in written:
+            wrong = True
             x.report.add(messages.setting_twice(setting.name_span, setting.name, written[setting.name][1]))
         elif kind.setting(setting.name) is None:
+            wrong = True
             known = [spec.name for spec in kind.settings]
             x.report.add(messages.unknown_setting(setting.name_span, setting.name, kind.name, nearest(setting.name, known), known, None))
         else:
@@ -56,27 +58,26 @@ def device_settings(
         given = written.get(spec.name)
         if given is None:
             if spec.required:
+                wrong = True
                 x.report.add(messages.setting_missing(span, kind.name, spec.name, spec.document))
             default = _default(x, spec)
             if default is not None:
                 values[spec.name] = default
             continue
         value = _setting(x, kind.name, spec, given[0], given[1], env)
-        if value is not None:
+        if value is None:
+            wrong = True
+        else:
             values[spec.name] = value
     for spec_latch in kind.latches:
         _start_latch(x, latches[spec_latch.name], values.get(spec_latch.from_setting), written.get(spec_latch.from_setting))
-    if len(x.report.found) > before and _has_new_error(x, before):
+    if wrong:
         return None
     problem = None if kind.check is None else kind.check(values)
     if problem is not None:
         x.report.add(messages.settings_contradict(span, problem[0], problem[1]))
         return None
     return values
-
-
-def _has_new_error(x: Expansion, before: int) -> bool:
-    return any(d.is_error for d in list(x.report.found.values())[before:])
 
 
 def _start_latch(x: Expansion, latch: LatchThing, value: SettingValue | None, written: tuple[syntax.Expression, Span] | None) -> None:

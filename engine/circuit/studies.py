@@ -25,6 +25,7 @@ from polewise.grammar.source import Span
 # The loosest and the tightest relative tolerance that means something in double precision.
 TOLERANCE_LOOSEST: Final = 0.1
 TOLERANCE_TIGHTEST: Final = 1e-13
+STARTS: Final = ("settled", "cold", "from")
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,7 +118,7 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
     for position, order in enumerate(written.orders):
         env = Env(x.top, {}, f"{written.name}#{position + 1}")
         if isinstance(order, syntax.Start):
-            start = order.how
+            start = order.how if order.how in STARTS else "settled"  # another word is reported by the parser
             if order.how == "from":
                 start_study, start_time = order.study, _start_time(x, written, order, env)
         elif isinstance(order, syntax.RunFor):
@@ -139,7 +140,6 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
         elif not isinstance(order, syntax.Given):
             x.report.add(messages.not_yet(order.span, f"`{order.span.text.split()[0]}`"))
     _check_times(x, written, run_for, times, requirements)
-    assert start in ("settled", "cold", "from")
     return StudyDef(
         written.name,
         written.document,
