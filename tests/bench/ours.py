@@ -52,7 +52,7 @@ def prepare(text: str, study: str) -> Prepared:
     from polewise.solve.problem import build_problem
 
     clock = _Clock()
-    sources, _ = load_text(text, "<bench>")
+    sources, _ = load_text(text)
     clock.lap("parse")
     circuit, found = expand(sources)
     if circuit is None:

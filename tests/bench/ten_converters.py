@@ -11,6 +11,7 @@ resistance, output voltage by a quadratic), leaving 6 N + 2 ordinary differentia
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field, fields
 
 import numpy as np
@@ -134,7 +135,8 @@ def flat_netlist(count: int) -> str:
 
 def _own_values(n: int) -> tuple[float, float, float, float]:
     """Set point V, choke H, output capacitor F, load W of stage n."""
-    return 380.0 + 30.0 * np.sin(n), 180e-6 * (1 + 0.15 * np.sin(2 * n)), 2.2e-3 * (1 + 0.1 * np.cos(3 * n)), 21e3 - 19.5e3 * np.cos(2.2 * n)
+    setpoint, inductance = 380.0 + 30.0 * math.sin(n), 180e-6 * (1 + 0.15 * math.sin(2 * n))
+    return setpoint, inductance, 2.2e-3 * (1 + 0.1 * math.cos(3 * n)), 21e3 - 19.5e3 * math.cos(2.2 * n)
 
 
 # ------------------------------------------------------------------------------------------------ written by hand
