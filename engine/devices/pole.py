@@ -29,8 +29,10 @@ from polewise.grammar import units
 RIPPLE_LOSS_FADE = 0.05
 # Below this rail voltage the loss drawn from the rails is set to zero: its current would be a quotient of two small numbers.
 RAIL_VOLTAGE_MIN_V = 1e-3
-# A duty below this is none: an exact zero would sit on the edge of its own switch.
+# A duty below this reads as none: an exact zero would sit on the edge of its own switch. For the reading `mode` only.
 DUTY_MIN = 1e-9
+# Keeps a quotient finite where it is multiplied by nothing.
+REACH_MIN_V = 1e-30
 # Smallest width (A) of the current band in which dead time changes sign, where no output capacitance gives one.
 DEAD_TIME_BAND_MIN_A = 1e-3
 
@@ -242,7 +244,7 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
     j = pole.mid_current if lower_diode else g.negate(pole.mid_current)
     bottom = context.potential["bottom"]
     if context.choke is None:  # conduction = continuous, or nothing faces mid
-        delta, blocked, ordinary, far = one, zero, zero, None
+        delta, blocked, ordinary, idle, far = one, zero, zero, zero, None
         i_on, i_diode = g.multiply(j, d), g.multiply(j, g.subtract(one, d))
         peak_half = zero
     else:
@@ -251,20 +253,24 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         raising = g.subtract(rail, far) if lower_diode else far
         lowering = g.add(far, drop) if lower_diode else g.subtract(g.add(rail, drop), far)
         driven = g.invert(g.positive(lowering))  # the diode is driven on
-        can_rise = g.both(g.positive(raising), g.greater(d, g.constant(DUTY_MIN)))
+        can_rise = g.positive(raising)
         ordinary = g.both(can_rise, g.invert(driven))
-        blocked = g.both(g.invert(g.positive(j)), g.both(g.invert(driven), g.invert(can_rise)))
-        # delta = limit(j(2Lf/d + R + r)/a, d, 1), written without dividing by d or a outside the branch where both are positive.
+        stopped = g.both(g.invert(g.positive(j)), g.invert(driven))  # no current, and no diode that takes one
+        blocked = g.both(stopped, g.invert(can_rise))
+        # delta = limit(j(2Lf/d + R + r)/a, d, 1). Written with charge = j(2Lf + (R + r)d) and reach = a d it holds at d = 0 too: 1 while the
+        # diode conducts, d at no current. Every choice below is continuous, so that no two of them can undo each other.
         slope = g.add(g.multiply(g.multiply(two, choke.inductance), pole.rate), g.multiply(g.add(r_on, choke.resistance), d))
         charge = g.multiply(j, slope)
         reach = g.multiply(raising, d)
         continuous = g.greater(charge, reach)
         starting = g.greater(g.multiply(reach, d), charge)
         peak_half = g.divide(reach, slope)  # j/delta in discontinuous conduction: half the peak current
-        delta = g.mux(ordinary, g.mux(continuous, one, g.mux(starting, d, g.divide(charge, reach))), one)
+        part = g.divide(charge, g.maximum(reach, g.constant(REACH_MIN_V)))
+        delta = g.mux(ordinary, g.mux(continuous, one, g.mux(starting, d, part)), one)
         i_on = g.mux(ordinary, g.mux(continuous, g.multiply(j, d), g.mux(starting, j, g.multiply(peak_half, d))), g.multiply(j, d))
         i_on = g.mux(blocked, zero, i_on)
         i_diode = g.mux(blocked, zero, g.subtract(j, i_on))
+        idle = g.either(blocked, g.both(stopped, g.greater(g.constant(DUTY_MIN), d)))
     d2 = g.subtract(delta, d)
     # Potential of mid against bottom.
     drops = g.add(g.multiply(r_on, i_on), g.multiply(r_diode, i_diode))
@@ -277,7 +283,7 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         mid = g.mux(blocked, far, mid)
     losses = g.add(_switching_current(pole, pole.mid_current), _ripple_loss_current(pole, ordinary, delta, peak_half, r_on, r_diode))
     through_top = i_on if lower_diode else g.negate(i_diode)
-    mode = g.mux(blocked, zero, g.mux(g.greater(one, delta), one, two))
+    mode = g.mux(idle, zero, g.mux(g.greater(one, delta), one, two))
     return _equations(pole, mid, g.add(through_top, losses), d, delta, mode)
 
 
