@@ -584,7 +584,8 @@ def event_text(circuit: Circuit, text: str, changes: Sequence[tuple[str, float]]
         return text
     shown = ", ".join(f"{target} = {_changed(circuit, target, value)}" for target, value in changes[:EVENT_CHANGES_TOLD])
     rest = len(changes) - EVENT_CHANGES_TOLD
-    return f"{text}: {shown}" + (f" and {rest} more" if rest > 0 else "")
+    shown += f" and {rest} more" if rest > 0 else ""
+    return f"set {shown}" if text.startswith("at ") else f"{text}: set {shown}"  # the entry has its time already
 
 
 def _changed(circuit: Circuit, target: str, value: float) -> str:

@@ -22,35 +22,36 @@ class PowerItem:
         power_w: absorbed; negative where it delivers.
         role: "loss" turns what it absorbs into heat; "storage" holds it; "exchange" is a source or a load.
         owner: assembly path, "" at top level.
+        domain: "electrical", "rotation" or "translation".
     """
 
     name: str
     power_w: float
     role: Role
     owner: str
+    domain: str
 
 
 @dataclass(frozen=True, slots=True)
-class PowerBalance:
-    """Power of a circuit at one instant, W; electrical and mechanical islands together.
+class PowerFlow:
+    """Power of the islands of one kind, W.
 
     Args:
-        items: every element.
-        delivered_w: by sources and by loads that give back, > 0.
-        absorbed_w: by loads, > 0.
-        lost_w: in resistances, semiconductors and other parts that heat up.
+        delivered_w: by sources and by loads that give back, >= 0.
+        absorbed_w: by loads, >= 0.
+        lost_w: dissipated in resistances, semiconductors and other parts that heat up.
         stored_w: flowing into capacitors, inductors, masses; 0 at rest.
-        residual_w: delivered - absorbed - lost - stored: what the solution's tolerance leaves over.
-        losses: assembly path → W lost inside it, inner assemblies included; "" is the whole circuit.
     """
 
-    items: tuple[PowerItem, ...]
     delivered_w: float
     absorbed_w: float
     lost_w: float
     stored_w: float
-    residual_w: float
-    losses: Mapping[str, float] = field(default_factory=dict)
+
+    @property
+    def residual_w(self) -> float:
+        """delivered - absorbed - lost - stored: what the solution's tolerance leaves over."""
+        return self.delivered_w - self.absorbed_w - self.lost_w - self.stored_w
 
     @property
     def efficiency(self) -> float | None:
@@ -58,22 +59,72 @@ class PowerBalance:
         return self.absorbed_w / self.delivered_w if self.delivered_w > 0.0 else None
 
 
+@dataclass(frozen=True, slots=True)
+class PowerBalance:
+    """Power of a circuit at one instant, kind of island by kind of island; what passes from one kind to another is absorbed in the one and
+    delivered in the other.
+
+    Args:
+        items: every element.
+        flows: "electrical", and "rotation", "translation" where there are such islands. Heat islands carry heat, not power, and are left out.
+        losses: assembly path → W dissipated inside it, inner assemblies included; "" is the whole circuit.
+    """
+
+    items: tuple[PowerItem, ...]
+    flows: Mapping[str, PowerFlow]
+    losses: Mapping[str, float] = field(default_factory=dict)
+
+    @property
+    def electrical(self) -> PowerFlow:
+        """Of the electrical islands."""
+        return self.flows["electrical"]
+
+    @property
+    def delivered_w(self) -> float:
+        """Delivered in the electrical islands, W."""
+        return self.electrical.delivered_w
+
+    @property
+    def absorbed_w(self) -> float:
+        """Absorbed by loads of the electrical islands, W."""
+        return self.electrical.absorbed_w
+
+    @property
+    def lost_w(self) -> float:
+        """Dissipated in the electrical islands, W."""
+        return self.electrical.lost_w
+
+    @property
+    def residual_w(self) -> float:
+        """What the solution's tolerance leaves over, all islands together, W."""
+        return sum(flow.residual_w for flow in self.flows.values())
+
+    @property
+    def efficiency(self) -> float | None:
+        """Of the electrical islands."""
+        return self.electrical.efficiency
+
+
 def power_balance(circuit: Circuit, evaluate: Callable[[Sequence[Node]], Sequence[float]]) -> PowerBalance:
     """Add up the power of every element.
 
     Args:
-        circuit: whose branches are counted; heat islands carry heat as their through value and are left out.
+        circuit: whose branches are counted.
         evaluate: gives the values of circuit-level expressions.
     """
     branches = [b for b in circuit.branches.values() if b.domain is not Domain.HEAT]
     g = circuit.graph
     powers = evaluate([g.multiply(g.symbol("v", b.name), g.symbol("i", b.name)) for b in branches])
     items = _items(circuit, branches, powers)
+    kinds = dict.fromkeys(("electrical", *(item.domain for item in items)))
+    return PowerBalance(items, {kind: _flow([i for i in items if i.domain == kind]) for kind in kinds}, _losses(circuit, items))
+
+
+def _flow(items: Sequence[PowerItem]) -> PowerFlow:
     exchanged = [item.power_w for item in items if item.role == "exchange"]
-    delivered, absorbed = -sum(p for p in exchanged if p < 0.0), sum(p for p in exchanged if p > 0.0)
+    delivered, absorbed = sum(-p for p in exchanged if p < 0.0), sum(p for p in exchanged if p > 0.0)
     lost = sum(item.power_w for item in items if item.role == "loss")
-    stored = sum(item.power_w for item in items if item.role == "storage")
-    return PowerBalance(items, delivered, absorbed, lost, stored, delivered - absorbed - lost - stored, _losses(circuit, items))
+    return PowerFlow(delivered, absorbed, lost, sum(item.power_w for item in items if item.role == "storage"))
 
 
 def _items(circuit: Circuit, branches: Sequence[Branch], powers: Sequence[float]) -> tuple[PowerItem, ...]:
@@ -84,7 +135,9 @@ def _items(circuit: Circuit, branches: Sequence[Branch], powers: Sequence[float]
         name = branch.device or branch.name
         sums[name] = sums.get(name, 0.0) + power
         first.setdefault(name, branch)
-    return tuple(PowerItem(name, power, _role(circuit, first[name]), first[name].owner) for name, power in sums.items())
+    return tuple(
+        PowerItem(name, power, _role(circuit, first[name]), first[name].owner, first[name].domain.name.lower()) for name, power in sums.items()
+    )
 
 
 def _role(circuit: Circuit, branch: Branch) -> Role:

@@ -24,6 +24,8 @@ AFTER: Final = 3
 
 _POINTS_MAX: Final = 4  # a cubic's; a step with more interior points becomes several pieces
 
+_GAP_LEAST: Final = 1e-3  # between the points of a step, as a share of its length; methods have no smaller one
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class StepGrid:
@@ -254,6 +256,11 @@ def curve(grid: StepGrid, value: FloatArray) -> Curve:
             index = grid.first[rows][:, None] + np.arange(count)
             u = (grid.time[index] - start[rows][:, None]) / length[rows][:, None]
             coefficient[rows, :count] = _through(u, value[index])
+            if count > 2:  # so short a step that its inner times are lost to rounding: a straight line
+                flat = rows[np.diff(u, axis=1).min(axis=1) < _GAP_LEAST]
+                ends = value[grid.first[flat]], value[grid.first[flat] + count - 1]
+                coefficient[flat] = 0.0
+                coefficient[flat, 0], coefficient[flat, 1] = ends[0], ends[1] - ends[0]
     return Curve(start, length, coefficient)
 
 

@@ -40,7 +40,7 @@ def settled_content(settled: Settled) -> dict[str, Any]:
         "iterations": settled.iterations,
         "values": {name: {"value": value, "unit": settled.unit(name)} for name, value in zip(names, values, strict=True)},
         "poles": [asdict(pole) for pole in settled.poles],
-        "power": {key: getattr(balance, key) for key in ("delivered_w", "absorbed_w", "lost_w", "stored_w", "residual_w")},
+        "power": {kind: {**asdict(flow), "residual_w": flow.residual_w} for kind, flow in balance.flows.items()},
         "losses_w": dict(settled.losses),
         "findings": [asdict(finding) for finding in settled.findings],
     }

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 from polewise.circuit.model import Circuit, Domain
 from polewise.grammar.units import NONE, POWER, Dimension, format_value
+from polewise.results.balance import PowerFlow
 from polewise.results.settled import Settled
 from polewise.results.traces import families
 from polewise.terminal.style import Style
@@ -15,6 +16,7 @@ from polewise.terminal.tables import Heading, table, title_line
 _FOLD_AT = 12  # members of a family beyond this stand in one row, lowest to highest
 _ROWS_MAX = 400
 _POWER_TOLD_W = 1e-9  # less is what rounding leaves
+_ROUNDING = 1e-11  # likewise, as a share of the largest value beside it
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,7 +25,16 @@ class _Entry:
 
     name: str
     value: float
-    dimension: Dimension
+    domain: Domain
+
+    @property
+    def text(self) -> str:
+        """Its value with its unit."""
+        return _across_text(self.value, self.domain)
+
+
+def _across_text(value: float, domain: Domain) -> str:
+    return format_value(value, domain.across_dimension, prefer="rad/s" if domain is Domain.ROTATION else None)
 
 
 def settled_lines(settled: Settled, style: Style, *, inner: bool) -> list[str]:
@@ -50,7 +61,7 @@ def _nodes(settled: Settled, circuit: Circuit, style: Style, inner: bool) -> lis
         if not names:
             continue
         values = settled.values(names)
-        entries = [_Entry(node.name, value, domain.across_dimension) for node, value in zip(nodes, values, strict=True)]
+        entries = [_Entry(node.name, value, domain) for node, value in zip(nodes, values, strict=True)]
         word = {"v": "Potentials", "temp": "Temperatures", "speed": "Speeds"}[domain.across]
         lines += ["", title_line(word, style), *_columns(entries, style)]
     return lines
@@ -82,10 +93,10 @@ def _folded(entries: Sequence[_Entry]) -> list[tuple[str, str]]:
     for name, members in families([entry.name for entry in entries]).items():
         group = [by_name[m] for m in members]
         if len(group) <= _FOLD_AT:
-            pairs += [(entry.name, format_value(entry.value, entry.dimension)) for entry in group]
+            pairs += [(entry.name, entry.text) for entry in group]
         else:
             low, high = min(group, key=lambda e: e.value), max(group, key=lambda e: e.value)
-            pairs.append((f"{name} ({len(group)})", f"{format_value(low.value, low.dimension)} … {format_value(high.value, high.dimension)}"))
+            pairs.append((f"{name} ({len(group)})", f"{low.text} … {high.text}"))
     return pairs
 
 
@@ -104,7 +115,7 @@ class _PathValues:
         """As a line of the table."""
         domain = self.domain
         power = "" if domain is Domain.HEAT else power_text(self.power_w)
-        return [self.name, self.ends, format_value(self.through, domain.through_dimension), format_value(self.across, domain.across_dimension), power]
+        return [self.name, self.ends, format_value(self.through, domain.through_dimension), _across_text(self.across, domain), power]
 
 
 def _paths(settled: Settled, circuit: Circuit, style: Style, inner: bool) -> list[str]:
@@ -116,9 +127,11 @@ def _paths(settled: Settled, circuit: Circuit, style: Style, inner: bool) -> lis
     for path, domain in zip(paths, domains, strict=True):
         asked += [f"{path.name}.{domain.through}", f"{path.name}.{domain.across}"]
     got = settled.values(asked)
+    largest = {domain: max(abs(got[2 * k]) for k, d in enumerate(domains) if d is domain) for domain in set(domains)}
     values = []
     for k, (path, domain) in enumerate(zip(paths, domains, strict=True)):
         through, across = got[2 * k], got[2 * k + 1]
+        through = _rounded(through, largest[domain])
         values.append(_PathValues(path.name, f"{path.left} to {path.right}", through, across, across * through, domain))
     rows = _fold_paths(values)
     headings = (
@@ -207,17 +220,36 @@ def _assemblies(settled: Settled, circuit: Circuit, style: Style) -> list[str]:
 
 
 def _power(settled: Settled, style: Style) -> list[str]:
-    balance = settled.power_balance
-    rows = [
-        ["delivered", format_value(balance.delivered_w, POWER), ""],
-        ["absorbed by loads", format_value(balance.absorbed_w, POWER), _share(balance.absorbed_w, balance.delivered_w)],
-        ["dissipated", format_value(balance.lost_w, POWER), _share(balance.lost_w, balance.delivered_w)],
-        ["left over", format_value(balance.residual_w, POWER, digits=2), "what the solution's tolerance leaves"],
+    flows = settled.power_balance.flows
+    rows = []
+    for what, pick in _FLOW_ROWS:
+        row = [what]
+        for flow in flows.values():
+            value = _rounded(pick(flow), flow.delivered_w)
+            share = f"{100.0 * value / flow.delivered_w:.4g} %" if flow.delivered_w > 0.0 and what in _SHARED else ""
+            row += [format_value(value, POWER), share]
+        rows.append(row)
+    headings = [Heading("")]
+    for kind in flows:
+        headings += [Heading(kind, right=True), Heading("", right=True)]
+    largest = max((abs(flow.residual_w) / flow.delivered_w for flow in flows.values() if flow.delivered_w > 0.0), default=0.0)
+    return [
+        "",
+        title_line("Power", style),
+        *table(headings, rows, style),
+        f"  left over by the solution's tolerance: {largest:.1g} of what is delivered",
     ]
-    if abs(balance.stored_w) > 1e-9 * max(balance.delivered_w, 1e-300):
-        rows.insert(3, ["into storage", format_value(balance.stored_w, POWER), ""])
-    return ["", title_line("Power", style), *table((Heading(""), Heading("", right=True), Heading("")), rows, style)[1:]]
 
 
-def _share(part: float, whole: float) -> str:
-    return f"{100.0 * part / whole:.4g} %" if whole > 0.0 else ""
+_FLOW_ROWS: tuple[tuple[str, Callable[[PowerFlow], float]], ...] = (
+    ("delivered", lambda flow: flow.delivered_w),
+    ("absorbed by loads", lambda flow: flow.absorbed_w),
+    ("dissipated", lambda flow: flow.lost_w),
+    ("into storage", lambda flow: flow.stored_w),
+)
+_SHARED = ("absorbed by loads", "dissipated")
+
+
+def _rounded(value: float, size: float) -> float:
+    """0 for what is nothing but rounding beside `size`."""
+    return 0.0 if abs(value) < _ROUNDING * abs(size) else value

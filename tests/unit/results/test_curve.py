@@ -84,6 +84,14 @@ def test_steps_with_many_inner_points_become_several_pieces() -> None:
     assert got.at(np.array([0.5]))[0] == pytest.approx(0.125)
 
 
+def test_a_step_shorter_than_the_rounding_of_its_times() -> None:
+    start = 6e-3
+    end = np.nextafter(start, 1.0)
+    got = _curve([(0.0, END, 1.0), (start, END, 2.0), (start, INTERIOR, 2.5), (end, INTERIOR, 2.7), (end, END, 3.0), (1.0, END, 3.0)])
+    assert got.has_nan() is None
+    assert got.highest()[0] == 3.0
+
+
 def test_last_time_outside_a_band() -> None:
     got = _sampled(lambda t: math.exp(-t), list(np.linspace(0.0, 10.0, 400)))
     assert got.last_outside(-0.01, 0.01) == pytest.approx(math.log(100.0), rel=1e-7)

@@ -82,3 +82,27 @@ def test_collapsed_load_is_a_failure_with_its_figure() -> None:
     assert polewise.from_text(text.format(p=20)).settled()["b.v"] == pytest.approx(72.360679775, rel=1e-9)  # (100 + sqrt(100^2 - 4*0.1*20000))/2
     with pytest.raises(polewise.NoOperatingPoint, match="25 kW"):
         polewise.from_text(text.format(p=30)).settled()
+
+
+SHAFT = """title "Motor"
+reference gnd
+reference frame (rad/s)
+given k = 0.5 V*s/rad
+supply: bus --[50 V]-- gnd
+arm:    bus --[ra: 1 ohm]--[emf: v = k * shaft.speed]-- gnd
+twist:  frame --[k * arm.i]-- shaft
+drag:   shaft --[0.25 N*m*s/rad]-- frame
+"""
+
+
+def test_power_that_passes_to_a_shaft_counts_in_both_kinds_of_islands() -> None:
+    # k*i = 0.25 w and 50 - i = k*w: i = w/2, w = 50
+    settled = polewise.from_text(SHAFT).settled()
+    assert settled["shaft.speed"] == pytest.approx(50.0, rel=1e-9)
+    electrical, rotation = (settled.power_balance.flows[kind] for kind in ("electrical", "rotation"))
+    assert electrical.delivered_w == pytest.approx(1250.0, rel=1e-9)
+    assert electrical.absorbed_w == pytest.approx(625.0, rel=1e-9)
+    assert electrical.lost_w == pytest.approx(625.0, rel=1e-9)
+    assert rotation.delivered_w == pytest.approx(625.0, rel=1e-9)
+    assert rotation.lost_w == pytest.approx(625.0, rel=1e-9)
+    assert settled.losses[""] == pytest.approx(1250.0, rel=1e-9)

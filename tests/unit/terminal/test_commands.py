@@ -140,7 +140,7 @@ def test_settle_prints_the_operating_point(good: Path, say) -> None:
 
 def test_settle_as_json_balances(good: Path, say) -> None:
     content = json.loads(say("settle", good, "--json")[1])
-    power = content["power"]
+    power = content["power"]["electrical"]
     assert power["delivered_w"] == pytest.approx(power["absorbed_w"] + power["lost_w"], rel=1e-9)
     assert content["values"]["out.v"]["unit"] == "V"
     assert content["poles"][0]["mode"] == "continuous"
