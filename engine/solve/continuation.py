@@ -41,15 +41,17 @@ class RampOutcome:
     factors: Factors | None
 
 
-def ramp(square: SquareSystem, start: NewtonOutcome, parameter: int, refused: Callable[[FloatArray], bool]) -> RampOutcome:
-    """Follow the solution `start` at 0 until the parameter is 1.
+def ramp(
+    square: SquareSystem, start: NewtonOutcome, parameter: int, refused: Callable[[FloatArray], bool], *, begin: float = 0.0
+) -> RampOutcome:
+    """Follow the solution `start` at `begin` until the parameter is 1.
 
     Args:
         square: its `p[parameter]` is set here and left at the value reached.
-        start: converged at parameter 0.
+        start: converged at parameter `begin`.
         refused: solutions that don't count as being on the branch that is wanted.
     """
-    z, at, step, iterations = start.z, 0.0, STEP_FIRST, 0
+    z, at, step, iterations = start.z, begin, STEP_FIRST, 0
     factors = start.factors
     while at < 1.0:
         target = min(1.0, at + step)

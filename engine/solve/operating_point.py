@@ -73,6 +73,9 @@ def find_operating_point(
         raise diagnosis.depends_on_time([diagnosis.named_row(system, r.kind, r.index) for r in moving])
     return _Search(system, guess, start_latches or {}).run()
 
+# Shares of the constant powers at which the ramp may begin.
+POWER_RAMP_BEGINS = (0.0, 0.01, 0.1, 1.0)
+
 
 class _Search:
     """One search with its square system and the points at which strategies ended."""
@@ -102,14 +105,9 @@ class _Search:
                 return self._accept(outcome, "newton")
         if not self.powered:
             return self._accept(*self._unpowered())
-        square.p[system.power_scale] = 0.0
-        strategy: Strategy = "newton"
-        base = self._newton(self.start)
-        if not base.converged:
-            base, strategy = self._unpowered()
-        self._refuse_singular(base)
-        self.dead = frozenset(self._collapsed(base.z))
-        result = ramp(square, base, system.power_scale, self._refused)
+        base, strategy, begin = self._base()
+        self.dead = frozenset(self._collapsed(base.z)) if begin == 0.0 else frozenset()
+        result = ramp(square, base, system.power_scale, self._refused, begin=begin)
         self.iterations += result.iterations
         if result.limit == "none":
             square.p[system.power_scale] = 1.0
@@ -126,6 +124,27 @@ class _Search:
             raise self._power_limit(result)
         self.ends.append(end)
         raise self._failure(f"; up to {result.reached:.3g} times the constant powers there is one")
+
+    def _base(self) -> tuple[NewtonOutcome, Strategy, float]:
+        """A solution to ramp the constant powers up from: without any, or with as little as makes it the only one.
+
+        A step-down stage with a diode has no single point of rest without load: its output may stand anywhere above the set point.
+        """
+        failure: PolewiseError | None = None
+        for begin in POWER_RAMP_BEGINS:
+            self.square.p[self.system.power_scale] = begin
+            strategy: Strategy = "newton"
+            base = self._newton(self.start)
+            try:
+                if not base.converged or (begin > 0.0 and self._refused(base.z)):
+                    base, strategy = self._unpowered()
+                self._refuse_singular(base)
+            except PolewiseError as error:
+                failure = failure or error
+                continue
+            return base, strategy, begin
+        assert failure is not None
+        raise failure
 
     def _start_point(self, guess: FloatArray | None) -> FloatArray:
         """Stated values; held parameters from their expressions there."""
