@@ -17,6 +17,9 @@ DENSE_LIMIT = 200  # up to here dense factors are faster than sparse ones
 NULL_SPACE_LIMIT = 1500  # up to here a full singular value decomposition explains a singular matrix; above, inverse iteration gives one vector
 SINGULAR_RELATIVE = 1e-13  # of an equilibrated matrix: below, the smallest singular value is rounding
 
+DECOMPOSED_MOST = 40  # unknowns up to which a singular matrix is decomposed into singular values; beyond, damped least squares are cheaper
+DAMPING = 1e-7  # of the damped least squares, in equilibrated units
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class SparseMatrix:
@@ -127,6 +130,8 @@ def _dense(matrix: SparseMatrix, scaled: SparseMatrix, row_size: FloatArray, col
     lu, pivots, info = lapack.dgetrf(full)
     diagonal = np.diagonal(lu)
     if info != 0 or np.min(np.abs(diagonal)) < SINGULAR_RELATIVE:
+        if matrix.n > DECOMPOSED_MOST:
+            return _damped(matrix, scaled, row_size, column_scale)
         left, values, right_t = np.linalg.svd(full)
         keep = values > SINGULAR_RELATIVE * max(values[0], 1e-300) * matrix.n
         inverse = np.where(keep, 1.0 / np.where(keep, values, 1.0), 0.0)
@@ -152,22 +157,30 @@ def _sparse(matrix: SparseMatrix, scaled: SparseMatrix, row_size: FloatArray, co
         if np.min(np.abs(diagonal)) < SINGULAR_RELATIVE:
             raise RuntimeError
     except RuntimeError:
-        # min |B x - b|^2 + d^2 |x|^2 as a regular sparse system.
-        damping = 1e-7
-        eye = scipy.sparse.identity(n, format="csc")
-        both = splu(scipy.sparse.bmat([[eye, csc], [csc.T, -(damping**2) * eye]], format="csc"))
-        zero = np.zeros(n)
-        return Factors(
-            matrix,
-            row_size,
-            column_scale,
-            0,
-            False,
-            lambda b: both.solve(np.concatenate([b, zero]))[n:],
-            lambda b: both.solve(np.concatenate([zero, b]))[:n],
-        )
+        return _damped(matrix, scaled, row_size, column_scale)
     sign = _parity(lu.perm_r) * _parity(lu.perm_c) * (-1) ** int(np.count_nonzero(diagonal < 0))
     return Factors(matrix, row_size, column_scale, sign, True, lu.solve, lambda b: lu.solve(b, "T"))
+
+
+def _damped(matrix: SparseMatrix, scaled: SparseMatrix, row_size: FloatArray, column_scale: FloatArray) -> Factors:
+    """Damped least squares, min |B x - b|^2 + d^2 |x|^2, as a regular sparse system."""
+    import scipy.sparse
+    from scipy.sparse.linalg import splu
+
+    n = matrix.n
+    csc = scipy.sparse.csc_matrix((scaled.values, scaled.row_idx, scaled.col_ptr), shape=(n, n))
+    eye = scipy.sparse.identity(n, format="csc")
+    both = splu(scipy.sparse.bmat([[eye, csc], [csc.T, -(DAMPING**2) * eye]], format="csc"))
+    zero = np.zeros(n)
+    return Factors(
+        matrix,
+        row_size,
+        column_scale,
+        0,
+        False,
+        lambda b: both.solve(np.concatenate([b, zero]))[n:],
+        lambda b: both.solve(np.concatenate([zero, b]))[:n],
+    )
 
 
 def _parity(permutation: IntArray) -> int:
