@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from polewise.results.settled import PoleState, Settled
     from polewise.results.verdict import RequirementVerdict, Verdict
 
-__version__ = "0.1.0"
+__version__: str  # of the installed package; pyproject.toml is its one source
 
 _HOMES = {
     "DamagedRecording": "polewise.results.failures",
@@ -82,6 +82,10 @@ __all__ = [
 
 
 def __getattr__(name: str) -> Any:
+    if name == "__version__":
+        from importlib.metadata import version
+
+        return version("polewise")
     home = _HOMES.get(name)
     if home is None:
         raise AttributeError(f"module {__name__!r} has no attribute {name!r}")

@@ -19,8 +19,10 @@ FOLDERS: dict[str, str] = PROJECT["tool"]["setuptools"]["package-dir"]
 
 # Imports point down this list only; parts on one line do not know each other.
 LAYERS = (
+    ("__main__",),
     ("terminal",),
     ("api",),
+    ("analysis",),
     ("results",),
     ("solve",),
     ("equations",),

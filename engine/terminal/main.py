@@ -11,7 +11,6 @@ from typing import TYPE_CHECKING, Any, Final
 
 import click
 
-import polewise
 from polewise.errors import EXIT_HOLDS, EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, PolewiseError
 from polewise.terminal.style import Style, style_of
 
@@ -107,7 +106,7 @@ _as_json = click.option("--json", "as_json", is_flag=True, help="Print one JSON 
 
 
 @click.group(context_settings=_CONTEXT, epilog=_CODES)
-@click.version_option(polewise.__version__, prog_name="polewise", message="%(prog)s %(version)s")
+@click.version_option(package_name="polewise", prog_name="polewise", message="%(prog)s %(version)s")
 def commands() -> None:
     """Averaged simulation of power-conversion systems from one plain-text netlist.
 

@@ -7,13 +7,13 @@ import threading
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass
+from importlib.metadata import version
 from pathlib import Path
 from types import FrameType
 from typing import Any
 
 import click
 
-import polewise
 from polewise.api import Sampling, StudyPlan, System, finished
 from polewise.errors import EXIT_HOLDS, EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, EXIT_REQUIREMENT_FAILS, PolewiseError
 from polewise.results.failures import OutputFailed
@@ -194,7 +194,7 @@ class _Files:
             "title": self._system.title,
             "netlist": list(plan.circuit.files),
             "given": dict(self._options.given),
-            "program": f"polewise {polewise.__version__}",
+            "program": f"polewise {version('polewise')}",
             "complete": result is not None and result.complete,
             "reason": reason,
             "planned_s": plan.study.run_for_s,
