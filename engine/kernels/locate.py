@@ -16,10 +16,21 @@ from polewise.kernels.stamp import STAMP
 from polewise.kernels.step import attempt_step_c, run_inside_c
 from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
 from polewise.kernels.tape import WHOLE
-from polewise.kernels.workspace import N_NEEDS_RESTART, N_RELOCATIONS, S_BAND, S_T
+from polewise.kernels.workspace import (
+    N_CHATTER_LIMIT,
+    N_LOCATED,
+    N_NEEDS_RESTART,
+    N_RELOCATIONS,
+    N_WORST_SWITCH,
+    S_BAND,
+    S_CHATTER_T,
+    S_CHATTER_WINDOW,
+    S_T,
+)
 
 DONE = int(Status.DONE)
 EVENT = int(Status.EVENT)
+CHATTER = int(Status.CHATTER)
 FACTORS_FULL = int(Status.FACTORS_FULL)
 NO_CONVERGENCE = int(Status.NO_CONVERGENCE)
 NOT_LOCATED = -1
@@ -165,12 +176,19 @@ def _build(stamp: int):
         nearest = worst_of_c(F, W, reg, lanes)
         W[N_NEEDS_RESTART] = 1
         watched = False
+        if not (abs(F[S_T] - F[S_CHATTER_T]) <= F[S_CHATTER_WINDOW]):
+            F[S_CHATTER_T] = F[S_T]
+            W[N_LOCATED] = 0
+        W[N_LOCATED] += 1
         for s in range(W[SIZE_S]):
             if W[candidate + s] == 1:
                 value = F[reg + lanes * W[switch_reg + s]]
                 beyond = violation_c(F, W, s, value)
                 if beyond / F[switch_now + s] >= nearest or beyond >= -band * F[switch_scale + s]:
                     status = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(0)))
+                    if W[N_LOCATED] > W[N_CHATTER_LIMIT]:
+                        W[N_WORST_SWITCH] = s
+                        return CHATTER
                     if status != DONE:
                         return status
                     watched = watched or W[W[AT_SWITCH_WATCHED] + s] != 0

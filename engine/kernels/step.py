@@ -133,6 +133,7 @@ NEWTON_LIMIT = 8  # iterations per attempt
 STEP_RATIO_SAME = 1e-7  # factors serve a step size this close to theirs as if it were the same (clock periods differ by rounding)
 ROUND_OFF = 40 * 2.220446049250313e-16  # corrections this small against |x| + scale are rounding
 DIVERGED = 0.99  # convergence rate from which Newton has failed
+STALLED = 0.01  # a correction this small in error weights that no longer shrinks is rounding (sums of large numbers), and good enough
 
 
 def _build(stamp: int):
@@ -301,6 +302,8 @@ def _build(stamp: int):
                 theta = rate if iteration == 2 else np.sqrt(rate * rate_old)
                 rate_old = rate
                 F[S_THETA] = theta
+                if rate >= DIVERGED and max(norm, norm_old) <= STALLED:
+                    return DONE
                 if theta >= DIVERGED:
                     return NO_CONVERGENCE
                 eta = theta / (1.0 - theta)

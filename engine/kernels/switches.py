@@ -22,21 +22,15 @@ from polewise.kernels.opcodes import SWITCH_FLOOR, SWITCH_POSITIVE, SWITCH_TABLE
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.tape import FLOOR_LIMIT, table_segment_c
 from polewise.kernels.workspace import (
-    N_CHATTER_LIMIT,
     N_EVENTS,
     N_FACTORS_READY,
-    N_FLIPS,
     N_JACOBIAN_AGE,
     N_RESTART_FACTORS,
     N_START_READY,
     N_WORST_SWITCH,
-    S_CHATTER_T,
-    S_CHATTER_WINDOW,
-    S_T,
 )
 
 DONE = int(Status.DONE)
-CHATTER = int(Status.CHATTER)
 OUTSIDE_TABLE = int(Status.OUTSIDE_TABLE)
 
 
@@ -82,7 +76,7 @@ def _build(stamp: int):
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def set_mode(F, W, s, m):
-        """Flip switch s to mode m. Returns DONE, CHATTER or OUTSIDE_TABLE."""
+        """Flip switch s to mode m. Returns DONE or OUTSIDE_TABLE."""
         _ = stamp
         W[W[AT_MODE] + s] = m
         W[W[AT_FLIPPED] + s] += 1
@@ -97,13 +91,6 @@ def _build(stamp: int):
             if W[W[AT_TABLE_CLOSED] + table] != 0 and (m == 0 or m == segments):
                 W[N_WORST_SWITCH] = s
                 return OUTSIDE_TABLE
-        if not (abs(F[S_T] - F[S_CHATTER_T]) <= F[S_CHATTER_WINDOW]):
-            F[S_CHATTER_T] = F[S_T]
-            W[N_FLIPS] = 0
-        W[N_FLIPS] += 1
-        if W[N_FLIPS] > W[N_CHATTER_LIMIT]:
-            W[N_WORST_SWITCH] = s
-            return CHATTER
         return DONE
 
     return violation, next_mode, set_mode
