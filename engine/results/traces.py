@@ -13,25 +13,32 @@ from polewise.results.curve import Curve, FloatArray
 
 BINS: Final = 1500  # columns of a figure that a reader can tell apart
 _SUBDIVISION_MAX: Final = 400  # points drawn for one long step
+_POINTS_MAX: Final = 4  # points a bin may hold before they are thinned
 _NUMBER: Final = re.compile(r"\d+")
 
 
 def polyline(curve: Curve, bins: int = BINS) -> tuple[FloatArray, FloatArray]:
-    """Points (time, value) to join by straight lines: the curve itself where there are few steps, else lowest and highest value of each bin."""
+    """Points (time, value) to join by straight lines: the curve itself; where a bin holds many points only its first, lowest, highest, last."""
     if curve.is_empty:
         return np.zeros(0), np.zeros(0)
     span = curve.end_s - curve.begin_s
-    if curve.start.size <= 2 * bins:
-        return _refined(curve, span / bins)
-    index = np.minimum(((curve.start - curve.begin_s) / span * bins).astype(np.int64), bins - 1)
+    time, value = _refined(curve, span / bins)
+    return (time, value) if time.size <= _POINTS_MAX * bins else _thinned(time, value, curve.begin_s, span, bins)
+
+
+def _thinned(time: FloatArray, value: FloatArray, begin_s: float, span_s: float, bins: int) -> tuple[FloatArray, FloatArray]:
+    """At most four points of each bin, in their order."""
+    index = np.minimum(((time - begin_s) / span_s * bins).astype(np.int64), bins - 1)
     first = np.flatnonzero(np.diff(index, prepend=-1))
-    low, high = curve.piece_ranges()
-    low, high = np.fmin.reduceat(low, first), np.fmax.reduceat(high, first)
-    time = curve.start[first]
-    rising = curve.coefficient[first, 0] - low < high - curve.coefficient[first, 0]  # draw the nearer extreme first
-    pair = np.where(rising[:, None], np.column_stack([low, high]), np.column_stack([high, low]))
-    times = np.append(np.repeat(time, 2), curve.end_s)
-    return times, np.append(pair.ravel(), curve.last_value)
+    last = np.append(first[1:], time.size) - 1
+    bin_of = np.cumsum(np.diff(index, prepend=-1) != 0) - 1
+    lowest, highest = np.fmin.reduceat(value, first), np.fmax.reduceat(value, first)
+    keep = np.zeros(time.size, dtype=bool)
+    keep[first] = keep[last] = True
+    for extreme in (lowest, highest):
+        hits = np.flatnonzero(value == extreme[bin_of])
+        keep[hits[np.flatnonzero(np.diff(bin_of[hits], prepend=-1))]] = True
+    return time[keep], value[keep]
 
 
 def _refined(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArray]:
