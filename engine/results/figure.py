@@ -26,7 +26,7 @@ _FAINT: Final = "#c9ced2"
 _PAPER: Final = "#fdfdfb"
 _HOLDS: Final = "#4d7a57"
 _FAILS: Final = "#b3261e"
-_TAGS_MAX: Final = 9  # numbered marks of events
+_TAGS_MAX: Final = 12  # numbered marks of events
 _WIDTH_IN: Final = 10.0
 _PANEL_IN: Final = 2.1
 
@@ -158,9 +158,9 @@ def _time_scale(span_s: float) -> tuple[float, str]:
     return 3600.0, "h"
 
 
-def _value_scale(dimension: Dimension, size: float) -> tuple[float, str]:
+def _value_scale(dimension: Dimension, size: float, prefer: str | None) -> tuple[float, str]:
     """Factor and unit text for an axis whose largest value has this size."""
-    text = format_value(size, dimension, digits=3) if np.isfinite(size) and size > 0.0 else format_value(0.0, dimension)
+    text = format_value(size if np.isfinite(size) else 0.0, dimension, digits=3, prefer=prefer)
     _, _, symbol = text.partition(" ")
     if not symbol:
         return 1.0, "1"
@@ -172,22 +172,24 @@ def _value_scale(dimension: Dimension, size: float) -> tuple[float, str]:
 
 
 def _draw_panel(ax: Axes, recording: Recording, verdict: Verdict, panel: Panel, scale_s: float, facts: FigureFacts) -> None:
-    factor, symbol = _value_scale(panel.dimension, max((_size(t.values) for t in panel.traces), default=0.0))
+    drawn = frozenset[str]().union(*(trace.names for trace in panel.traces))
+    prefer = next((r.prefer for r in verdict.requirements if r.subject in drawn and r.dimension == panel.dimension and r.prefer), None)
+    factor, symbol = _value_scale(panel.dimension, max((_size(t.values) for t in panel.traces), default=0.0), prefer)
     labelled: list[tuple[float, str, str]] = []
     for number, trace in enumerate(panel.traces):
         shade = _COLOURS[number % len(_COLOURS)]
         if trace.band is not None:
             ax.fill_between(trace.times / scale_s, trace.band.low / factor, trace.band.high / factor, color=shade, alpha=0.22, linewidth=0)
-        ax.plot(trace.times / scale_s, trace.values / factor, color=shade, linewidth=1.2, solid_joinstyle="round")
+        line = "-" if number < len(_COLOURS) else (0, (4, 2))  # colours come round again, dashed
+        ax.plot(trace.times / scale_s, trace.values / factor, color=shade, linewidth=1.2, linestyle=line, solid_joinstyle="round")
         if trace.values.size:
             labelled.append((float(trace.values[-1]) / factor, trace.label, shade))
-    drawn = frozenset[str]().union(*(trace.names for trace in panel.traces))
     for requirement in verdict.requirements:
         if requirement.subject in drawn:
             _draw_requirement(ax, recording, requirement, scale_s, factor, facts)
     _frame(ax)
     _end_labels(ax, labelled, panel.left_out)
-    word = _WORDS.get(panel.dimension)
+    word = {"J": "energy", "N*m": "torque"}.get(prefer or "", _WORDS.get(panel.dimension))
     ax.set_ylabel(f"{word} ({symbol})" if word else f"({symbol})", color=_INK, fontsize=9)
 
 
@@ -306,12 +308,12 @@ def _barrier(ax: Axes, times: Any, values: Any, forbidden: str, shade: str) -> N
     from matplotlib import patheffects
 
     angle = 90.0 if forbidden == "above" else -90.0  # counted from the line's direction, to its left
-    strokes = patheffects.TickedStroke(spacing=9.0, angle=angle, length=0.55, linewidth=0.8, foreground=shade)
+    strokes = patheffects.TickedStroke(spacing=14.0, angle=angle, length=0.55, linewidth=0.8, foreground=shade)
     ax.plot(times, values, color=shade, linewidth=1.0, path_effects=[strokes, patheffects.Normal()], zorder=1.5)
 
 
 def _tags(facts: FigureFacts) -> list[tuple[float, str]]:
-    """Events as (time, text), those closer than two hundredths of the axis joined, at most nine."""
+    """Events as (time, text), those closer than two hundredths of the axis joined, at most twelve."""
     joined: list[list[Mark]] = []
     for mark in facts.marks:
         if joined and mark.time_s - joined[-1][0].time_s < 0.02 * facts.reached_s:
@@ -322,7 +324,7 @@ def _tags(facts: FigureFacts) -> list[tuple[float, str]]:
     if len(tags) > _TAGS_MAX:
         more = sum(len(group) for group in joined[_TAGS_MAX:])
         tags = tags[:_TAGS_MAX]
-        tags[-1] = (tags[-1][0], f"{tags[-1][1]}; {more} later events are not marked")
+        tags[-1] = (tags[-1][0], f"{tags[-1][1]}; {more} later event{' is' if more == 1 else 's are'} not marked")
     return tags
 
 

@@ -73,9 +73,9 @@ def _details(requirement: RequirementVerdict) -> list[str]:
     lines = [requirement.text]
     if requirement.document:
         lines.append(requirement.document)
-    for label, value in (("value", requirement.value), ("limit", requirement.limit), ("margin", requirement.margin)):
-        if value is not None:
-            lines.append(f"{label}: {format_value(value, requirement.dimension, digits=6)}")
+    for label, text in (("value", requirement.value_text), ("limit", requirement.limit_text), ("margin", requirement.margin_text)):
+        if text:
+            lines.append(f"{label}: {text}")
     if requirement.time_s is not None:
         lines.append(f"worst at: {format_value(requirement.time_s, TIME, digits=6)}")
     return lines

@@ -54,7 +54,7 @@ def _requirement(r: RequirementVerdict) -> dict[str, Any]:
         "passed": r.passed,
         "evaluated": r.evaluated,
         "measure": r.measure,
-        "unit": unit_text(r.dimension),
+        "unit": unit_text(r.dimension, prefer=r.prefer),
         "value": r.value,
         "side": r.side or None,
         "limit": r.limit,

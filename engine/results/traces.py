@@ -9,7 +9,7 @@ from typing import Final
 
 import numpy as np
 
-from polewise.results.curve import Curve, FloatArray
+from polewise.results.curve import Curve, FloatArray, IntArray
 
 BINS: Final = 1500  # columns of a figure that a reader can tell apart
 _SUBDIVISION_MAX: Final = 400  # points drawn for one long step
@@ -18,31 +18,57 @@ _NUMBER: Final = re.compile(r"\d+")
 
 
 def polyline(curve: Curve, bins: int = BINS) -> tuple[FloatArray, FloatArray]:
-    """Points (time, value) to join by straight lines: the curve itself; where a bin holds many points only its first, lowest, highest, last."""
+    """Points (time, value) to join by straight lines: long steps as the curve runs, through their extremes; many short ones by what they span."""
     if curve.is_empty:
         return np.zeros(0), np.zeros(0)
-    span = curve.end_s - curve.begin_s
-    time, value = _refined(curve, span / bins)
-    return (time, value) if time.size <= _POINTS_MAX * bins else _thinned(time, value, curve.begin_s, span, bins)
+    width_s = (curve.end_s - curve.begin_s) / bins
+    if curve.start.size <= 2 * bins:
+        return _refined(curve, width_s)
+    is_long = curve.length >= width_s
+    long = np.flatnonzero(is_long)
+    times, values, order = [], [], []
+    if long.size:
+        part = Curve(curve.start[long], curve.length[long], curve.coefficient[long])
+        t, v, piece = _refined_pieces(part, width_s)
+        times.append(t)
+        values.append(v)
+        order.append(long[piece])
+    short = np.flatnonzero(~is_long)
+    if short.size:
+        t, v, piece = _spanned(curve, short, width_s)
+        times.append(t)
+        values.append(v)
+        order.append(piece)
+    place = np.argsort(np.concatenate(order), kind="stable")
+    return np.concatenate(times)[place], np.concatenate(values)[place]
 
 
-def _thinned(time: FloatArray, value: FloatArray, begin_s: float, span_s: float, bins: int) -> tuple[FloatArray, FloatArray]:
-    """At most four points of each bin, in their order."""
-    index = np.minimum(((time - begin_s) / span_s * bins).astype(np.int64), bins - 1)
-    first = np.flatnonzero(np.diff(index, prepend=-1))
-    last = np.append(first[1:], time.size) - 1
-    bin_of = np.cumsum(np.diff(index, prepend=-1) != 0) - 1
-    lowest, highest = np.fmin.reduceat(value, first), np.fmax.reduceat(value, first)
-    keep = np.zeros(time.size, dtype=bool)
-    keep[first] = keep[last] = True
-    for extreme in (lowest, highest):
-        hits = np.flatnonzero(value == extreme[bin_of])
-        keep[hits[np.flatnonzero(np.diff(bin_of[hits], prepend=-1))]] = True
-    return time[keep], value[keep]
+def _spanned(curve: Curve, short: IntArray, width_s: float) -> tuple[FloatArray, FloatArray, IntArray]:
+    """Short pieces, neighbours within one bin as four points: first value, both extremes in the order that is likelier, last value."""
+    index = ((curve.start[short] - curve.begin_s) / width_s).astype(np.int64)
+    fresh = np.ones(short.size, dtype=bool)
+    fresh[1:] = (np.diff(index) != 0) | (np.diff(short) != 1)
+    first = np.flatnonzero(fresh)
+    last = np.append(first[1:], short.size) - 1
+    low, high = curve.piece_ranges()
+    low, high = np.fmin.reduceat(low[short], first), np.fmax.reduceat(high[short], first)
+    a, b = short[first], short[last]
+    begin, end = curve.coefficient[a, 0], curve.coefficient[b].sum(axis=1)
+    start_s, end_s = curve.start[a], curve.start[b] + curve.length[b]
+    middle_s = 0.5 * (start_s + end_s)
+    low_first = begin - low < high - begin
+    one, other = np.where(low_first, low, high), np.where(low_first, high, low)
+    times = np.column_stack([start_s, middle_s, middle_s, end_s]).ravel()
+    return times, np.column_stack([begin, one, other, end]).ravel(), np.repeat(a, 4)
 
 
 def _refined(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArray]:
-    """Each piece from its start to its end in parts of about width_s, through its own extremes; at a jump both sides."""
+    times, values, _ = _refined_pieces(curve, width_s)
+    return times, values
+
+
+def _refined_pieces(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArray, IntArray]:
+    """Each piece from its start to its end in parts of about width_s, through its own extremes; at a jump both sides. With each point's piece."""
     stationary = curve.stationary()
     turns = np.maximum(*stationary) > 0.0
     parts = np.clip(np.ceil(curve.length / width_s), 1, _SUBDIVISION_MAX).astype(np.int64)
@@ -56,7 +82,7 @@ def _refined(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArray]:
         u[first[k] + np.clip(np.rint(place[k] * parts[k]).astype(np.int64), 1, parts[k] - 1)] = place[k]
     c = curve.coefficient[piece]
     value = c[:, 0] + u * (c[:, 1] + u * (c[:, 2] + u * c[:, 3]))
-    return curve.start[piece] + u * curve.length[piece], value
+    return curve.start[piece] + u * curve.length[piece], value, piece
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -79,9 +105,10 @@ def band(curves: Iterable[Curve], begin_s: float, end_s: float, bins: int = BINS
         value = np.where(np.isnan(value), curve.last_value if not curve.is_empty else np.nan, value)
         low, high, total = np.fmin(low, value), np.fmax(high, value), total + value
         smallest, largest = curve.piece_ranges()
-        index = np.clip(((curve.start - begin_s) / (end_s - begin_s) * bins).astype(np.int64), 0, bins)
-        np.fmin.at(low, index, smallest)
-        np.fmax.at(high, index, largest)
+        short = curve.length <= (end_s - begin_s) / bins  # longer ones are seen at the edges
+        index = np.clip(((curve.start[short] - begin_s) / (end_s - begin_s) * bins).astype(np.int64), 0, bins)
+        np.fmin.at(low, index, smallest[short])
+        np.fmax.at(high, index, largest[short])
         count += 1
     return Band(edges, low, high, total / max(count, 1))
 

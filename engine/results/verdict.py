@@ -14,6 +14,7 @@ from polewise.results.curve import AFTER, BEFORE, Curve
 from polewise.results.measures import MEASURES, Measured, MeasureInput
 from polewise.results.plan import Judged, Limit
 from polewise.results.recording import Recording, recorded_curve
+from polewise.results.wording import difference_text, preferred_unit, value_text
 
 # A limit counts as touched, not crossed, within this share of its size: far below any solver tolerance, above the rounding of an interpolated
 # value that rests at its bound.
@@ -37,7 +38,8 @@ class RequirementVerdict:
         why: one sentence.
         dimension: of value, limit and margin.
         window_s: what was asked for; its end is None for the study's end.
-        subject: column that was judged.
+        subject: column that was judged. low, high: its limits, SI, or the columns of limits that vary.
+        prefer: unit to print values in, from the requirement's own text.
         span: where the requirement stands.
     """
 
@@ -60,6 +62,22 @@ class RequirementVerdict:
     low: Limit
     high: Limit
     span: Span
+    prefer: str | None = None
+
+    @property
+    def value_text(self) -> str:
+        """The value with its unit, "" where there is none."""
+        return "" if self.value is None else value_text(self.value, self.dimension, prefer=self.prefer)
+
+    @property
+    def limit_text(self) -> str:
+        """The limit with its unit, "" where there is none."""
+        return "" if self.limit is None else value_text(self.limit, self.dimension, prefer=self.prefer)
+
+    @property
+    def margin_text(self) -> str:
+        """The margin with its unit, "" where there is none."""
+        return "" if self.margin is None else difference_text(self.margin, self.dimension, prefer=self.prefer, digits=3)
 
 
 @dataclass(frozen=True, slots=True)
@@ -229,12 +247,15 @@ def _within_limit(requirement: Requirement, side: str, value: float, limit: floa
     passed = margin >= -ROUNDING * max(abs(limit), abs(value))
     margin = max(margin, 0.0) if passed else margin
     when = "" if time_s is None else f" at {_time(time_s)}"
-    size = format_value(abs(margin), requirement.dimension)
-    edge = format_value(limit, requirement.dimension)
+    prefer = preferred_unit(requirement.text, requirement.dimension)
+    size = difference_text(abs(margin), requirement.dimension, prefer=prefer)
+    edge = value_text(limit, requirement.dimension, prefer=prefer)
     if passed:
         why = f"nearest to its limit of {edge}{when}, {size} inside"
     else:
-        why = f"{format_value(value, requirement.dimension)}{when} is {size} {'below' if side == 'above' else 'above'} its limit of {edge}"
+        why = (
+            f"{value_text(value, requirement.dimension, prefer=prefer)}{when} is {size} {'below' if side == 'above' else 'above'} its limit of {edge}"
+        )
     return _Finding(passed, why, value, limit, side, margin, time_s)
 
 
@@ -281,4 +302,5 @@ def _put_together(one: Judged, found: _Finding) -> RequirementVerdict:
         one.low,
         one.high,
         requirement.span,
+        preferred_unit(requirement.text, requirement.dimension),
     )

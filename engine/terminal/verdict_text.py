@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from polewise.grammar.units import TIME, format_value
+from polewise.grammar.units import TEMPERATURE, TIME, format_value
 from polewise.results.result import Result
 from polewise.results.verdict import RequirementVerdict, Verdict
 from polewise.terminal.style import Style, harmless
@@ -46,11 +46,9 @@ def summary_line(verdict: Verdict, style: Style) -> str:
 def _row(r: RequirementVerdict) -> list[str]:
     word = "holds" if r.passed else "FAILS" if r.evaluated else "NOT SEEN"
     when = "" if r.time_s is None else format_value(r.time_s, TIME, digits=5)
-    if r.value is None or r.limit is None or r.margin is None:
-        return [r.name, "", "", "", "", when, word]
-    limit = f"{r.side} {format_value(r.limit, r.dimension)}"
-    share = "" if r.margin_percent is None else f"{_signed(r.margin_percent)} %"
-    return [r.name, format_value(r.value, r.dimension), limit, format_value(r.margin, r.dimension, digits=3), share, when, word]
+    limit = f"{r.side} {r.limit_text}" if r.limit is not None else ""
+    share = "" if r.margin_percent is None or r.dimension == TEMPERATURE else f"{_signed(r.margin_percent)} %"
+    return [r.name, r.value_text, limit, r.margin_text, share, when, word]
 
 
 def _signed(percent: float) -> str:

@@ -99,6 +99,17 @@ def test_thinning_keeps_extremes_and_ends(steps: int) -> None:
     assert values[-1] == pytest.approx(0.1)
 
 
+def test_few_long_steps_among_thousands_of_short_ones_run_as_the_curve_does() -> None:
+    edges = [*np.linspace(0.0, 0.1, 8000), 0.4, 0.7, *np.linspace(0.75, 0.8, 3000), 1.0]
+    record = recording(edges, {"v": lambda t: t**3})
+    times, values = polyline(recorded_curve(record, "v"), 300)
+    assert np.all(np.diff(times) >= 0.0)
+    fine = np.linspace(0.0, 1.0, 5001)
+    assert np.interp(fine, times, values) == pytest.approx(fine**3, abs=1e-2)
+    long = (fine > 0.1) & (fine < 0.75)
+    assert np.interp(fine[long], times, values) == pytest.approx(fine[long] ** 3, abs=2e-5)
+
+
 def test_a_jump_stays_a_jump() -> None:
     record = recording([0.0, 0.5, 1.0], {"v": lambda t: 1.0 if t < 0.5 else 5.0}, jumps=[0.5])
     times, values = polyline(recorded_curve(record, "v"))

@@ -13,6 +13,7 @@ from polewise.results.measures import MEASURES
 from polewise.results.plan import Judged
 from polewise.results.recording import Recording
 from polewise.results.verdict import RequirementVerdict, judge
+from polewise.results.wording import difference_text, preferred_unit, value_text
 
 from .recorded import judged, recording
 
@@ -218,3 +219,29 @@ def test_requirement_by_name() -> None:
     assert verdict["r"].passed
     with pytest.raises(UnknownName, match="has no requirement"):
         verdict["q"]
+
+
+# ---------------------------------------------------------------- units as written
+
+
+@pytest.mark.parametrize(
+    ("text", "dimension", "unit"),
+    [
+        ("tap3.absorbed below 250 J", units.ENERGY, "J"),
+        ("tap3.absorbed below 2 kJ", units.ENERGY, "J"),
+        ("shaft.torque below 3 N*m", units.TORQUE, "N*m"),
+        ("shaft.speed above 70 rad/s after 2 s", units.RATE, "rad/s"),
+        ("pll.f within 49 Hz .. 51 Hz", units.RATE, "Hz"),
+        ("copper.temp below 110 degC", units.TEMPERATURE, "degC"),
+        ("bus.v within 700 V .. limit2", units.VOLTAGE, "V"),
+        ("b2.v below limit", units.VOLTAGE, None),
+        ("x below 3 bananas", units.VOLTAGE, None),
+    ],
+)
+def test_values_are_told_in_the_unit_the_requirement_uses(text: str, dimension: units.Dimension, unit: str | None) -> None:
+    assert preferred_unit(text, dimension) == unit
+
+
+def test_degrees_and_their_differences() -> None:
+    assert value_text(383.15, units.TEMPERATURE, prefer="degC") == "110 degC"
+    assert difference_text(48.6, units.TEMPERATURE, prefer="degC") == "48.6 K"
