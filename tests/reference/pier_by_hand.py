@@ -46,6 +46,34 @@ STATES = 2 + 6 * 10 + 2 * 7 + 2 * 5 + 3 * 4
 BATTERY_AT = 2 + 60 + 14
 
 
+class Curve:
+    """Monotone cubic through points (Fritsch & Carlson 1980), slopes from the mean of the neighbouring secants, held inside the circle of radius 3."""
+
+    def __init__(self, xs: tuple[float, ...], ys: tuple[float, ...]) -> None:
+        self.x, self.y = np.array(xs), np.array(ys)
+        secant = np.diff(self.y) / np.diff(self.x)
+        slope = np.concatenate([secant[:1], 0.5 * (secant[1:] + secant[:-1]), secant[-1:]])
+        for k in range(len(secant)):
+            size = float(np.hypot(slope[k], slope[k + 1]) / secant[k])
+            if size > 3.0:
+                slope[k : k + 2] *= 3.0 / size
+        self.slope = slope
+
+    def at(self, x: float) -> tuple[float, float]:
+        """Value and slope (Hermite form)."""
+        k = int(np.clip(np.searchsorted(self.x, x) - 1, 0, len(self.x) - 2))
+        h = self.x[k + 1] - self.x[k]
+        u = (x - self.x[k]) / h
+        y0, y1, m0, m1 = self.y[k], self.y[k + 1], h * self.slope[k], h * self.slope[k + 1]
+        value = y0 * (1 + 2 * u) * (1 - u) ** 2 + m0 * u * (1 - u) ** 2 + y1 * u * u * (3 - 2 * u) + m1 * u * u * (u - 1)
+        rate = 6 * u * (1 - u) * (y1 - y0) + m0 * (1 - u) * (1 - 3 * u) + m1 * u * (3 * u - 2)
+        return float(value), float(rate / h)
+
+
+CELLS = Curve((0.0, 0.1, 0.3, 0.6, 0.9, 1.0), (540.0, 580.0, 602.0, 620.0, 640.0, 660.0))
+KNEE = Curve((0.0, 250.0, 350.0, 400.0, 430.0, 450.0, 465.0, 480.0, 500.0), (0.0, 0.1, 0.5, 2.0, 6.8, 15.0, 28.0, 51.0, 114.0))
+
+
 def load_node(v_cap: float, esr: float, current_in: float, power: float) -> float:
     """Potential of a node fed with a current, with a capacitor behind a resistance and a constant power: v = v_cap + esr*(i - P/v)."""
     b = v_cap + esr * current_in
@@ -59,7 +87,6 @@ class Pier:
     demands: list[float] = field(default_factory=lambda: list(EVENING))
     sun: float = 0.8
     shore: float = 770.0
-    cell_slope: float = 20.0 / 0.3  # of the open-circuit curve near 60 % charge, V
 
     def rates(self, _t: float, y: Array) -> Array:
         """dy/dt."""
@@ -115,7 +142,7 @@ class Pier:
     @staticmethod
     def _converter(stage: Stage, y: Array, d: Array, out: float) -> float:
         """Controllers; returns the duty. y: filter current, input capacitor, choke, output capacitor, reference, two integrals."""
-        d[4] = min(max((stage.setpoint - y[4]) / 2e-3, -stage.slew), stage.slew)
+        d[4] = min(max((stage.setpoint - y[4]) / 10e-3, -stage.slew), stage.slew)
         error_v = y[4] - out
         error_i = stage.kp_v * error_v + y[5] - y[2]
         d[5] = stage.ki_v * error_v
@@ -134,9 +161,11 @@ class Pier:
         out = v_out + 0.002 * (i_choke - i_plug)
         plug = load_node(v_boat, 0.020, i_plug, power)
         duty = self._converter(stage, y[1:8], d[1:8], out)
-        damped = i_tap - i_filter  # through the damping resistor
-        front = (v_in + stage.esr_in * (i_tap - duty * i_choke)) / (1.0 + stage.esr_in / LEAK)
-        feed = front + stage.r_damp * damped
+        feed = v
+        for _ in range(4):  # the feeder's end leaks through the 1 Mohm of the fault that is not there
+            arrives = i_tap - feed / 1e6
+            front = (v_in + stage.esr_in * (arrives - duty * i_choke)) / (1.0 + stage.esr_in / LEAK)
+            feed = front + stage.r_damp * (arrives - i_filter)
         d[0] = (v - (CLOSED + 0.004) * i_tap - feed) / 20e-6
         d[1] = (feed - front) / stage.l_filter
         d[2] = (front - v_in) / stage.esr_in / stage.c_in
@@ -161,7 +190,7 @@ class Pier:
         i, v_pair, q_v, q_i, charge = y
         error_v = 760.0 - 0.05 * i - v
         error_i = 6.0 * error_v + q_v - i
-        cells = 620.0 + self.cell_slope * (charge - 0.6)
+        cells = CELLS.at(charge)[0]
         lower = 1.0 - cells / v + 0.0021 * error_i + q_i
         mid = (1.0 - lower) * (v + 0.003 * i) + lower * 0.003 * i
         d[0] = (cells - v_pair - (CLOSED + 0.018 + 0.002) * i - mid) / 150e-6
@@ -174,11 +203,11 @@ class Pier:
     def _roof(self, y: Array, v: float, d: Array) -> float:
         v_cap, i, q_v, q_i = y
         pv = v_cap
-        for _ in range(30):  # Newton on the node's current balance
-            string = self.sun * 53.0 - 0.2e-6 * (np.exp((pv - self._array_drop(pv, v_cap, i)) / 24.8) - 1.0)
-            g = (pv - v_cap) / 0.010 + i - string
-            slope = 1.0 / 0.010 + 0.2e-6 * np.exp(pv / 24.8) / 24.8
-            pv -= g / slope
+        for _ in range(30):  # Newton on the node's current balance; the string lies behind its closed breaker
+            current = (pv - v_cap) / 0.010 + i
+            taken, slope = KNEE.at(pv + CLOSED * current)
+            g = current + taken - self.sun * 53.0
+            pv -= g / (100.0 + slope)
             if abs(g) < 1e-11:
                 break
         error_v = pv - 400.0
@@ -190,11 +219,6 @@ class Pier:
         d[2] = 130.0 * error_v
         d[3] = 5.8 * error_i
         return float((1.0 - duty) * i)
-
-    @staticmethod
-    def _array_drop(pv: float, v_cap: float, i: float) -> float:
-        """Voltage across the string's closed breaker: the string's own voltage is higher than the node's by it."""
-        return -CLOSED * ((pv - v_cap) / 0.010 + i)
 
 
 def first_guess() -> Array:
