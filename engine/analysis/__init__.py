@@ -1,0 +1,1 @@
+"""Small-signal answers from exact linearisation: modes, responses, loops, impedances, margins and what follows from them."""
