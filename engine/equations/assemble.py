@@ -134,10 +134,11 @@ class _Assembler:
             rate, rest, bounds = state.rate, None, None
             if state.low is not None and state.high is not None:
                 bounds = (state.low, state.high)
-                outward = g.either(
-                    g.both(g.positive(g.subtract(x, state.high)), g.positive(rate)),
-                    g.both(g.positive(g.subtract(state.low, x)), g.positive(g.negate(rate))),
-                )
+                # The rate's sign only matters at a bound: elsewhere its switch sees a constant, so that it cannot flip for nothing.
+                away = g.constant(-1.0)
+                at_high, at_low = g.positive(g.subtract(x, state.high)), g.positive(g.subtract(state.low, x))
+                up, down = g.positive(g.mux(at_high, rate, away)), g.positive(g.mux(at_low, g.negate(rate), away))
+                outward = g.either(up, down)
                 probe = g.add(x, g.multiply(g.constant(BOUND_PROBE_S), rate))
                 rest = g.subtract(x, g.limit(probe, state.low, state.high))
                 rate = g.mux(outward, zero, rate)

@@ -89,20 +89,29 @@ def depends_on_time(rows: Sequence[Named]) -> DependsOnTime:
     )
 
 
-def integrators_cannot_rest(integrators: Sequence[Named], rates: Sequence[float]) -> IntegratorCannotRest:
-    """Unbounded integrators whose inputs can't vanish."""
+def integrators_cannot_rest(integrators: Sequence[Named], rates: Sequence[float], elements: Sequence[bool]) -> IntegratorCannotRest:
+    """Unbounded integrators whose inputs can't vanish.
+
+    Args:
+        rates: of each, as it stays when everything else rests.
+        elements: whether each is the state of an inductor or capacitor (or of what stands for them elsewhere) rather than of a `d/dt`.
+    """
     diagnostics = []
-    for one, rate in zip(integrators, rates, strict=True):
+    for one, rate, element in zip(integrators, rates, elements, strict=True):
         moving = f"; it keeps changing by {format_value(rate, one.dimension / units.TIME)}" if rate else ""
-        diagnostics.append(
-            _error(
-                "integrator-never-rests",
-                f"{one.text} can't come to rest: nothing in the circuit can bring its input to zero{moving}",
-                one.span,
-                hint="give it bounds with `within low .. high`, or write `held` if it only counts (a charge, an energy)",
-            )
-        )
+        why, hint = _why_it_moves(one.dimension, element)
+        diagnostics.append(_error("integrator-never-rests", f"{one.text} can't come to rest: {why}{moving}", one.span, hint=hint))
     return IntegratorCannotRest(diagnostics)
+
+
+def _why_it_moves(dimension: Dimension, element: bool) -> tuple[str, str]:
+    """Reason and hint for something that integrates."""
+    if element and dimension == units.CURRENT:
+        return "nothing can bring the voltage across this inductance to zero", "put the resistance of its winding in series with it"
+    if element and dimension == units.VOLTAGE:
+        return "nothing can bring the current into this capacitance to zero", "give the current a way past it, such as a load or a leakage resistance"
+    hint = "give it bounds with `within low .. high`, or write `held` if it only counts (a charge, an energy)"
+    return "nothing in the circuit can bring its input to zero", hint
 
 
 def integrators_fight(integrators: Sequence[Named], *, same: bool) -> IntegratorsFight:
@@ -115,7 +124,7 @@ def integrators_fight(integrators: Sequence[Named], *, same: bool) -> Integrator
     else:
         headline = f"{names} work against each other: each wants another value of the same quantity, so neither comes to rest"
         hint = "give all but one of them a droop, or bounds with `within low .. high`"
-    labels = [Label(one.span, "and this one") for one in integrators[1:5]]
+    labels = [Label(one.span, "and this one") for one in integrators[1:5] if one.span != first.span]
     return IntegratorsFight([_error("integrators-fight", headline, first.span, labels=labels, hint=hint)])
 
 

@@ -73,8 +73,9 @@ def find_operating_point(
         raise diagnosis.depends_on_time([diagnosis.named_row(system, r.kind, r.index) for r in moving])
     return _Search(system, guess, start_latches or {}).run()
 
-# Shares of the constant powers at which the ramp may begin.
-POWER_RAMP_BEGINS = (0.0, 0.01, 0.1, 1.0)
+
+# Shares of the constant powers at which the ramp may begin, in the order in which the slow strategies try them.
+POWER_RAMP_BEGINS = (0.01, 0.0, 0.1, 1.0)
 
 
 class _Search:
@@ -131,13 +132,16 @@ class _Search:
         A step-down stage with a diode has no single point of rest without load: its output may stand anywhere above the set point.
         """
         failure: PolewiseError | None = None
-        for begin in POWER_RAMP_BEGINS:
+        for begin, thorough in (*((b, False) for b in sorted(POWER_RAMP_BEGINS)), *((b, True) for b in POWER_RAMP_BEGINS)):
             self.square.p[self.system.power_scale] = begin
             strategy: Strategy = "newton"
-            base = self._newton(self.start)
             try:
-                if not base.converged or (begin > 0.0 and self._refused(base.z)):
+                if thorough:
                     base, strategy = self._unpowered()
+                else:
+                    base = self._newton(self.start)
+                    if not base.converged or (begin > 0.0 and self._refused(base.z)):
+                        continue
                 self._refuse_singular(base)
             except PolewiseError as error:
                 failure = failure or error
@@ -229,12 +233,13 @@ class _Search:
             f = square.residual(self.start)
             row = square.rows[int(np.argmin(np.isfinite(f)))]
             return diagnosis.not_finite_at_rest(diagnosis.named_row(self.system, row.kind, row.index))
-        return self._explained(explain(square, finite), reached)
+        return self._explained(explain(square, finite, self.start), reached)
 
     def _explained(self, found: RestFailure, reached: str) -> PolewiseError:
         rows = [diagnosis.named_row(self.system, r.kind, r.index) for r in found.rows]
         if found.kind == "integrator":
-            return diagnosis.integrators_cannot_rest(rows, found.rates)
+            elements = [r.kind == "x" and self.system.unknowns[r.index].charge != self.system.unknowns[r.index].symbol for r in found.rows]
+            return diagnosis.integrators_cannot_rest(rows, found.rates, elements)
         if found.kind in ("fight", "share"):
             return diagnosis.integrators_fight(rows, same=found.kind == "share")
         if found.kind == "singular":

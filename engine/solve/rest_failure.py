@@ -15,8 +15,11 @@ from polewise.solve.linear import SparseMatrix, null_spaces, row_sizes
 from polewise.solve.newton import solve_newton
 from polewise.solve.square_system import Row, SquareSystem, rest_rows
 
-COMPONENT_LARGE = 1e-3  # of a null vector's largest entry: unknowns with at least this share take part
-PERTURBATION = 1e-4  # of |z| + scale
+# Shares of a null vector's largest entry from which on a row or an unknown takes part. Unknowns have scales of their own: a thousandth in a duty may
+# stand beside a hundred amperes; what takes no part at all is rounding.
+ROW_SHARE, UNKNOWN_SHARE = 1e-3, 1e-8
+PERTURBATION = 1e-4  # of |z| + scale: beside a point, all the same
+GENERIC = 0.2  # of |z| + scale: far enough for no value to be special
 RESIDUAL_ZERO = 1e-9  # of a row's size: below this the row holds
 
 
@@ -43,18 +46,21 @@ def rows_that_read_time(system: EquationSystem) -> list[Row]:
     return [row for row, gradient in zip(rows, gradients, strict=True) if gradient]
 
 
-def explain(square: SquareSystem, points: list[FloatArray]) -> RestFailure:
+def explain(square: SquareSystem, ends: list[FloatArray], start: FloatArray) -> RestFailure:
     """Why F(z) = 0 was not solved.
 
     Args:
-        points: where the searches ended; the first at which the Jacobian is singular is explained.
+        ends: where the searches ended; the first at which the Jacobian is singular is explained.
+        start: where they began: there limits seldom hide that integrators fight.
     """
-    for z in points:
-        found = explain_singular(square, z)
-        if found is not None:
-            return found
-    z = points[0]
-    violation = _violation(square, z)
+    found = [one for one in (explain_singular(square, z) for z in ends) if one is not None]
+    generic = explain_singular(square, _beside(square, start, GENERIC))
+    fights = [one for one in (*found, generic) if one is not None and one.kind in ("fight", "share")]
+    if fights:
+        return fights[0]
+    if found:
+        return found[0]
+    violation = _violation(square, ends[0])
     worst = np.argsort(-violation)[:3]
     rows = tuple(square.rows[k] for k in worst if violation[k] > RESIDUAL_ZERO) or (square.rows[int(worst[0])],)
     return RestFailure("unknown", rows, tuple(0.0 for _ in rows))
@@ -62,17 +68,15 @@ def explain(square: SquareSystem, points: list[FloatArray]) -> RestFailure:
 
 def explain_singular(square: SquareSystem, z: FloatArray) -> RestFailure | None:
     """What a singular Jacobian at z means; None where it is regular."""
-    # A Jacobian that is singular at one point only (the turning point of a square) says nothing: look a little beside it.
-    beside = z + PERTURBATION * (square.scale + np.abs(z)) * np.random.default_rng(1).uniform(-1.0, 1.0, square.n)
-    for point in (beside, z):
-        f = square.residual(point)
-        if not np.all(np.isfinite(f)):
+    # A Jacobian that is singular at one point only (the turning point of a square) says nothing: look a little beside it too.
+    for point in (_beside(square, z, PERTURBATION), z):
+        if not np.all(np.isfinite(square.residual(point))):
             return None
         matrix = square.jacobian()
         right, left = null_spaces(matrix, square.scale)
         if right.shape[1] == 0:
             return None
-    moves, bound = _taking_part(right), _taking_part(left)
+    moves, bound = _taking_part(right, UNKNOWN_SHARE), _taking_part(left, ROW_SHARE)
     integrators = [k for k in np.flatnonzero(moves & bound).tolist() if _is_integrator(square, k)]
     if not integrators:
         # Rows without any unknown have no right vector of their own.
@@ -81,16 +85,27 @@ def explain_singular(square: SquareSystem, z: FloatArray) -> RestFailure | None:
     if integrators:
         rows = tuple(square.rows[k] for k in integrators)
         f = square.residual(_rest_of_circuit(square, z, integrators))
-        violation = np.abs(f) / row_sizes(square.jacobian(), square.scale)
         rates = tuple(_rate(square, k, f) for k in integrators)
         if len(integrators) > right.shape[1]:
-            same = all(violation[k] <= RESIDUAL_ZERO for k in integrators)
-            return RestFailure("share" if same else "fight", rows, rates)
+            scaled = f / row_sizes(square.jacobian(), square.scale)
+            return RestFailure("share" if _agree(left, scaled) else "fight", rows, rates)
         return RestFailure("integrator", rows, rates)
     size = np.max(np.abs(right), axis=1)
     order = np.argsort(-size)
     named = tuple(square.rows[int(k)] for k in order[:3] if size[k] > 0.5 * size[order[0]])
     return RestFailure("singular", named, tuple(0.0 for _ in named))
+
+
+def _beside(square: SquareSystem, z: FloatArray, distance: float) -> FloatArray:
+    """A point beside z in no special direction."""
+    beside: FloatArray = z + distance * (square.scale + np.abs(z)) * np.random.default_rng(1).uniform(-1.0, 1.0, square.n)
+    return beside
+
+
+def _agree(left: FloatArray, scaled: FloatArray) -> bool:
+    """Whether rows that no unknown can change against each other already agree: u F = 0 for every left null vector u."""
+    against, together = np.abs(left.T @ scaled), np.abs(left).T @ np.abs(scaled)
+    return bool(np.all(against <= RESIDUAL_ZERO * together + 1e-300))
 
 
 class _Pinned:
@@ -120,9 +135,9 @@ def _rest_of_circuit(square: SquareSystem, z: FloatArray, integrators: list[int]
     return outcome.z if outcome.converged else z
 
 
-def _taking_part(vectors: FloatArray) -> NDArray[np.bool_]:
+def _taking_part(vectors: FloatArray, share: float) -> NDArray[np.bool_]:
     size = np.sqrt(np.sum(vectors**2, axis=1))
-    taking: NDArray[np.bool_] = size > COMPONENT_LARGE * float(np.max(size, initial=0.0))
+    taking: NDArray[np.bool_] = size > share * float(np.max(size, initial=0.0))
     return taking
 
 
