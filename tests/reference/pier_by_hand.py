@@ -47,7 +47,7 @@ BATTERY_AT = 2 + 60 + 14
 
 
 class Curve:
-    """Monotone cubic through points (Fritsch & Carlson 1980), slopes from the mean of the neighbouring secants, held inside the circle of radius 3."""
+    """Monotone cubic through points (Fritsch & Carlson 1980), slopes the means of the secants beside them, held inside a circle of radius 3."""
 
     def __init__(self, xs: tuple[float, ...], ys: tuple[float, ...]) -> None:
         self.x, self.y = np.array(xs), np.array(ys)
