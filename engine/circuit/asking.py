@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, value_messages
 from polewise.circuit.dimensions import CONDITION, POISON, ZERO, Quality
 from polewise.circuit.scope import Env, Value
 from polewise.expression.graph import Node
@@ -40,7 +40,7 @@ def number(x: Expansion, e: syntax.Expression, env: Env, asked_by: str) -> Value
     """A value that must be a number; asked_by says who asks: "`-`", "`sqrt`"."""
     node, quality = x.lower(e, env)
     if quality is CONDITION:
-        x.report.add(messages.condition_as_number(e.span, asked_by))
+        x.report.add(value_messages.condition_as_number(e.span, asked_by))
         return poisoned(x)
     return node, quality
 
@@ -49,7 +49,7 @@ def condition(x: Expansion, e: syntax.Expression, env: Env, asked_by: str) -> No
     """A value that must be true or false."""
     node, quality = x.lower(e, env)
     if quality.is_number and quality.sort != "unknown":
-        x.report.add(messages.number_as_condition(e.span, quality, asked_by))
+        x.report.add(value_messages.number_as_condition(e.span, quality, asked_by))
     return node
 
 
@@ -59,19 +59,19 @@ def fits(x: Expansion, quality: Quality, asked: Asked, span: Span) -> bool:
     if quality is wanted or quality is POISON or wanted is POISON or quality.sort == "unknown" or wanted.sort == "unknown":
         return True
     if wanted is CONDITION:
-        x.report.add(messages.number_as_condition(span, quality, asked.reason))
+        x.report.add(value_messages.number_as_condition(span, quality, asked.reason))
         return False
     if quality is CONDITION:
-        x.report.add(messages.condition_as_number(span, asked.reason))
+        x.report.add(value_messages.condition_as_number(span, asked.reason))
         return False
     if quality is ZERO:
         return True
     if quality.dimension == wanted.dimension:
         if dimensions.differ_by_turn(quality, wanted):
-            x.report.add(messages.turn_expected(span, quality, wanted, asked.reason, asked.span))
+            x.report.add(value_messages.turn_expected(span, quality, wanted, asked.reason, asked.span))
             return False
         return True
-    x.report.add(messages.unit_expected(span, quality, wanted, asked.reason, asked.span))
+    x.report.add(value_messages.unit_expected(span, quality, wanted, asked.reason, asked.span))
     return False
 
 
@@ -98,10 +98,10 @@ def report_varying(x: Expansion, node: Node, span: Span, asked_by: str) -> None:
     """Say why a node is no constant: what in it varies, or that it is no finite number."""
     leaves = x.graph.symbols_under([node])
     if not leaves:
-        x.report.add(messages.not_finite(span, asked_by))
+        x.report.add(value_messages.not_finite(span, asked_by))
         return
     kind, name = x.graph.symbols[leaves[0]]
-    x.report.add(messages.varying_value(span, asked_by, "time" if kind == "time" else name))
+    x.report.add(value_messages.varying_value(span, asked_by, "time" if kind == "time" else name))
 
 
 def constant_number(x: Expansion, e: syntax.Expression, env: Env, asked: Asked) -> float | None:
@@ -118,7 +118,7 @@ def positive_time(x: Expansion, e: syntax.Expression, env: Env, reason: str, *, 
     if value is None:
         return None
     if value < 0.0 or (value == 0.0 and not zero):
-        x.report.add(messages.time_not_positive(e.span, reason, value, zero))
+        x.report.add(value_messages.time_not_positive(e.span, reason, value, zero))
         return None
     return value
 
@@ -129,6 +129,6 @@ def positive_frequency(x: Expansion, e: syntax.Expression, env: Env, reason: str
     if value is None:
         return None
     if value <= 0.0:
-        x.report.add(messages.frequency_not_positive(e.span, reason, value))
+        x.report.add(value_messages.frequency_not_positive(e.span, reason, value))
         return None
     return value

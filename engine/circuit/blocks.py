@@ -6,7 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import box_messages, dimensions, value_messages
 from polewise.circuit.asking import Asked, constant, fits, number, poisoned, wanted
 from polewise.circuit.dimensions import CONDITION, POISON, TIME, UNKNOWN, Quality
 from polewise.circuit.model import Assignment, ConditionEvent, SignalDef, StateDef
@@ -118,19 +118,19 @@ def finish_block(x: Expansion, block: BlockThing) -> None:
 def _read_settings(x: Expansion, block: BlockThing, kind: BlockKind) -> Written | None:
     statement = block.written
     if len(statement.arguments) != 1:
-        x.report.add(messages.block_argument(statement.kind_span, kind.name, len(statement.arguments), [s.name for s in kind.settings]))
+        x.report.add(box_messages.block_argument(statement.kind_span, kind.name, len(statement.arguments), [s.name for s in kind.settings]))
         return None
     names = [s.name for s in kind.settings]
     settings: dict[str, syntax.Setting] = {}
     wrong = False
     for setting in statement.settings:
         if setting.name not in names:
-            x.report.add(messages.unknown_setting(setting.name_span, setting.name, kind.name, nearest(setting.name, names), names, None))
+            x.report.add(box_messages.unknown_setting(setting.name_span, setting.name, kind.name, nearest(setting.name, names), names, None))
             wrong = True
         settings[setting.name] = setting
     for spec in kind.settings:
         if spec.required and spec.name not in settings:
-            x.report.add(messages.setting_missing(statement.kind_span, kind.name, spec.name, spec.document))
+            x.report.add(box_messages.setting_missing(statement.kind_span, kind.name, spec.name, spec.document))
             wrong = True
     return None if wrong else Written(block, statement.arguments[0], settings)
 
@@ -142,7 +142,7 @@ def _limits(x: Expansion, written: Written, quality: Quality) -> tuple[Node | No
     if low is not None and high is not None:
         a, b = x.graph.value_of(low), x.graph.value_of(high)
         if a is not None and b is not None and a > b:
-            x.report.add(messages.bounds_swapped(written.settings["low"].span, written.block.written.kind))
+            x.report.add(value_messages.bounds_swapped(written.settings["low"].span, written.block.written.kind))
     return low, high
 
 
@@ -168,7 +168,7 @@ def _make_pi(x: Expansion, written: Written) -> Value:
     from_rate = rate.times(TIME) or POISON
     quality = share.plus(from_rate)
     if quality is None:
-        x.report.add(messages.pi_gains_differ(written.settings["ki"].span, of_ki, written.settings["kp"].span, of_kp))
+        x.report.add(box_messages.pi_gains_differ(written.settings["ki"].span, of_ki, written.settings["kp"].span, of_kp))
         quality = POISON
     integral = g.symbol("state", f"{block.flat}.integral")
     if quality is UNKNOWN or quality.sort == "zero":

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import box_messages, dimensions, value_messages
 from polewise.circuit.asking import Asked, constant, fits, number, wanted
 from polewise.circuit.device_settings import device_settings
 from polewise.circuit.dimensions import CONDITION, POISON, TIME, ZERO, Quality
@@ -95,7 +95,7 @@ def _value(x: Expansion, box: BoxThing, e: syntax.Expression) -> None:
         fits(x, quality, Asked(dimensions.ANGULAR_RATE, "a speed box"), e.span)
         return
     if law is Law.CURRENT and isinstance(e, syntax.Number) and e.unit is not None and e.unit.symbol.endswith("/rad"):
-        x.report.add(messages.spring_by_stiffness(e.span, e.unit.symbol))
+        x.report.add(box_messages.spring_by_stiffness(e.span, e.unit.symbol))
         return
     value = x.graph.value_of(node)
     if value is not None and _wrong_constant(x, e, law, value, quality):
@@ -108,21 +108,21 @@ def _value(x: Expansion, box: BoxThing, e: syntax.Expression) -> None:
 
 def _no_element(x: Expansion, e: syntax.Expression, quality: Quality, domain: Domain) -> None:
     if quality is ZERO:
-        x.report.add(messages.box_zero_without_unit(e.span))
+        x.report.add(box_messages.box_zero_without_unit(e.span))
     elif quality is CONDITION:
-        x.report.add(messages.condition_as_number(e.span, "a box"))
+        x.report.add(value_messages.condition_as_number(e.span, "a box"))
     elif quality.dimension == dimensions.POWER.dimension and domain is not Domain.HEAT:
-        x.report.add(messages.power_without_bound(e.span))
+        x.report.add(box_messages.power_without_bound(e.span))
     else:
-        x.report.add(messages.box_unit(e.span, quality, domain.name.lower()))
+        x.report.add(box_messages.box_unit(e.span, quality, domain.name.lower()))
 
 
 def _wrong_constant(x: Expansion, e: syntax.Expression, law: Law, value: float, quality: Quality) -> bool:
     if law in (Law.CHARGE, Law.FLUX) and value <= 0.0:
-        x.report.add(messages.storage_not_positive(e.span, quality, value))
+        x.report.add(box_messages.storage_not_positive(e.span, quality, value))
         return True
     if law is Law.RESISTANCE and value == 0.0:
-        x.report.add(messages.no_resistance(e.span))
+        x.report.add(box_messages.no_resistance(e.span))
         return True
     return False
 
@@ -135,7 +135,7 @@ def _initially(x: Expansion, box: BoxThing, law: Law, value: Node) -> Node | Non
         return None
     domain = x.domain(box.left.key)
     if law not in (Law.CHARGE, Law.FLUX):
-        x.report.add(messages.nothing_stored(e.span, box.written.span))
+        x.report.add(box_messages.nothing_stored(e.span, box.written.span))
         return None
     got = constant(x, e, box.env.but(memory="it must not vary"), "`initially`")
     if got is None:
@@ -146,7 +146,7 @@ def _initially(x: Expansion, box: BoxThing, law: Law, value: Node) -> Node | Non
     assert stored is not None
     if quality.sort == "number" and quality.dimension == stored.dimension and quality.dimension != direct.dimension:
         if not x.graph.is_constant(value):
-            x.report.add(messages.stored_of_varying(e.span, quality, direct))
+            x.report.add(box_messages.stored_of_varying(e.span, quality, direct))
             return None
         return x.graph.divide(node, value)
     if not fits(x, quality, Asked(direct, "`initially` of a capacitor" if law is Law.CHARGE else "`initially` of an inductor"), e.span):
@@ -160,7 +160,7 @@ def _initially(x: Expansion, box: BoxThing, law: Law, value: Node) -> Node | Non
 def _device(x: Expansion, box: BoxThing, kind: DeviceKind, call: syntax.Call) -> None:
     assert box.written is not None
     if box.written.initially is not None:
-        x.report.add(messages.nothing_stored(box.written.initially.span, box.written.span))
+        x.report.add(box_messages.nothing_stored(box.written.initially.span, box.written.span))
     if not electrical(x, box.left.key, call.name_span, kind.name) or not electrical(x, box.right.key, call.name_span, kind.name):
         return
     settings = device_settings(x, kind, box.env, call.arguments, call.settings, call.name_span, box.latches)
@@ -182,7 +182,7 @@ def electrical(x: Expansion, key: str, span: Span, kind: str) -> bool:
     domain = x.domain(key)
     if domain is Domain.ELECTRICAL:
         return True
-    x.report.add(messages.device_not_electrical(span, kind, domain.name.lower()))
+    x.report.add(box_messages.device_not_electrical(span, kind, domain.name.lower()))
     return False
 
 
@@ -190,9 +190,9 @@ def _constant_power(x: Expansion, box: BoxThing, content: syntax.PowerBox) -> No
     assert box.written is not None
     domain = x.domain(box.left.key)
     if box.written.initially is not None:
-        x.report.add(messages.nothing_stored(box.written.initially.span, box.written.span))
+        x.report.add(box_messages.nothing_stored(box.written.initially.span, box.written.span))
     if domain is Domain.HEAT:
-        x.report.add(messages.power_box_in_heat(content.power.span))
+        x.report.add(box_messages.power_box_in_heat(content.power.span))
         return
     power = wanted(x, content.power, box.env, Asked(dimensions.POWER, f"a box with `{content.relation}`"))
     voltage, quality = number(x, content.voltage, box.env, f"`{content.relation}`")
@@ -200,11 +200,11 @@ def _constant_power(x: Expansion, box: BoxThing, content: syntax.PowerBox) -> No
         return
     bound = x.graph.value_of(voltage)
     if bound is not None and bound <= 0.0:
-        x.report.add(messages.power_bound_not_positive(content.voltage.span, content.relation))
+        x.report.add(box_messages.power_bound_not_positive(content.voltage.span, content.relation))
         return
     value = x.graph.value_of(power)
     if value is not None and ((value < 0.0) == (content.relation == "above")) and value != 0.0:
-        x.report.add(messages.power_relation(content.power.span, content.relation, value))
+        x.report.add(box_messages.power_relation(content.power.span, content.relation, value))
         return
     settings: dict[str, SettingValue] = {"power": power, "voltage": voltage, "relation": content.relation}
     add_device(x, box, KINDS["constant_power"], settings, content.power.span.to(content.voltage.span))
@@ -245,14 +245,14 @@ def _equation(x: Expansion, box: BoxThing, content: syntax.EquationBox) -> None:
     if POISON in (qa, qb):
         return
     if qa.plus(qb) is None:
-        x.report.add(messages.sides_differ(content.left.span.to(content.right.span), content.left.span, qa, content.right.span, qb))
+        x.report.add(value_messages.sides_differ(content.left.span.to(content.right.span), content.left.span, qa, content.right.span, qb))
         return
     residual = x.graph.subtract(a, b)
     leaves = set(x.graph.symbols_under([residual]))
     rates = [x.rates[x.graph.symbols[n][1]].expression for n in leaves if x.graph.symbols[n][0] == "rate"]
     leaves.update(x.graph.symbols_under(rates))
     if box.across(x) not in leaves and box.through(x) not in leaves:
-        x.report.add(messages.equation_without_own(content.left.span.to(content.right.span), domain.across, domain.through))
+        x.report.add(box_messages.equation_without_own(content.left.span.to(content.right.span), domain.across, domain.through))
         return
     _add_branch(x, box, Law.IMPLICIT, residual, None, content.left.span.to(content.right.span))
 
@@ -269,5 +269,9 @@ def _own_name(e: syntax.Expression, domain: Domain) -> str:
 
 def _no_initially(x: Expansion, box: BoxThing) -> None:
     assert box.written is not None
-    if box.written.initially is not None:
-        x.report.add(messages.nothing_stored(box.written.initially.span, box.written.span))
+    if box.written.initially is None:
+        return
+    if any(name.startswith(f"{box.flat}#") for name in x.rates):
+        x.report.add(box_messages.start_of_mixed_box(box.written.initially.span, box.written.span))
+    else:
+        x.report.add(box_messages.nothing_stored(box.written.initially.span, box.written.span))

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Iterator
 
-from polewise.circuit import messages
+from polewise.circuit import name_messages, value_messages
 from polewise.circuit.declare import each_line
 from polewise.circuit.expansion import Expansion
-from polewise.circuit.near import looks_mistyped, nearest
+from polewise.circuit.near import mistyped_among, nearest
 from polewise.circuit.things import NodeThing, PortThing
 from polewise.expression.graph import SYMBOL, Node
 from polewise.grammar.source import SourceText, Span
@@ -18,12 +18,12 @@ def check_values(x: Expansion) -> None:
     for scope, each in x.each_variables:
         known = scope.names.get(each.variable)
         if known is not None:
-            x.report.add(messages.each_variable_declared(each_line(each), each.variable, known.word, known.span))
+            x.report.add(name_messages.each_variable_declared(each_line(each), each.variable, known.word, known.span))
     if not x.unfinished:
         return  # reading signals on demand met every circle there is
     circle = _circle(x, list(x.signals), lambda name: _signals_in(x, x.signals[name].expression))
     if circle is not None:
-        x.report.add(messages.algebraic_loop(x.signals[circle[0]].span, circle))
+        x.report.add(value_messages.algebraic_loop(x.signals[circle[0]].span, circle))
 
 
 def _signals_in(x: Expansion, node: Node) -> Iterator[str]:
@@ -72,7 +72,7 @@ def order_samplers(x: Expansion) -> None:
     if circle:
         first = min(range(len(circle)), key=lambda k: x.samplers[circle[k]].span.start)
         circle = [*circle[first:], *circle[:first]]
-        x.report.add(messages.samplers_in_circle(x.samplers[circle[0]].span, [x.samplers[name].span for name in circle[1:]]))
+        x.report.add(value_messages.samplers_in_circle(x.samplers[circle[0]].span, [x.samplers[name].span for name in circle[1:]]))
         return
     ordered: dict[str, None] = {}
 
@@ -136,11 +136,11 @@ def check_overrides(x: Expansion) -> None:
     """Values from outside that met no given."""
     known = list(x.givens)
     for given in x.path_givens.unused():
-        x.report.add(messages.unknown_given(given.written.target.span, given.text, nearest(given.text, known), _word_at(x, given.text)))
+        x.report.add(value_messages.unknown_given(given.written.target.span, given.text, nearest(given.text, known), _word_at(x, given.text)))
     for path, text in x.overrides.items():
         if path not in x.used_overrides:
             span = Span(SourceText(f"given {path}", str(text)), 0, len(str(text)))
-            x.report.add(messages.unknown_given(span, path, nearest(path, [*known, *x.inputs]), _word_at(x, path)))
+            x.report.add(value_messages.unknown_given(span, path, nearest(path, [*known, *x.inputs]), _word_at(x, path)))
 
 
 def _word_at(x: Expansion, path: str) -> str | None:
@@ -153,19 +153,14 @@ def _word_at(x: Expansion, path: str) -> str | None:
 
 
 def near_names(x: Expansion) -> None:
-    """Nodes touched once whose name is one slip away from another name of their scope."""
-    seen: set[tuple[str, str]] = set()
-    for thing in x.order:
-        if type(thing) is not NodeThing or isinstance(thing, PortThing):
-            continue
-        record = x.nodes[thing.key]
-        if record.count != 1 or record.domain is not None:
-            continue
-        name = thing.flat[len(thing.scope.prefix) :]
-        kind = "" if thing.scope.definition is None else thing.scope.definition.name
-        if (kind, name) in seen:
-            continue
-        seen.add((kind, name))
-        other = next((n for n, t in thing.scope.names.items() if isinstance(t, NodeThing) and looks_mistyped(name, n)), None)
-        if other is not None:
-            x.report.add(messages.near_name(thing.span, name, other, thing.scope.names[other].span))
+    """Nodes touched once whose name is one slip away from another node's in their scope; of copies of an assembly, the first is looked at."""
+    seen: set[str] = set()
+    for scope in x.scopes:
+        if scope.definition is not None:
+            if scope.definition.name in seen:
+                continue
+            seen.add(scope.definition.name)
+        nodes = {name: thing for name, thing in scope.names.items() if isinstance(thing, NodeThing)}
+        once = [n for n, t in nodes.items() if not isinstance(t, PortThing) and x.nodes[t.key].count == 1 and x.nodes[t.key].domain is None]
+        for name, other in mistyped_among(once, nodes):
+            x.report.add(name_messages.near_name(nodes[name].span, name, other, nodes[other].span))

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable
 from typing import Final
 
-from polewise.circuit import messages
+from polewise.circuit import box_messages, file_messages, name_messages, value_messages
 from polewise.circuit.blocks import BLOCKS
 from polewise.circuit.dimensions import CONDITION
 from polewise.circuit.expansion import ELEMENTS_MAX, NESTING_MAX, Expansion, PathGiven, TooLarge
@@ -86,13 +86,13 @@ def _each(x: Expansion, scope: Scope, each: syntax.Each, frame: Frame) -> None:
     if first is None or last is None:
         return
     if each.variable in frame or each.variable in VALUE_NAMES:
-        x.report.add(messages.each_variable_taken(each_line(each), each.variable))
+        x.report.add(name_messages.each_variable_taken(each_line(each), each.variable))
         return
     if (last - first + 1) * max(1, len(each.body)) > ELEMENTS_MAX - x.elements:
-        x.report.add(messages.each_too_many(each.first.span.to(each.last.span), last - first + 1, ELEMENTS_MAX))
+        x.report.add(file_messages.each_too_many(each.first.span.to(each.last.span), last - first + 1, ELEMENTS_MAX))
         raise TooLarge
     if last < first:
-        x.report.add(messages.each_empty(each.first.span.to(each.last.span), first, last))
+        x.report.add(name_messages.each_empty(each.first.span.to(each.last.span), first, last))
     x.each_variables.append((scope, each))
     for number in range(first, last + 1):
         _body(x, scope, each.body, {**frame, each.variable: number})
@@ -120,7 +120,7 @@ def _check_size(x: Expansion, statements: list[syntax.Statement]) -> None:
                     copies = max(0, int(min(statement.last.value - statement.first.value + 1, 1e12)))
                     inner = copies * size(statement.body, inside)
                     if inner > ELEMENTS_MAX:
-                        x.report.add(messages.each_too_many(statement.first.span.to(statement.last.span), copies, ELEMENTS_MAX))
+                        x.report.add(file_messages.each_too_many(statement.first.span.to(statement.last.span), copies, ELEMENTS_MAX))
                         raise TooLarge
                     total += inner
             elif (
@@ -133,7 +133,7 @@ def _check_size(x: Expansion, statements: list[syntax.Statement]) -> None:
                     sizes[statement.kind] = size(assemblies[statement.kind].body, (*inside, statement.kind))
                 total += sizes[statement.kind]
             if total > ELEMENTS_MAX:
-                x.report.add(messages.too_large(statement.span, ELEMENTS_MAX))
+                x.report.add(file_messages.too_large(statement.span, ELEMENTS_MAX))
                 raise TooLarge
         return total
 
@@ -147,13 +147,13 @@ def _add(x: Expansion, scope: Scope, name: str, thing: Thing) -> bool:
     """Enter a name; a second thing of the same name in one scope is an error that shows both."""
     known = scope.names.get(name)
     if known is not None:
-        x.report.add(messages.declared_twice(thing.span, name, thing.word, known.word, known.span))
+        x.report.add(name_messages.declared_twice(thing.span, name, thing.word, known.word, known.span))
         return False
     if name in VALUE_NAMES:
-        x.report.add(messages.reserved_name(thing.span, name, VALUE_NAMES[name]))
+        x.report.add(name_messages.reserved_name(thing.span, name, VALUE_NAMES[name]))
         return False
     if scope.top is not None and (outer := scope.top.names.get(name)) is not None and outer.shared and isinstance(outer, DefinitionThing):
-        x.report.add(messages.declared_twice(thing.span, name, thing.word, outer.word, outer.span))
+        x.report.add(name_messages.declared_twice(thing.span, name, thing.word, outer.word, outer.span))
         return False
     scope.names[name] = thing
     return True
@@ -172,11 +172,11 @@ def _node(x: Expansion, scope: Scope, reference: syntax.Reference, env: Env) -> 
         return None
     thing = scope.names.get(name)
     if len(reference.parts) > 1:
-        x.report.add(messages.node_with_dot(reference.span, reference.span.text))
+        x.report.add(box_messages.node_with_dot(reference.span, reference.span.text))
         return None
     if thing is None:
         if name == UNCONNECTED:
-            x.report.add(messages.unconnected_on_path(reference.span))
+            x.report.add(box_messages.unconnected_on_path(reference.span))
             return None
         flat = scope.prefix + name
         x.add_node(flat, scope, reference.span, True)
@@ -187,7 +187,7 @@ def _node(x: Expansion, scope: Scope, reference: syntax.Reference, env: Env) -> 
     if isinstance(thing, NodeThing):
         x.nodes[thing.key].count += 1
         return thing
-    x.report.add(messages.not_a_node(reference.span, name, thing.word, thing.span))
+    x.report.add(box_messages.not_a_node(reference.span, name, thing.word, thing.span))
     return None
 
 
@@ -207,17 +207,17 @@ def _reference(x: Expansion, scope: Scope, statement: syntax.ReferenceNode, fram
     if statement.kind is not None:
         found = next((d for d in Domain if d.across_dimension == statement.kind.dimension), None)
         if found is None or statement.kind.spelling == "Hz" or statement.kind.offset:
-            x.report.add(messages.reference_kind_unknown(statement.kind_span or statement.span, statement.kind.symbol))
+            x.report.add(box_messages.reference_kind_unknown(statement.kind_span or statement.span, statement.kind.symbol))
             return
         domain = found
     known = scope.names.get(name[0])
     if isinstance(known, PortThing):
-        x.report.add(messages.reference_is_port(statement.span, name[0], known.span))
+        x.report.add(box_messages.reference_is_port(statement.span, name[0], known.span))
         return
     if isinstance(known, NodeThing):
         record = x.nodes[known.key]
         if record.domain is not None:
-            x.report.add(messages.declared_twice(statement.name.span, name[0], "reference", "reference", known.span))
+            x.report.add(name_messages.declared_twice(statement.name.span, name[0], "reference", "reference", known.span))
             return
     else:
         record = x.add_node(name[1], scope, statement.name.span, True)
@@ -249,7 +249,7 @@ def _given(x: Expansion, scope: Scope, statement: syntax.Given, frame: Frame) ->
 def declare_path_given(x: Expansion, scope: Scope, statement: syntax.Given, env: Env, depth: int) -> None:
     """`given berth2.L = …`, or any given of a study: a value from outside for a given."""
     if statement.value is None:
-        x.report.add(messages.path_given_without_value(statement.span))
+        x.report.add(value_messages.path_given_without_value(statement.span))
         return
     names = [pattern_of(x, part, env) for part in statement.target.parts]
     if None in names:
@@ -257,7 +257,7 @@ def declare_path_given(x: Expansion, scope: Scope, statement: syntax.Given, env:
     given = PathGiven(scope.prefix, [name for name in names if name is not None], statement, env, depth)
     other = x.path_givens.add(given)
     if other is not None:
-        x.report.add(messages.declared_twice(statement.target.span, given.text, "given", "given", other.written.target.span))
+        x.report.add(name_messages.declared_twice(statement.target.span, given.text, "given", "given", other.written.target.span))
 
 
 def _input(x: Expansion, scope: Scope, statement: syntax.Input, frame: Frame) -> None:
@@ -315,7 +315,7 @@ def _definition(x: Expansion, scope: Scope, statement: syntax.Function | syntax.
     name, span = statement.name, statement.name_span
     if name in BUILT_IN or name in KINDS or name in PARTS or name in BLOCKS:
         word = "function" if name in BUILT_IN else "control block" if name in BLOCKS else "device"
-        x.report.add(messages.name_of_the_language(span, name, word))
+        x.report.add(name_messages.name_of_the_language(span, name, word))
         return
     thing = DefinitionThing(scope.prefix + name, scope, span, Env(scope, frame), statement)
     if _add(x, scope, name, thing):
@@ -323,14 +323,14 @@ def _definition(x: Expansion, scope: Scope, statement: syntax.Function | syntax.
 
 
 def _wires(x: Expansion, scope: Scope, statement: syntax.Wires, frame: Frame) -> None:
-    x.report.add(messages.not_yet(statement.span, "`wires` bundles"))
+    x.report.add(file_messages.not_yet(statement.span, "`wires` bundles"))
 
 
 def _study(x: Expansion, scope: Scope, statement: syntax.Study, frame: Frame) -> None:
     thing = StudyThing(statement.name, scope, statement.name_span, statement)
     known = x.studies_by_name.get(statement.name)
     if known is not None:
-        x.report.add(messages.declared_twice(statement.name_span, statement.name, "study", "study", known.span))
+        x.report.add(name_messages.declared_twice(statement.name_span, statement.name, "study", "study", known.span))
         return
     x.studies_by_name[statement.name] = thing
 
@@ -391,7 +391,7 @@ def _path(x: Expansion, scope: Scope, statement: syntax.Path, frame: Frame) -> N
         for box in item:
             if box.mark:
                 if box.mark in path.named:
-                    x.report.add(messages.declared_twice(box.span, box.mark, "box", "box", path.named[box.mark].span))
+                    x.report.add(name_messages.declared_twice(box.span, box.mark, "box", "box", path.named[box.mark].span))
                 path.named[box.mark] = box
     if not name or _add(x, scope, name, path):
         x.paths.append(path)
@@ -448,7 +448,7 @@ def _box(
             return None
         mark = named
         if mark in VALUE_NAMES:
-            x.report.add(messages.reserved_name(box.name.span, mark, VALUE_NAMES[mark]))
+            x.report.add(name_messages.reserved_name(box.name.span, mark, VALUE_NAMES[mark]))
             return None
     flat = f"{path}.{mark}" if mark else path if single else f"{path}#{number}"
     thing = BoxThing(flat, scope, box.name.span if box.name is not None else box.span, left, right, box, Env(scope, env.frame, flat))
@@ -525,12 +525,12 @@ def _placement(x: Expansion, scope: Scope, statement: syntax.Placement, frame: F
         if _add(x, scope, name, block):
             x.order.append(block)
     elif kind is not None:
-        x.report.add(messages.device_belongs_in_box(statement.kind_span, statement.kind, name))
+        x.report.add(box_messages.device_belongs_in_box(statement.kind_span, statement.kind, name))
     else:
         assemblies = [n for n in (scope.top or scope).names if getattr((scope.top or scope).names[n], "word", "") == "assembly"]
         candidates = [*assemblies, *(k for k, v in KINDS.items() if not v.two_terminal), *BLOCKS]
         word = None if definition is None else definition.word
-        x.report.add(messages.unknown_kind(statement.kind_span, statement.kind, nearest(statement.kind, candidates), word))
+        x.report.add(box_messages.unknown_kind(statement.kind_span, statement.kind, nearest(statement.kind, candidates), word))
         _add(x, scope, name, WrongThing(flat, scope, statement.name.span))
 
 
@@ -562,22 +562,22 @@ def _terminals(
     wrong = False
     for setting in by_name:
         if setting.name in given:
-            x.report.add(messages.terminal_twice(setting.name_span, setting.name, given[setting.name].span))
+            x.report.add(box_messages.terminal_twice(setting.name_span, setting.name, given[setting.name].span))
             wrong = True
         given[setting.name] = setting.value
     if len(statement.arguments) > len(terminals) + extra:
         x.report.add(
-            messages.too_many_arguments(statement.arguments[len(terminals) + extra].span, statement.kind, terminals, len(statement.arguments))
+            box_messages.too_many_arguments(statement.arguments[len(terminals) + extra].span, statement.kind, terminals, len(statement.arguments))
         )
         wrong = True
     missing = [terminal for terminal in terminals if terminal not in given]
     if missing:
-        x.report.add(messages.terminals_missing(statement.kind_span, statement.kind, terminals, missing))
+        x.report.add(box_messages.terminals_missing(statement.kind_span, statement.kind, terminals, missing))
         wrong = True
     result: dict[str, NodeThing | None] = {}
     for terminal, argument in given.items():
         if not isinstance(argument, syntax.Reference):
-            x.report.add(messages.terminal_needs_node(argument.span, terminal, statement.kind))
+            x.report.add(box_messages.terminal_needs_node(argument.span, terminal, statement.kind))
             wrong = True
         elif len(argument.parts) == 1 and argument.parts[0].plain == UNCONNECTED:
             result[terminal] = None
@@ -590,11 +590,11 @@ def _terminals(
 
 def _instance(x: Expansion, scope: Scope, statement: syntax.Placement, name: str, flat: str, env: Env, definition: syntax.Assembly) -> None:
     if definition.name in scope.chain:
-        x.report.add(messages.recursive_assembly(statement.kind_span, [*scope.chain, definition.name], definition.name_span))
+        x.report.add(file_messages.recursive_assembly(statement.kind_span, [*scope.chain, definition.name], definition.name_span))
         _add(x, scope, name, WrongThing(flat, scope, statement.name.span))
         return
     if len(scope.chain) >= NESTING_MAX:
-        x.report.add(messages.nested_too_deep(statement.kind_span, NESTING_MAX))
+        x.report.add(file_messages.nested_too_deep(statement.kind_span, NESTING_MAX))
         raise TooLarge
     ports = _port_names(x, definition)
     nodes = None if ports is None else _terminals(x, scope, statement, env, ports, extra=0)
@@ -627,7 +627,7 @@ def _port_names(x: Expansion, definition: syntax.Assembly) -> tuple[str, ...] | 
         names = [part.plain for part in definition.ports]
         for part, name in zip(definition.ports, names, strict=True):
             if name is None:
-                x.report.add(messages.port_with_brace(part.span))
+                x.report.add(name_messages.port_with_brace(part.span))
                 return None
         known = x.port_names[definition.name] = tuple(name for name in names if name is not None)
     return known
@@ -639,7 +639,7 @@ def _check_settings(x: Expansion, thing: InstanceThing, definition: syntax.Assem
         if not isinstance(target, GivenThing | InputThing):
             known = [n for n, t in thing.inner.names.items() if isinstance(t, GivenThing | InputThing)]
             word = None if target is None else target.word
-            x.report.add(messages.unknown_setting(setting.name_span, name, definition.name, nearest(name, known), known, word))
+            x.report.add(box_messages.unknown_setting(setting.name_span, name, definition.name, nearest(name, known), known, word))
 
 
 _DECLARE: Final[dict[type, Callable[..., None]]] = {

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import box_messages, dimensions
 from polewise.circuit.asking import Asked, condition, constant, fits, number, wanted
 from polewise.circuit.dimensions import CONDITION, FREQUENCY, POISON
 from polewise.circuit.expansion import Expansion
@@ -39,18 +39,18 @@ def device_settings(
     """
     if len(positional) > len(kind.positional):
         extra = positional[len(kind.positional)]
-        x.report.add(messages.too_many_settings(extra.span, kind.name, kind.positional))
+        x.report.add(box_messages.too_many_settings(extra.span, kind.name, kind.positional))
         return None
     written: dict[str, tuple[syntax.Expression, Span]] = {name: (e, e.span) for name, e in zip(kind.positional, positional)}
     wrong = False
     for setting in by_name:
         if setting.name in written:
             wrong = True
-            x.report.add(messages.setting_twice(setting.name_span, setting.name, written[setting.name][1]))
+            x.report.add(box_messages.setting_twice(setting.name_span, setting.name, written[setting.name][1]))
         elif kind.setting(setting.name) is None:
             wrong = True
             known = [spec.name for spec in kind.settings]
-            x.report.add(messages.unknown_setting(setting.name_span, setting.name, kind.name, nearest(setting.name, known), known, None))
+            x.report.add(box_messages.unknown_setting(setting.name_span, setting.name, kind.name, nearest(setting.name, known), known, None))
         else:
             written[setting.name] = (setting.value, setting.name_span)
     values: dict[str, SettingValue] = {}
@@ -59,7 +59,7 @@ def device_settings(
         if given is None:
             if spec.required:
                 wrong = True
-                x.report.add(messages.setting_missing(span, kind.name, spec.name, spec.document))
+                x.report.add(box_messages.setting_missing(span, kind.name, spec.name, spec.document))
             default = _default(x, spec)
             if default is not None:
                 values[spec.name] = default
@@ -75,7 +75,7 @@ def device_settings(
         return None
     problem = None if kind.check is None else kind.check(values)
     if problem is not None:
-        x.report.add(messages.settings_contradict(span, problem[0], problem[1]))
+        x.report.add(box_messages.settings_contradict(span, problem[0], problem[1]))
         return None
     return values
 
@@ -85,7 +85,7 @@ def _start_latch(x: Expansion, latch: LatchThing, value: SettingValue | None, wr
         return
     if not x.graph.is_constant(value):
         if written is not None:
-            x.report.add(messages.start_varies(written[0].span, latch.flat))
+            x.report.add(box_messages.start_varies(written[0].span, latch.flat))
         return
     latch.initial = value
 
@@ -131,7 +131,7 @@ def _word(x: Expansion, kind: str, spec: SettingSpec, e: syntax.Expression) -> s
     name = e.parts[0].plain if isinstance(e, syntax.Reference) and len(e.parts) == 1 else None
     if name in spec.words:
         return name
-    x.report.add(messages.word_wanted(e.span, spec.name, kind, spec.words, None if name is None else nearest(name, spec.words)))
+    x.report.add(box_messages.word_wanted(e.span, spec.name, kind, spec.words, None if name is None else nearest(name, spec.words)))
     return None
 
 
@@ -142,22 +142,22 @@ def _part(x: Expansion, kind: str, spec: SettingSpec, e: syntax.Expression, env:
     elif isinstance(e, syntax.Reference) and len(e.parts) == 1:
         name = e.parts[0].plain or ""
     if name not in spec.parts:
-        x.report.add(messages.part_wanted(name_span, spec.name, kind, spec.parts, nearest(name, spec.parts) if name else None))
+        x.report.add(box_messages.part_wanted(name_span, spec.name, kind, spec.parts, nearest(name, spec.parts) if name else None))
         return None
     if not isinstance(e, syntax.Call):
-        x.report.add(messages.part_without_brackets(e.span, name))
+        x.report.add(box_messages.part_without_brackets(e.span, name))
         return None
     part = PARTS[name]
     names = [parameter.name for parameter in part.parameters]
     if len(e.arguments) > len(names):
-        x.report.add(messages.too_many_settings(e.arguments[len(names)].span, name, tuple(names)))
+        x.report.add(box_messages.too_many_settings(e.arguments[len(names)].span, name, tuple(names)))
         return None
     written: dict[str, tuple[syntax.Expression, Span]] = {n: (a, a.span) for n, a in zip(names, e.arguments)}
     for setting in e.settings:
         if setting.name in written:
-            x.report.add(messages.setting_twice(setting.name_span, setting.name, written[setting.name][1]))
+            x.report.add(box_messages.setting_twice(setting.name_span, setting.name, written[setting.name][1]))
         elif setting.name not in names:
-            x.report.add(messages.unknown_setting(setting.name_span, setting.name, name, nearest(setting.name, names), names, None))
+            x.report.add(box_messages.unknown_setting(setting.name_span, setting.name, name, nearest(setting.name, names), names, None))
         else:
             written[setting.name] = (setting.value, setting.name_span)
     values: dict[str, Node | None] = {}
@@ -165,7 +165,7 @@ def _part(x: Expansion, kind: str, spec: SettingSpec, e: syntax.Expression, env:
         given = written.get(parameter.name)
         if given is None:
             if parameter.required:
-                x.report.add(messages.setting_missing(e.span, name, parameter.name, parameter.document))
+                x.report.add(box_messages.setting_missing(e.span, name, parameter.name, parameter.document))
             default = _default(x, parameter)
             values[parameter.name] = default if isinstance(default, int) else None
             continue
@@ -178,14 +178,14 @@ def _inductors(x: Expansion, spec: SettingSpec, e: syntax.Expression, env: Env) 
     names: list[str] = []
     for item in e.items if isinstance(e, syntax.ListOf) else (e,):
         if not isinstance(item, syntax.Reference):
-            x.report.add(messages.inductor_wanted(item.span, spec.name, None))
+            x.report.add(box_messages.inductor_wanted(item.span, spec.name, None))
             return None
         thing = find_thing(x, item, env)
         if thing is None:
             return None
         box = thing.only if isinstance(thing, PathThing) else thing
         if not isinstance(box, BoxThing):
-            x.report.add(messages.inductor_wanted(item.span, spec.name, thing.word))
+            x.report.add(box_messages.inductor_wanted(item.span, spec.name, thing.word))
             return None
         names.append(box.flat)
     return tuple(names)

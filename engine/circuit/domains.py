@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from polewise.circuit import messages
+from polewise.circuit import box_messages
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.model import Domain
 from polewise.circuit.things import BoxThing, DeviceThing
@@ -19,7 +19,7 @@ def find_domains(x: Expansion) -> None:
         x.references.add(root)
         known = kinds.get(root)
         if known is not None and known[0] is not record.domain:
-            x.report.add(messages.kinds_joined(record.span, known[0].name.lower(), known[1], record.domain.name.lower(), record.span))
+            x.report.add(box_messages.kinds_joined(record.span, known[0].name.lower(), known[1], record.domain.name.lower(), record.span))
         kinds.setdefault(root, (record.domain, record.span))
     if all(domain is Domain.ELECTRICAL for domain, _ in kinds.values()):
         return
@@ -35,7 +35,7 @@ def find_domains(x: Expansion) -> None:
             if clash is not None:
                 x.between_kinds.add(thing.flat)
                 (a, place_a), (b, place_b) = clash
-                x.report.add(messages.kinds_joined(thing.span, a.name.lower(), place_a, b.name.lower(), place_b))
+                x.report.add(box_messages.kinds_joined(thing.span, a.name.lower(), place_a, b.name.lower(), place_b))
     for key in x.nodes:
         root = x.root(key)
         x.domains[root] = islands.kind(root)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, event_messages, name_messages
 from polewise.circuit.asking import Asked, condition, number, positive_time, wanted
 from polewise.circuit.dimensions import CONDITION, POISON
 from polewise.circuit.expansion import Expansion
@@ -76,13 +76,13 @@ def _whenever(x: Expansion, statement: syntax.Whenever, env: Env, name: str, act
         if POISON in (a, b):
             return
         if a.plus(b) is None:
-            x.report.add(messages.threshold_unit(statement.threshold.span, b, statement.condition.span, a, statement.edge))
+            x.report.add(event_messages.threshold_unit(statement.threshold.span, b, statement.condition.span, a, statement.edge))
             return
         node = g.greater(value, threshold) if statement.edge == "rises above" else g.greater(threshold, value)
         text = f"{statement.condition.span.text} {statement.edge} {statement.threshold.span.text}"
     if g.is_constant(node):
-        if not x.report.has_errors:
-            x.report.add(messages.condition_never_changes(statement.condition.span, g.value_of(node) != 0.0))
+        if not x.report.has_errors and env.scope.top is None and not env.frame:  # in an assembly a given may switch an event off
+            x.report.add(event_messages.condition_never_changes(statement.condition.span, g.value_of(node) != 0.0))
         return
     into.append(ConditionEvent(name, node, lasting, statement.edge is not None, actions, statement.span, " ".join(text.split())))
 
@@ -100,7 +100,7 @@ def assignments(x: Expansion, actions: Sequence[syntax.Action], env: Env) -> tup
             if made is None:
                 continue
             if made.target in seen:
-                x.report.add(messages.set_twice(action.target.span, made.target, seen[made.target]))
+                x.report.add(event_messages.set_twice(action.target.span, made.target, seen[made.target]))
                 continue
             seen[made.target] = action.target.span
             result.append(made)
@@ -116,7 +116,7 @@ def _targets(x: Expansion, action: syntax.Action, env: Env) -> list[Thing]:
         return []
     found = [thing for thing, rest in matching_things(x, env.scope, [n for n in names if n is not None]) if not rest]
     if not found:
-        x.report.add(messages.nothing_selected(action.target.span))
+        x.report.add(name_messages.nothing_selected(action.target.span))
     return found
 
 
@@ -126,13 +126,13 @@ def _assignment(x: Expansion, action: syntax.Action, thing: Thing, env: Env) -> 
     if isinstance(action, syntax.SwitchAction):
         latch = contact_of(thing)
         if latch is None:
-            x.report.add(messages.nothing_to_switch(action.target.span, "close" if action.closed else "open", thing.flat, thing.word, thing.span))
+            x.report.add(event_messages.nothing_to_switch(action.target.span, "close" if action.closed else "open", thing.flat, thing.word, thing.span))
             return None
         return Assignment("latch", latch.flat, x.graph.constant(1.0 if action.closed else 0.0), action.span)
     if not isinstance(thing, LatchThing | StateThing | BlockStateThing):
         contact = contact_of(thing)
         hint = f"Write `set {action.target.span.text}.{CLOSED} = …`, or `open`, `close`." if contact is not None else _set_hint(thing)
-        x.report.add(messages.not_settable(action.target.span, thing.flat, thing.word, thing.span, hint))
+        x.report.add(event_messages.not_settable(action.target.span, thing.flat, thing.word, thing.span, hint))
         return None
     quality = _quality_of(x, thing)
     node = wanted(x, action.value, env, Asked(quality, f"`{thing.flat}`", thing.span))
@@ -183,7 +183,7 @@ def finish_sequence(x: Expansion, thing: SequenceThing) -> None:
     """
     steps = thing.written.steps
     if not steps:
-        x.report.add(messages.sequence_empty(thing.span, thing.flat))
+        x.report.add(event_messages.sequence_empty(thing.span, thing.flat))
         return
     for step in steps:
         latch = thing.steps[step.name]
@@ -210,7 +210,7 @@ def _leave(x: Expansion, thing: SequenceThing, step: syntax.Step, following: str
     least = None if step.after is None else positive_time(x, step.after, env, "`after`", zero=True)
     has_until = step.until is not None or step.after is not None
     if has_until and following is None:
-        x.report.add(messages.no_next_step(step.span, step.name, thing.flat))
+        x.report.add(event_messages.no_next_step(step.span, step.name, thing.flat))
         return
     if has_until and following is not None:
         change = _change(x, thing, step.name, following, entries, step.span)
@@ -253,7 +253,7 @@ def _escape(
     """`else fault after 2 s`."""
     assert step.else_name is not None
     if step.else_name not in thing.steps:
-        x.report.add(messages.unknown_step(step.else_span or step.span, step.else_name, thing.flat, nearest(step.else_name, thing.steps)))
+        x.report.add(event_messages.unknown_step(step.else_span or step.span, step.else_name, thing.flat, nearest(step.else_name, thing.steps)))
         return
     if step.else_after is None:
         return

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Final
 
-from polewise.circuit import messages, values
+from polewise.circuit import event_messages, file_messages, values
 from polewise.circuit.blocks import finish_block, work_out_block
 from polewise.circuit.boxes import electrical, finish_box
 from polewise.circuit.check import check_overrides, check_values, near_names, order_samplers
@@ -73,7 +73,7 @@ def expand(
         declare(x, sources.statements)
         if study is not None:
             if study not in x.studies_by_name:
-                x.report.add(messages.unknown_study(no_span("study"), study, nearest(study, x.studies_by_name)))
+                x.report.add(event_messages.unknown_study(no_span("study"), study, nearest(study, x.studies_by_name)))
             declare_study_givens(x, study)
         find_domains(x)
         _finish(x)
@@ -118,7 +118,7 @@ def _guarded(x: Expansion, thing: Thing, make: Callable[..., object]) -> None:
     try:
         make(x, thing)
     except RecursionError:
-        x.report.add(messages.too_deep(thing.span, thing.flat))
+        x.report.add(file_messages.too_deep(thing.span, thing.flat))
 
 
 def _finish(x: Expansion) -> None:

@@ -8,7 +8,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import replace
 from typing import Final
 
-from polewise.circuit import messages
+from polewise.circuit import file_messages, value_messages
 from polewise.circuit.csv_file import CsvFile
 from polewise.circuit.dimensions import POISON, UNKNOWN, Quality, settled
 from polewise.circuit.model import (
@@ -247,7 +247,7 @@ class Expansion:
         """
         self.elements += 1
         if self.elements > ELEMENTS_MAX:
-            self.report.add(messages.too_large(span, ELEMENTS_MAX))
+            self.report.add(file_messages.too_large(span, ELEMENTS_MAX))
             raise TooLarge
 
     # ------------------------------------------------------------ nodes
@@ -333,7 +333,7 @@ class Expansion:
             self.unfinished += 1
             if isinstance(thing, GivenThing | LatchThing):
                 chain = self.stack[self.stack.index(thing) :] if thing in self.stack else [thing]
-                self.report.add(messages.needs_itself(thing.span, thing.word, [t.flat for t in chain]))
+                self.report.add(value_messages.needs_itself(thing.span, thing.word, [t.flat for t in chain]))
                 thing.quality = POISON
             return
         if self.depth >= RECURSION_MAX:

@@ -7,7 +7,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Final, Literal, TypeAlias
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, file_messages, name_messages, value_messages
 from polewise.circuit.asking import Asked, fits, poisoned
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, Quality, settled
 from polewise.circuit.naming import has_star, selected
@@ -54,7 +54,7 @@ def lower_call(x: Expansion, e: syntax.Call, env: Env) -> Value:
     thing = env.scope.find(e.name)
     if isinstance(thing, DefinitionThing) and not isinstance(thing.written, syntax.Assembly):
         if e.settings:
-            x.report.add(messages.setting_in_function(e.settings[0].span, e.name))
+            x.report.add(name_messages.setting_in_function(e.settings[0].span, e.name))
             return poisoned(x)
         if isinstance(thing.written, syntax.Function):
             return _inline(x, e, env, thing, thing.written)
@@ -64,27 +64,27 @@ def lower_call(x: Expansion, e: syntax.Call, env: Env) -> Value:
         x.report.add(_no_function(e, env.scope, None if thing is None else thing.word))
         return poisoned(x)
     if e.settings:
-        x.report.add(messages.setting_in_function(e.settings[0].span, e.name))
+        x.report.add(name_messages.setting_in_function(e.settings[0].span, e.name))
         return poisoned(x)
     return _call_built_in(x, e, env, built_in)
 
 
 def _no_function(e: syntax.Call, scope: Scope, word: str | None) -> Diagnostic:
     if word is not None:
-        return messages.not_a_function(e.name_span, e.name, word)
+        return name_messages.not_a_function(e.name_span, e.name, word)
     if e.name in KINDS or e.name in PARTS:
-        return messages.device_as_value(e.name_span, e.name, e.name in KINDS and KINDS[e.name].two_terminal)
+        return name_messages.device_as_value(e.name_span, e.name, e.name in KINDS and KINDS[e.name].two_terminal)
     own = [name for name in scope.visible() if isinstance(scope.find(name), DefinitionThing)]
-    return messages.unknown_function(e.name_span, e.name, nearest(e.name, [*own, *BUILT_IN]))
+    return name_messages.unknown_function(e.name_span, e.name, nearest(e.name, [*own, *BUILT_IN]))
 
 
 def _inline(x: Expansion, e: syntax.Call, env: Env, thing: DefinitionThing, function: syntax.Function) -> Value:
     if len(e.arguments) != len(function.parameters):
-        x.report.add(messages.argument_count(e.span, e.name, len(e.arguments), ", ".join(function.parameters), function.name_span))
+        x.report.add(name_messages.argument_count(e.span, e.name, len(e.arguments), ", ".join(function.parameters), function.name_span))
         return poisoned(x)
     values = {name: x.lower(argument, env) for name, argument in zip(function.parameters, e.arguments, strict=True)}
     if thing.flat in x.inlining or len(x.inlining) > INLINING_MAX:
-        x.report.add(messages.recursive_function(function.name_span, [*x.inlining, thing.flat]))
+        x.report.add(file_messages.recursive_function(function.name_span, [*x.inlining, thing.flat]))
         return poisoned(x)
     if any(quality is POISON for _, quality in values.values()):
         return poisoned(x)
@@ -114,14 +114,14 @@ def _call_built_in(x: Expansion, e: syntax.Call, env: Env, function: BuiltIn) ->
             values.append(x.lower(argument, env))
             places.append(argument)
     if len(values) < function.least or (function.most is not None and len(values) > function.most):
-        x.report.add(messages.argument_count(e.span, e.name, len(values), function.parameters, None))
+        x.report.add(name_messages.argument_count(e.span, e.name, len(values), function.parameters, None))
         return poisoned(x)
     qualities = []
     for (_, quality), place in zip(values, places, strict=True):
         if quality is POISON:
             return poisoned(x)
         if quality is CONDITION:
-            x.report.add(messages.condition_as_number(place.span, f"`{e.name}`"))
+            x.report.add(value_messages.condition_as_number(place.span, f"`{e.name}`"))
             return poisoned(x)
         qualities.append(quality)
     result = _quality_of_call(x, e, function, qualities, places)
@@ -143,9 +143,9 @@ def _quality_of_call(x: Expansion, e: syntax.Call, function: BuiltIn, qualities:
         joined = common.plus(quality)
         if joined is None:
             if dimensions.differ_by_turn(common, quality):
-                x.report.add(messages.turn_missing(e.span, places[0].span, common, place.span, quality))
+                x.report.add(value_messages.turn_missing(e.span, places[0].span, common, place.span, quality))
             else:
-                x.report.add(messages.arguments_differ(e.span, e.name, places[0].span, common, place.span, quality))
+                x.report.add(name_messages.arguments_differ(e.span, e.name, places[0].span, common, place.span, quality))
             return None
         common = joined
     return PLAIN if function.kind == "ratio" else common

@@ -10,7 +10,7 @@ from importlib.resources import files as package_files
 from pathlib import Path
 from typing import Final
 
-from polewise.circuit import messages
+from polewise.circuit import file_messages
 from polewise.circuit.csv_file import CsvFile
 from polewise.grammar import syntax
 from polewise.grammar.diagnostics import Diagnostic
@@ -144,7 +144,7 @@ class _Reader:
     def _use(self, use: syntax.Use, user: _File) -> None:
         span = use.path_span
         if not use.path.endswith(".pole"):
-            self.diagnostics.append(messages.use_ending(span, use.path))
+            self.diagnostics.append(file_messages.use_ending(span, use.path))
             return
         found = self._find(use.path, span, user)
         if found is None:
@@ -155,12 +155,12 @@ class _Reader:
         opened = [file.path.resolve() for file in self.open if file.path is not None]
         if resolved in opened:
             chain = [file.name for file in self.open if file.path is not None][opened.index(resolved) :]
-            self.diagnostics.append(messages.use_circle(span, [*chain, chain[0]]))
+            self.diagnostics.append(file_messages.use_circle(span, [*chain, chain[0]]))
             return
         if resolved in self.read:
             return  # each file once
         if len(self.read) >= FILES_MAX:
-            self.diagnostics.append(messages.too_many_files(span, FILES_MAX))
+            self.diagnostics.append(file_messages.too_many_files(span, FILES_MAX))
             return
         text = self.read_text(found.path, use.path, span, NETLIST_BYTES_MAX)
         if text is None:
@@ -172,7 +172,7 @@ class _Reader:
         """A used netlist: beside the file that uses it, else among the installed parts."""
         refused = _refused_spelling(written)
         if refused is not None:
-            self.diagnostics.append(messages.path_refused(span, written, refused))
+            self.diagnostics.append(file_messages.path_refused(span, written, refused))
             return None
         if user.path is not None:
             beside = user.path.parent / written
@@ -180,13 +180,13 @@ class _Reader:
                 if user.is_part:
                     return _File(beside, PARTS_PREFIX + written, True)
                 if self.folder is None or not beside.resolve().is_relative_to(self.folder):
-                    self.diagnostics.append(messages.path_refused(span, written, "it leads out of the circuit's folder"))
+                    self.diagnostics.append(file_messages.path_refused(span, written, "it leads out of the circuit's folder"))
                     return None
                 return _File(beside, beside.resolve().relative_to(self.folder).as_posix(), False)
         part = _installed_part(written)
         if part is not None:
             return _File(part, written, True)
-        self.diagnostics.append(messages.file_not_found(span, written))
+        self.diagnostics.append(file_messages.file_not_found(span, written))
         return None
 
     # ------------------------------------------------------------ tables
@@ -205,7 +205,7 @@ class _Reader:
             inside = self.folder is not None and path.resolve().is_relative_to(self.folder)
             refused = None if inside else "it leads out of the circuit's folder"
         if refused is not None or path is None:
-            self.diagnostics.append(messages.path_refused(span, table.file, refused or ""))
+            self.diagnostics.append(file_messages.path_refused(span, table.file, refused or ""))
             return
         known = self.csv_read.get(path.resolve())
         if known is None:
@@ -214,7 +214,7 @@ class _Reader:
                 return
             known = _read_csv(text)
             if known is None:
-                self.diagnostics.append(messages.csv_unreadable(span, table.file))
+                self.diagnostics.append(file_messages.csv_unreadable(span, table.file))
                 return
             self.csv_read[path.resolve()] = known
         self.csv[key] = known
@@ -226,26 +226,26 @@ class _Reader:
         place = span if span is not None else no_span(name)
         try:
             if not path.is_file():
-                self.diagnostics.append(messages.file_not_found(place, name))
+                self.diagnostics.append(file_messages.file_not_found(place, name))
                 return None
             size = path.stat().st_size
             if size > most:
-                self.diagnostics.append(messages.file_too_large(place, name, size, most))
+                self.diagnostics.append(file_messages.file_too_large(place, name, size, most))
                 return None
             with path.open("rb") as stream:
                 data = stream.read(most + 1)
         except (OSError, ValueError) as problem:
             reason = problem.strerror if isinstance(problem, OSError) and problem.strerror else "it can't be opened"
-            self.diagnostics.append(messages.file_unreadable(place, name, reason))
+            self.diagnostics.append(file_messages.file_unreadable(place, name, reason))
             return None
         if len(data) > most:
-            self.diagnostics.append(messages.file_too_large(place, name, len(data), most))
+            self.diagnostics.append(file_messages.file_too_large(place, name, len(data), most))
             return None
         try:
             text = data.decode("utf-8-sig")
         except UnicodeDecodeError as problem:
             line = data.count(b"\n", 0, problem.start) + 1
-            self.diagnostics.append(messages.not_utf8(place, name, line, problem.start))
+            self.diagnostics.append(file_messages.not_utf8(place, name, line, problem.start))
             return None
         return text.replace("\r\n", "\n").replace("\r", "\n")
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, name_messages, value_messages
 from polewise.circuit.asking import condition, number, poisoned
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, POWER, ZERO, Quality
 from polewise.circuit.expansion import Expansion
@@ -46,7 +46,7 @@ def _number_once(x: Expansion, e: syntax.Number, env: Env) -> Value:
         thing = env.scope.find(symbol)
         # A node called `m` is no factor; only names that have a value could have been meant.
         if symbol in env.frame or (env.parameters is not None and symbol in env.parameters) or (thing is not None and _could_multiply(thing)):
-            x.report.add(messages.joined_name(e.span, e.unit.symbol, symbol, None if thing is None else thing.span))
+            x.report.add(value_messages.joined_name(e.span, e.unit.symbol, symbol, None if thing is None else thing.span))
             return node, POISON
     return node, dimensions.quality_of_unit(e.unit)
 
@@ -95,7 +95,7 @@ def _in_function(x: Expansion, e: syntax.Reference, env: Env, name: str) -> Valu
     if thing is None:
         x.report.add(unknown_name(x, e.span, name, env))
     else:
-        x.report.add(messages.function_reads_outside(e.span, name, thing.word, thing.span))
+        x.report.add(name_messages.function_reads_outside(e.span, name, thing.word, thing.span))
     return poisoned(x)
 
 
@@ -112,12 +112,12 @@ def _reserved(x: Expansion, e: syntax.Reference, env: Env, name: str) -> Value:
             return env.own.across(x), ACROSS[domain]
         if name == "i" and domain is Domain.ELECTRICAL:
             return env.own.through(x), THROUGH[domain]
-        x.report.add(messages.own_name_of_domain(e.span, name, domain.across, domain.through))
+        x.report.add(name_messages.own_name_of_domain(e.span, name, domain.across, domain.through))
         return poisoned(x)
     if name in "sz":
-        x.report.add(messages.filter_variable_outside(e.span, name))
+        x.report.add(name_messages.filter_variable_outside(e.span, name))
     else:
-        x.report.add(messages.own_name_outside(e.span, name))
+        x.report.add(name_messages.own_name_outside(e.span, name))
     return poisoned(x)
 
 
@@ -128,7 +128,7 @@ def _own_by_domain_name(x: Expansion, e: syntax.Reference, env: Env, name: str) 
     if name in (domain.across, domain.through):
         thing = env.scope.find(name)
         if thing is not None:
-            x.report.add(messages.own_name_hides(e.span, name, thing.word, thing.span))
+            x.report.add(name_messages.own_name_hides(e.span, name, thing.word, thing.span))
             return poisoned(x)
         if name == domain.across:
             return env.own.across(x), ACROSS[domain]
@@ -138,7 +138,7 @@ def _own_by_domain_name(x: Expansion, e: syntax.Reference, env: Env, name: str) 
 
 def _dotted(x: Expansion, e: syntax.Reference, env: Env, first: str) -> Value:
     if env.parameters is not None:
-        x.report.add(messages.function_reads_outside(e.span, e.span.text, "reading", None))
+        x.report.add(name_messages.function_reads_outside(e.span, e.span.text, "reading", None))
         return poisoned(x)
     thing = env.scope.names.get(first)
     if thing is None:
@@ -174,7 +174,7 @@ def _plus(x: Expansion, e: syntax.Binary, env: Env) -> Value:
         return _no_sum(x, e, qa, qb)
     if e.operator == "+":
         if qa is dimensions.TEMPERATURE and _is_celsius(e.left) and _is_celsius(e.right):
-            x.report.add(messages.degrees_added(e.span, e.right.span))
+            x.report.add(value_messages.degrees_added(e.span, e.right.span))
             return poisoned(x)
         return x.graph.add(a, b), quality
     return x.graph.subtract(a, b), quality
@@ -187,12 +187,12 @@ def _is_celsius(e: syntax.Expression) -> bool:
 def _no_sum(x: Expansion, e: syntax.Binary, qa: Quality, qb: Quality) -> Value:
     for operand, quality in ((e.left, qa), (e.right, qb)):
         if quality is CONDITION:
-            x.report.add(messages.condition_as_number(operand.span, f"`{e.operator}`"))
+            x.report.add(value_messages.condition_as_number(operand.span, f"`{e.operator}`"))
             return poisoned(x)
     if dimensions.differ_by_turn(qa, qb):
-        x.report.add(messages.turn_missing(e.span, e.left.span, qa, e.right.span, qb))
+        x.report.add(value_messages.turn_missing(e.span, e.left.span, qa, e.right.span, qb))
     else:
-        x.report.add(messages.unit_mismatch(e.span, e.operator, e.left.span, qa, e.right.span, qb))
+        x.report.add(value_messages.unit_mismatch(e.span, e.operator, e.left.span, qa, e.right.span, qb))
     return poisoned(x)
 
 
@@ -212,7 +212,7 @@ def _over(x: Expansion, e: syntax.Binary, env: Env) -> Value:
     if quality is None:
         return _no_sum(x, e, qa, qb)
     if x.graph.value_of(b) == 0.0 and quality is not POISON:
-        x.report.add(messages.division_by_zero(e.right.span))
+        x.report.add(value_messages.division_by_zero(e.right.span))
         return poisoned(x)
     return x.graph.divide(a, b), quality
 
@@ -223,17 +223,17 @@ def _power(x: Expansion, e: syntax.Binary, env: Env) -> Value:
     if POISON in (quality, of_exponent):
         return poisoned(x)
     if of_exponent.is_number and not of_exponent.dimension.is_none:
-        x.report.add(messages.exponent_with_unit(e.right.span, of_exponent))
+        x.report.add(value_messages.exponent_with_unit(e.right.span, of_exponent))
         return poisoned(x)
     constant = x.graph.value_of(exponent)
     if constant is None:
         if not quality.dimension.is_none:
-            x.report.add(messages.varying_exponent(e.right.span, e.left.span, quality))
+            x.report.add(value_messages.varying_exponent(e.right.span, e.left.span, quality))
             return poisoned(x)
         return x.graph.power(base, exponent), PLAIN
     raised = dimensions.raised(quality, constant)
     if raised is None:
-        x.report.add(messages.exponent_too_large(e.right.span, e.left.span, quality))
+        x.report.add(value_messages.exponent_too_large(e.right.span, e.left.span, quality))
         return poisoned(x)
     return x.graph.power(base, exponent), (PLAIN if raised is ZERO else raised)
 
@@ -293,23 +293,23 @@ def _conditional(x: Expansion, e: syntax.Conditional, env: Env) -> Value:
     quality = qa.plus(qb)
     if quality is None:
         if CONDITION in (qa, qb):
-            x.report.add(messages.branches_differ(e.span, e.value.span, qa, e.otherwise.span, qb))
+            x.report.add(value_messages.branches_differ(e.span, e.value.span, qa, e.otherwise.span, qb))
         elif dimensions.differ_by_turn(qa, qb):
-            x.report.add(messages.turn_missing(e.span, e.value.span, qa, e.otherwise.span, qb))
+            x.report.add(value_messages.turn_missing(e.span, e.value.span, qa, e.otherwise.span, qb))
         else:
-            x.report.add(messages.branches_differ(e.span, e.value.span, qa, e.otherwise.span, qb))
+            x.report.add(value_messages.branches_differ(e.span, e.value.span, qa, e.otherwise.span, qb))
         return poisoned(x)
     return x.graph.mux(chosen, a, b), quality
 
 
 def _list(x: Expansion, e: syntax.ListOf, env: Env) -> Value:
-    x.report.add(messages.list_as_value(e.span))
+    x.report.add(value_messages.list_as_value(e.span))
     return poisoned(x)
 
 
 def _derivative(x: Expansion, e: syntax.Derivative, env: Env) -> Value:
     if not env.rates:
-        x.report.add(messages.derivative_outside(e.span))
+        x.report.add(value_messages.derivative_outside(e.span))
         return poisoned(x)
     node, quality = number(x, e.operand, env.but(rates=False), "`d/dt`")
     if quality is POISON:

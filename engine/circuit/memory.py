@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, value_messages
 from polewise.circuit.asking import constant, number, poisoned, positive_frequency, positive_time, report_varying
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, Quality, settled
 from polewise.circuit.model import AverageDef, DelayDef, SamplerDef, StateDef
@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 def _refused(x: Expansion, span: Span, env: Env, words: str) -> bool:
     if env.memory is None:
         return False
-    x.report.add(messages.memory_refused(span, words, env.memory))
+    x.report.add(value_messages.memory_refused(span, words, env.memory))
     return True
 
 
@@ -78,7 +78,7 @@ def lower_filtered(x: Expansion, e: syntax.Filtered, env: Env) -> Value:
     try:
         got = _rational(x, e.by, env, letter)
     except OrderTooHigh:
-        x.report.add(messages.filter_order(e.by.span))
+        x.report.add(value_messages.filter_order(e.by.span))
         return poisoned(x)
     if got is None or _refused(x, e.span, env, "filtered by") or (e.rate is not None and rate is None) or quality is POISON:
         return poisoned(x)
@@ -87,7 +87,7 @@ def lower_filtered(x: Expansion, e: syntax.Filtered, env: Env) -> Value:
     if h.is_constant:
         return x.graph.multiply(x.graph.constant(h.above[0] / h.below[0]), node), result
     if len(h.above) > len(h.below):
-        x.report.add(messages.improper_filter(e.by.span, letter))
+        x.report.add(value_messages.improper_filter(e.by.span, letter))
         return poisoned(x)
     if rate is None:
         return _continuous(x, e, env, h, node, result), result
@@ -154,7 +154,7 @@ def _rational(x: Expansion, e: syntax.Expression, env: Env, letter: str) -> tupl
     if isinstance(e, syntax.Binary) and e.operator in ("+", "-", "*", "/", "^") and _mentions(e, letter):
         return _rational_binary(x, e, env, letter)
     if _mentions(e, letter):
-        x.report.add(messages.not_rational(e.span, letter))
+        x.report.add(value_messages.not_rational(e.span, letter))
         return None
     return _coefficient(x, e, env)
 
@@ -165,7 +165,7 @@ def _coefficient(x: Expansion, e: syntax.Expression, env: Env) -> tuple[Rational
         return None
     node, quality = got
     if quality is CONDITION:
-        x.report.add(messages.condition_as_number(e.span, "a filter"))
+        x.report.add(value_messages.condition_as_number(e.span, "a filter"))
         return None
     value = x.finite(node)
     if value is None:
@@ -186,15 +186,15 @@ def _rational_binary(x: Expansion, e: syntax.Binary, env: Env, letter: str) -> t
         joined = qa.plus(qb)
         if joined is None:
             if dimensions.differ_by_turn(qa, qb):
-                x.report.add(messages.turn_missing(e.span, e.left.span, qa, e.right.span, qb))
+                x.report.add(value_messages.turn_missing(e.span, e.left.span, qa, e.right.span, qb))
             else:
-                x.report.add(messages.unit_mismatch(e.span, e.operator, e.left.span, qa, e.right.span, qb))
+                x.report.add(value_messages.unit_mismatch(e.span, e.operator, e.left.span, qa, e.right.span, qb))
             return None
         return a.plus(b, 1.0 if e.operator == "+" else -1.0), joined
     if e.operator == "*":
         return a.times(b), qa.times(qb) or POISON
     if b.is_zero:
-        x.report.add(messages.division_by_zero(e.right.span))
+        x.report.add(value_messages.division_by_zero(e.right.span))
         return None
     return a.over(b), qa.over(qb) or POISON
 
@@ -205,7 +205,7 @@ def _rational_power(x: Expansion, e: syntax.Binary, env: Env, base: tuple[Ration
         return None
     exponent = x.finite(got[0])
     if exponent is None or exponent != int(exponent) or not got[1].dimension.is_none or (base[0].is_zero and exponent < 0):
-        x.report.add(messages.filter_exponent(e.right.span))
+        x.report.add(value_messages.filter_exponent(e.right.span))
         return None
     if abs(exponent) > 100:
         raise OrderTooHigh

@@ -6,7 +6,7 @@ import re
 from collections.abc import Iterator
 from typing import TYPE_CHECKING
 
-from polewise.circuit import messages
+from polewise.circuit import name_messages
 from polewise.circuit.asking import poisoned
 from polewise.circuit.dimensions import POISON
 from polewise.circuit.near import nearest
@@ -34,7 +34,7 @@ def name_of(x: Expansion, part: syntax.NamePart, env: Env) -> str | None:
         if isinstance(piece, str):
             text.append(piece)
         elif isinstance(piece, syntax.Star):
-            x.report.add(messages.star_misplaced(piece.span))
+            x.report.add(name_messages.star_misplaced(piece.span))
             return None
         else:
             index = _index(x, piece, env)
@@ -59,7 +59,7 @@ def whole_number(x: Expansion, e: syntax.Expression, env: Env, asked_by: str) ->
         return None
     value = x.graph.value_of(node)
     if value is None or not quality.is_number or not quality.dimension.is_none or value != int(value) or not 0 <= value <= INDEX_MAX:
-        x.report.add(messages.not_whole(e.span, asked_by))
+        x.report.add(name_messages.not_whole(e.span, asked_by))
         return None
     return int(value)
 
@@ -75,9 +75,9 @@ def unknown_name(x: Expansion, span: Span, name: str, env: Env) -> Diagnostic:
     if scope.top is not None:
         outer = scope.top.names.get(name)
         if outer is not None:
-            return messages.outside_assembly(span, name, outer.word, outer.span, "" if scope.definition is None else scope.definition.name)
+            return name_messages.outside_assembly(span, name, outer.word, outer.span, "" if scope.definition is None else scope.definition.name)
     candidates = [*env.frame, *(env.parameters or ()), *scope.visible(), *VALUE_NAMES]
-    return messages.unknown_name(span, name, nearest(name, candidates))
+    return name_messages.unknown_name(span, name, nearest(name, candidates))
 
 
 # ---------------------------------------------------------------- dotted names
@@ -106,7 +106,7 @@ def find_thing(x: Expansion, reference: syntax.Reference, env: Env) -> Thing | N
 
 def _no_member(x: Expansion, part: syntax.NamePart, name: str, thing: Thing) -> Diagnostic:
     members = members_of(thing)
-    return messages.unknown_reading(part.span, name, thing.flat, thing.word, (), members, nearest(name, members), thing.span)
+    return name_messages.unknown_reading(part.span, name, thing.flat, thing.word, (), members, nearest(name, members), thing.span)
 
 
 def read_along(x: Expansion, reference: syntax.Reference, env: Env, thing: Thing) -> Value:
@@ -133,7 +133,7 @@ def read_along(x: Expansion, reference: syntax.Reference, env: Env, thing: Thing
 
 def _no_further(x: Expansion, part: syntax.NamePart, name: str, thing: Thing) -> Diagnostic:
     if name in thing.readings(x):
-        return messages.reading_has_no_parts(part.span, f"{thing.flat}.{name}")
+        return name_messages.reading_has_no_parts(part.span, f"{thing.flat}.{name}")
     return no_reading(x, part.span, name, thing)
 
 
@@ -141,7 +141,7 @@ def whole_value(x: Expansion, span: Span, thing: Thing) -> Value:
     """What a thing reads by its name alone."""
     value = thing.value(x)
     if value is None:
-        x.report.add(messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span))
+        x.report.add(name_messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span))
         return poisoned(x)
     return value
 
@@ -150,9 +150,9 @@ def no_reading(x: Expansion, span: Span, name: str, thing: Thing) -> Diagnostic:
     """The message for `thing.name` that reads nothing."""
     readings = thing.readings(x)
     if thing.word in ("port", "assembly") and name in readings:
-        return messages.port_current_unknown(span, thing.flat, thing.span)
+        return name_messages.port_current_unknown(span, thing.flat, thing.span)
     members = members_of(thing)
-    return messages.unknown_reading(span, name, thing.flat, thing.word, readings, members, nearest(name, [*readings, *members]), thing.span)
+    return name_messages.unknown_reading(span, name, thing.flat, thing.word, readings, members, nearest(name, [*readings, *members]), thing.span)
 
 
 # ---------------------------------------------------------------- selections
@@ -174,12 +174,12 @@ def selected(x: Expansion, reference: syntax.Reference, env: Env) -> Iterator[tu
             x.report.add(
                 no_reading(x, reference.parts[-1].span, rest, thing)
                 if rest
-                else messages.not_a_value(reference.span, thing.flat, thing.word, thing.readings(x), thing.span)
+                else name_messages.not_a_value(reference.span, thing.flat, thing.word, thing.readings(x), thing.span)
             )
             return iter(())
         found.append((name, value))
     if not found and len(x.report.found) == wrong:
-        x.report.add(messages.nothing_selected(reference.span))
+        x.report.add(name_messages.nothing_selected(reference.span))
     return iter(found)
 
 

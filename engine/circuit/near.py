@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from typing import Final
 
 # Comparing against very many names costs more than the hint is worth.
 CANDIDATES_MAX: Final = 20_000
+GROUPS_MAX: Final = 1_000
+GROUP_SIZE_MAX: Final = 200
 
 
 def distance(a: str, b: str, limit: int) -> int:
@@ -52,12 +54,31 @@ def nearest(name: str, candidates: Iterable[str]) -> str | None:
 
 def looks_mistyped(name: str, other: str) -> bool:
     """Whether a name used once is probably a slip for another: one edit apart, or apart in case alone; never merely numbered apart (b1, b2)."""
-    if name == other or _letters(name) == _letters(other):
+    if name == other or letters(name) == letters(other):
         return False
     if name.casefold() == other.casefold():
         return True
     return min(len(name), len(other)) >= 4 and distance(name, other, 1) == 1
 
 
-def _letters(name: str) -> str:
+def letters(name: str) -> str:
+    """A name without its digits: what numbered names have in common."""
     return "".join(c for c in name if not c.isdigit())
+
+
+def mistyped_among(once: Iterable[str], names: Iterable[str]) -> Iterator[tuple[str, str]]:
+    """Pairs (name used once, name it looks like). Names are compared by groups that differ in digits alone, so that many numbered ones cost little."""
+    groups: dict[str, list[str]] = {}
+    for name in names:
+        groups.setdefault(letters(name), []).append(name)
+    if len(groups) > GROUPS_MAX:
+        return
+    close: dict[str, list[str]] = {}
+    for name in once:
+        own = letters(name)
+        if own not in close:
+            close[own] = [g for g in groups if g != own and (distance(own, g, 1) <= 1 or own.casefold() == g.casefold())]
+        candidates = (other for group in close[own] for other in groups[group][:GROUP_SIZE_MAX])
+        other = next((other for other in candidates if looks_mistyped(name, other)), None)
+        if other is not None:
+            yield name, other

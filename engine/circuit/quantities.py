@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 
-from polewise.circuit import messages
+from polewise.circuit import name_messages
 from polewise.circuit.dimensions import CONDITION, POISON
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.model import Circuit, Quantity
@@ -45,7 +45,7 @@ def find(circuit: Circuit, name: str) -> Quantity | Diagnostic:
     names = name.strip().split(".")
     thing = x.top.names.get(names[0])
     if thing is None:
-        return messages.unknown_name(span, names[0], nearest(names[0], _first_names(x)))
+        return name_messages.unknown_name(span, names[0], nearest(names[0], _first_names(x)))
     for position, part in enumerate(names[1:], start=1):
         member = thing.member(part)
         if member is not None:
@@ -57,7 +57,7 @@ def find(circuit: Circuit, name: str) -> Quantity | Diagnostic:
         return _quantity(name.strip(), value)
     value = thing.value(x)
     if value is None:
-        return messages.not_a_value(span, name.strip(), thing.word, thing.readings(x), thing.span)
+        return name_messages.not_a_value(span, name.strip(), thing.word, thing.readings(x), thing.span)
     return _quantity(name.strip(), value)
 
 
@@ -81,9 +81,9 @@ def select(circuit: Circuit, pattern: str) -> tuple[Quantity, ...] | Diagnostic:
     for thing, rest in matching_things(x, x.top, names):
         value = thing.reading(x, rest) if rest else thing.value(x)
         if value is None:
-            return no_reading(x, span, rest, thing) if rest else messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span)
+            return no_reading(x, span, rest, thing) if rest else name_messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span)
         found.append(_quantity(f"{thing.flat}.{rest}" if rest else thing.flat, value))
-    return tuple(found) if found else messages.nothing_selected(span)
+    return tuple(found) if found else name_messages.nothing_selected(span)
 
 
 def all_quantities(circuit: Circuit) -> Iterator[Quantity]:

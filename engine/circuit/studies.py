@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Final
 
-from polewise.circuit import messages
+from polewise.circuit import box_messages, event_messages, file_messages, name_messages, value_messages
 from polewise.circuit.asking import Asked, constant_number, fits, positive_time
 from polewise.circuit.declare import declare_path_given
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, TIME, Quality, settled
@@ -80,7 +80,7 @@ def check_study_givens(x: Expansion, thing: StudyThing) -> None:
         if not isinstance(target, GivenThing):
             known = list(x.givens)
             x.report.add(
-                messages.unknown_given(
+                value_messages.unknown_given(
                     order.target.span, order.target.span.text, nearest(order.target.span.text, known), None if target is None else target.word
                 )
             )
@@ -89,7 +89,7 @@ def check_study_givens(x: Expansion, thing: StudyThing) -> None:
             continue
         if not x.graph.is_constant(node):
             kind, leaf = x.graph.symbols[x.graph.symbols_under([node])[0]] if x.graph.symbols_under([node]) else ("", "")
-            x.report.add(messages.varying_given(order.value.span, f"the given `{target.flat}`", leaf or kind, target.span))
+            x.report.add(value_messages.varying_given(order.value.span, f"the given `{target.flat}`", leaf or kind, target.span))
             continue
         fits(x, quality, Asked(target.quality, f"the given `{target.flat}`", target.span), order.value.span)
 
@@ -138,7 +138,7 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
         elif isinstance(order, syntax.At | syntax.Every | syntax.Whenever):
             finish_event(x, order, env, (times, clocks, conditions))
         elif not isinstance(order, syntax.Given):
-            x.report.add(messages.not_yet(order.span, f"`{order.span.text.split()[0]}`"))
+            x.report.add(file_messages.not_yet(order.span, f"`{order.span.text.split()[0]}`"))
     _check_times(x, written, run_for, times, requirements)
     return StudyDef(
         written.name,
@@ -162,11 +162,11 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
 def _start_time(x: Expansion, study: syntax.Study, order: syntax.Start, env: Env) -> float | None:
     assert order.study is not None
     if order.study == study.name:
-        x.report.add(messages.study_from_itself(order.span, study.name))
+        x.report.add(event_messages.study_from_itself(order.span, study.name))
     elif order.study not in x.studies_by_name:
-        x.report.add(messages.unknown_study(order.span, order.study, nearest(order.study, x.studies_by_name)))
+        x.report.add(event_messages.unknown_study(order.span, order.study, nearest(order.study, x.studies_by_name)))
     elif _study_circle(x, study.name):
-        x.report.add(messages.study_from_itself(order.span, study.name))
+        x.report.add(event_messages.study_from_itself(order.span, study.name))
     return None if order.time is None else positive_time(x, order.time, env, "`at`", zero=True)
 
 
@@ -186,7 +186,7 @@ def _study_circle(x: Expansion, name: str) -> bool:
 def _study_tolerance(x: Expansion, order: syntax.StudyTolerance, env: Env) -> float | None:
     value = constant_number(x, order.value, env, Asked(PLAIN, "`tolerance`"))
     if value is not None and not TOLERANCE_TIGHTEST <= value <= TOLERANCE_LOOSEST:
-        x.report.add(messages.tolerance_range(order.value.span, TOLERANCE_TIGHTEST, TOLERANCE_LOOSEST))
+        x.report.add(event_messages.tolerance_range(order.value.span, TOLERANCE_TIGHTEST, TOLERANCE_LOOSEST))
         return None
     return value
 
@@ -207,14 +207,14 @@ def quantity(x: Expansion, name: str, value: tuple[Node, Quality]) -> Quantity:
 def _check_times(x: Expansion, study: syntax.Study, run_for: float | None, times: list[TimeEvent], requirements: list[Requirement]) -> None:
     if run_for is None:
         if (requirements or times) and not any(isinstance(o, syntax.RunFor) for o in study.orders):
-            x.report.add(messages.study_without_run(study.name_span, study.name))
+            x.report.add(event_messages.study_without_run(study.name_span, study.name))
         return
     for event in times:
         if event.time_s > run_for:
-            x.report.add(messages.event_after_end(event.span, event.time_s, run_for, study.name))
+            x.report.add(event_messages.event_after_end(event.span, event.time_s, run_for, study.name))
     for requirement in requirements:
         if requirement.window_s[0] >= run_for:
-            x.report.add(messages.window_after_end(requirement.span, requirement.window_s[0], run_for, study.name))
+            x.report.add(event_messages.window_after_end(requirement.span, requirement.window_s[0], run_for, study.name))
 
 
 # ---------------------------------------------------------------- requirements
@@ -223,7 +223,7 @@ def _check_times(x: Expansion, study: syntax.Study, run_for: float | None, times
 def _check_requirement_name(x: Expansion, made: Requirement, others: list[Requirement]) -> None:
     other = next((r for r in others if r.name == made.name), None)
     if other is not None:
-        x.report.add(messages.declared_twice(made.span, made.name, "requirement", "requirement", other.span))
+        x.report.add(name_messages.declared_twice(made.span, made.name, "requirement", "requirement", other.span))
 
 
 def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> Requirement | None:
@@ -244,7 +244,7 @@ def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> 
     else:
         if isinstance(subject, syntax.Call) and x.top.find(subject.name) is None and subject.name not in BUILT_IN:
             close = nearest(subject.name, [*MEASURES, *BUILT_IN])
-            x.report.add(messages.unknown_measure(subject.name_span, subject.name, close, list(MEASURES)))
+            x.report.add(event_messages.unknown_measure(subject.name_span, subject.name, close, list(MEASURES)))
             return None
         node, kind = x.lower(subject, env)
         result, subject_span = settled(kind), subject.span
@@ -252,15 +252,15 @@ def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> 
         return None
     if order.relation is None:
         if measure != "value":
-            x.report.add(messages.requirement_without_bound(order.span, subject.span))
+            x.report.add(event_messages.requirement_without_bound(order.span, subject.span))
             return None
         if kind is not CONDITION:
-            x.report.add(messages.requirement_without_bound(order.span, subject.span))
+            x.report.add(event_messages.requirement_without_bound(order.span, subject.span))
             return None
         measure = "condition"
         low = high = None
     elif kind is CONDITION and measure == "value":
-        x.report.add(messages.condition_with_bound(subject.span, order.relation))
+        x.report.add(event_messages.condition_with_bound(subject.span, order.relation))
         return None
     else:
         bounds = _bounds(x, order, env, result, subject.span)
@@ -286,17 +286,17 @@ def _measured(x: Expansion, call: syntax.Call, rule: MeasureRule, env: Env) -> t
     extra = [s for s in call.settings if s.name not in rule.parameters]
     if extra:
         x.report.add(
-            messages.unknown_setting(
+            box_messages.unknown_setting(
                 extra[0].name_span, extra[0].name, rule.name, nearest(extra[0].name, rule.parameters), list(rule.parameters), None
             )
         )
         return None
     if len(call.arguments) + len(by_name) != wanted_count or not call.arguments:
-        x.report.add(messages.argument_count(call.span, rule.name, len(call.arguments), ", ".join(("x", *rule.parameters)), None))
+        x.report.add(name_messages.argument_count(call.span, rule.name, len(call.arguments), ", ".join(("x", *rule.parameters)), None))
         return None
     value = x.lower(call.arguments[0], env)
     if value[1] is CONDITION:
-        x.report.add(messages.condition_as_number(call.arguments[0].span, f"`{rule.name}`"))
+        x.report.add(value_messages.condition_as_number(call.arguments[0].span, f"`{rule.name}`"))
         return None
     parameters = []
     for k, name in enumerate(rule.parameters):
@@ -305,7 +305,7 @@ def _measured(x: Expansion, call: syntax.Call, rule: MeasureRule, env: Env) -> t
         if number is None:
             return None
         if number <= 0.0:
-            x.report.add(messages.band_not_positive(e.span, name, rule.name))
+            x.report.add(event_messages.band_not_positive(e.span, name, rule.name))
             return None
         parameters.append(number)
     return value, tuple(parameters), rule.result(settled(value[1])), call.arguments[0].span
@@ -328,7 +328,7 @@ def _bounds(x: Expansion, order: syntax.Require, env: Env, result: Quality, span
         if a is not None and b is not None and a > b:
             assert order.low is not None
             assert order.high is not None
-            x.report.add(messages.bounds_swapped(order.low.span.to(order.high.span), "within"))
+            x.report.add(value_messages.bounds_swapped(order.low.span.to(order.high.span), "within"))
             return None
     return low, high
 
@@ -345,6 +345,6 @@ def _window(x: Expansion, order: syntax.Require, env: Env) -> tuple[float, float
             return None
         if start is not None and end <= start:
             assert order.window_start is not None
-            x.report.add(messages.bounds_swapped(order.window_start.span.to(order.window_end.span), "during"))
+            x.report.add(value_messages.bounds_swapped(order.window_start.span.to(order.window_end.span), "during"))
             return None
     return None if start is None else (start, end)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Final
 
-from polewise.circuit import messages
+from polewise.circuit import file_messages, name_messages, value_messages
 from polewise.circuit.asking import Asked, constant, fits, poisoned
 from polewise.circuit.dimensions import CONDITION, POISON, UNKNOWN, Quality, quality_of_unit, settled
 from polewise.circuit.scope import Env, Value
@@ -29,7 +29,7 @@ def read_table(x: Expansion, e: syntax.Call, env: Env, thing: DefinitionThing) -
     if thing.number == _UNBUILT:
         build_table(x, thing)
     if len(e.arguments) != 1:
-        x.report.add(messages.argument_count(e.span, e.name, len(e.arguments), table.argument, table.name_span))
+        x.report.add(name_messages.argument_count(e.span, e.name, len(e.arguments), table.argument, table.name_span))
         return poisoned(x)
     node, quality = x.lower(e.arguments[0], env)
     if thing.number == _WRONG or quality is POISON:
@@ -40,7 +40,7 @@ def read_table(x: Expansion, e: syntax.Call, env: Env, thing: DefinitionThing) -
     cubic = x.graph.tables[thing.number]
     if value is not None and cubic.closed and not cubic.knots[0] <= value <= cubic.knots[-1]:
         x.report.add(
-            messages.outside_table(e.arguments[0].span, table.name, value, cubic.knots[0], cubic.knots[-1], thing.quality_in, table.name_span)
+            value_messages.outside_table(e.arguments[0].span, table.name, value, cubic.knots[0], cubic.knots[-1], thing.quality_in, table.name_span)
         )
         return poisoned(x)
     if table.outside is not None and "repeat" in table.outside:
@@ -68,16 +68,16 @@ def build_table(x: Expansion, thing: DefinitionThing) -> None:
     outside = table.outside or ""
     for k in range(1, len(points)):
         if points[k][0] <= points[k - 1][0]:
-            x.report.add(messages.table_order(spans[k] if spans else table.file_span or table.name_span, table.name, points[k][0], k + 1))
+            x.report.add(value_messages.table_order(spans[k] if spans else table.file_span or table.name_span, table.name, points[k][0], k + 1))
             return
     if table.odd:
         odd = _mirrored(points)
         if odd is None:
-            x.report.add(messages.table_not_odd(spans[0] if spans else table.name_span, table.name))
+            x.report.add(value_messages.table_not_odd(spans[0] if spans else table.name_span, table.name))
             return
         points = odd
     if len(points) < 2:
-        x.report.add(messages.table_too_short(table.name_span, table.name))
+        x.report.add(value_messages.table_too_short(table.name_span, table.name))
         return
     thing.number = x.graph.add_table(_cubic(table.name, points, smooth=table.smooth, outside=outside.replace("odd", "").strip()))
 
@@ -122,7 +122,7 @@ def _points_as_written(x: Expansion, thing: DefinitionThing, table: syntax.Table
             spans.append(pair[0].span)
     thing.quality_in, thing.quality_out = settled(kinds[0]), settled(kinds[1])
     if CONDITION in kinds:
-        x.report.add(messages.condition_as_number(table.name_span, "a table"))
+        x.report.add(value_messages.condition_as_number(table.name_span, "a table"))
     return points if len(x.report.found) == before and len(points) == len(table.points) else None
 
 
@@ -136,13 +136,13 @@ def _points_from_file(x: Expansion, thing: DefinitionThing, table: syntax.Table)
         return None  # reported by circuit.load
     if table.columns is None:
         if len(file.header) != 2:
-            x.report.add(messages.csv_columns_needed(span, table.file, file.header))
+            x.report.add(file_messages.csv_columns_needed(span, table.file, file.header))
             return None
         places = [0, 1]
     else:
         for column in table.columns:
             if column not in file.header:
-                x.report.add(messages.csv_no_column(span, table.file, column, file.header))
+                x.report.add(file_messages.csv_no_column(span, table.file, column, file.header))
                 return None
         places = [file.header.index(column) for column in table.columns]
     points: Points = []
@@ -155,7 +155,7 @@ def _points_from_file(x: Expansion, thing: DefinitionThing, table: syntax.Table)
                 number = float("nan")
             value = number if unit is None else unit.to_si(number)
             if not abs(value) < float("inf"):
-                x.report.add(messages.csv_not_number(span, table.file, line, file.header[place]))
+                x.report.add(file_messages.csv_not_number(span, table.file, line, file.header[place]))
                 return None
             pair.append(value)
         points.append((pair[0], pair[1]))

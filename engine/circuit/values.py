@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import Final
 
-from polewise.circuit import dimensions, messages
+from polewise.circuit import dimensions, value_messages
 from polewise.circuit.asking import Asked, constant, fits, report_varying, wanted
 from polewise.circuit.dimensions import CONDITION, POISON, TIME, UNKNOWN, Quality
 from polewise.circuit.expansion import Expansion
@@ -66,7 +66,7 @@ def _chosen_value(x: Expansion, thing: GivenThing, default: Value | None, asked:
     if thing.setting is not None:
         return _constant_that_fits(x, thing.setting.value, thing.scope.settings_env or thing.env, wants), None
     if default is None:
-        x.report.add(messages.given_missing(_asking_place(thing), thing.flat, thing.written.document, thing.span))
+        x.report.add(value_messages.given_missing(_asking_place(thing), thing.flat, thing.written.document, thing.span))
     return default, None
 
 
@@ -81,7 +81,7 @@ def _constant_that_fits(x: Expansion, e: syntax.Expression, env: Env, asked: Ask
         return None
     if x.finite(node) is None:
         if x.graph.symbols_under([node]):
-            x.report.add(messages.varying_given(e.span, asked.reason, _varying_leaf(x, node), asked.span))
+            x.report.add(value_messages.varying_given(e.span, asked.reason, _varying_leaf(x, node), asked.span))
         else:
             report_varying(x, node, e.span, asked.reason)
         return None
@@ -107,7 +107,7 @@ def value_from_outside(x: Expansion, path: str, text: str | float, asked: Asked)
     else:
         got = read_value(text)
         if got is None:
-            x.report.add(messages.override_unreadable(span, path, text))
+            x.report.add(value_messages.override_unreadable(span, path, text))
             return None
         number, dimension = got
         if number == 0.0 and dimension.is_none:
@@ -121,7 +121,7 @@ def _tolerance(x: Expansion, thing: GivenThing, tolerance: syntax.Tolerance | No
     if tolerance is None:
         return None
     if quality is CONDITION:
-        x.report.add(messages.tolerance_of_condition(tolerance.span, thing.flat))
+        x.report.add(value_messages.tolerance_of_condition(tolerance.span, thing.flat))
         return None
     got = constant(x, tolerance.value, thing.env.but(memory=NO_MEMORY), "a tolerance")
     if got is None:
@@ -129,17 +129,17 @@ def _tolerance(x: Expansion, thing: GivenThing, tolerance: syntax.Tolerance | No
     node, kind = got
     size = x.finite(node)
     if size is None or size < 0.0:
-        x.report.add(messages.tolerance_negative(tolerance.value.span))
+        x.report.add(value_messages.tolerance_negative(tolerance.value.span))
         return None
     value = tolerance.value
     with_share_unit = isinstance(value, syntax.Number) and value.unit is not None and value.unit.dimension.is_none
     if with_share_unit or (kind.is_number and kind.dimension.is_none and kind.sort != "zero" and not quality.dimension.is_none):
         if isinstance(value, syntax.Number) and value.unit is None:
-            x.report.add(messages.tolerance_without_unit(value.span, value.text))
+            x.report.add(value_messages.tolerance_without_unit(value.span, value.text))
             return None
         return size * abs(thing.number)
     if isinstance(value, syntax.Number) and value.unit is not None and value.unit.offset:
-        x.report.add(messages.degrees_added(tolerance.span, value.span))
+        x.report.add(value_messages.degrees_added(tolerance.span, value.span))
         return None
     if not fits(x, kind, Asked(quality, f"a tolerance of `{thing.flat}`", thing.span), value.span):
         return None
@@ -185,7 +185,7 @@ def work_out_input(x: Expansion, thing: InputThing) -> Quality:
         return _top_input(x, thing, default, asked)
     if thing.setting is None:
         if default is None:
-            x.report.add(messages.input_missing(thing.scope.placed or thing.span, thing.flat, written.document, thing.span))
+            x.report.add(value_messages.input_missing(thing.scope.placed or thing.span, thing.flat, written.document, thing.span))
             thing.node = x.graph.constant(0.0)
             return POISON
         thing.node = default[0]
@@ -207,7 +207,7 @@ def _top_input(x: Expansion, thing: InputThing, default: Value | None, asked: Qu
         thing.node = got[0]
         return got[1] if asked is UNKNOWN else asked
     if default is None:
-        x.report.add(messages.input_missing(thing.span, thing.flat, thing.written.document, None))
+        x.report.add(value_messages.input_missing(thing.span, thing.flat, thing.written.document, None))
         return POISON
     if not x.graph.is_constant(default[0]):
         report_varying(x, default[0], thing.span, "the start value of an input at top level")
@@ -276,7 +276,7 @@ def finish_state(x: Expansion, thing: StateThing) -> None:
         high = wanted(x, written.within[1], env, Asked(quality, reason, thing.span))
         a, b = x.graph.value_of(low), x.graph.value_of(high)
         if a is not None and b is not None and a > b:
-            x.report.add(messages.bounds_swapped(written.within[0].span.to(written.within[1].span), "within"))
+            x.report.add(value_messages.bounds_swapped(written.within[0].span.to(written.within[1].span), "within"))
     x.states[thing.flat] = StateDef(thing.flat, rate, initial, low, high, written.held, quality.dimension, thing.scope.path, thing.span)
 
 
@@ -284,7 +284,7 @@ def wanted_number(x: Expansion, e: syntax.Expression, env: Env) -> None:
     """Report a condition where only a number makes sense."""
     _, quality = x.lower(e, env)
     if quality is CONDITION:
-        x.report.add(messages.condition_as_number(e.span, "a state"))
+        x.report.add(value_messages.condition_as_number(e.span, "a state"))
 
 
 def constant_wanted(x: Expansion, e: syntax.Expression, env: Env, asked: Asked, asked_by: str) -> Node | None:
@@ -319,7 +319,7 @@ def finish_solve(x: Expansion, thing: SolveThing) -> None:
         return
     joined = a.plus(b)
     if joined is None or joined is CONDITION:
-        x.report.add(messages.sides_differ(written.span, written.left.span, a, written.right.span, b))
+        x.report.add(value_messages.sides_differ(written.span, written.left.span, a, written.right.span, b))
         return
     initial = None
     if written.initially is not None:
@@ -327,7 +327,7 @@ def finish_solve(x: Expansion, thing: SolveThing) -> None:
         initial = constant_wanted(x, written.initially, env.but(memory=NO_MEMORY), asked, "`initially`")
     residual = x.graph.subtract(left, right)
     if x.graph.is_constant(residual):
-        x.report.add(messages.nothing_to_solve(written.span, thing.flat))
+        x.report.add(value_messages.nothing_to_solve(written.span, thing.flat))
         return
     x.unknowns[thing.flat] = UnknownDef(thing.flat, residual, joined.dimension, initial, thing.quality.dimension, thing.scope.path, thing.span)
 

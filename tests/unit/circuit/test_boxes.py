@@ -81,6 +81,9 @@ def test_start_values(build):
     ("box", "code", "marked"),
     [
         ("5 ohm initially 3 V", "nothing-stored", "3 V"),
+        ("v = 2 ohm * i + d/dt (2 mH * i) initially 3 A", "initially-kind", "3 A"),
+        ("v = 2 ohm * i initially 3 A", "nothing-stored", "3 A"),
+        ("breaker() initially 3 A", "nothing-stored", "3 A"),
         ("1 mH initially 3 V", "unit-expected", "3 V"),
         ("1 mH initially time", "varying-value", "time"),
         ("5", "box-unit", "5"),
