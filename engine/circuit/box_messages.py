@@ -10,7 +10,6 @@ from polewise.circuit.message_form import article, at, declared_at, error, liste
 from polewise.grammar.diagnostics import Diagnostic, Label
 from polewise.grammar.source import Span
 
-
 # ---------------------------------------------------------------- nodes, paths, boxes
 
 
@@ -204,7 +203,10 @@ def unknown_setting(span: Span, name: str, kind: str, nearest: str | None, known
         hint = f"It has {listed(known)}."
     if word is not None:
         return error(
-            "unknown-setting", f"`{name}` is {article(word)} inside `{kind}` and can't be set from outside", span, hint="Make it a `given` or an `input`."
+            "unknown-setting",
+            f"`{name}` is {article(word)} inside `{kind}` and can't be set from outside",
+            span,
+            hint="Make it a `given` or an `input`.",
         )
     return error("unknown-setting", f"`{kind}` has no setting `{name}`", span, hint=hint, replace=nearest)
 

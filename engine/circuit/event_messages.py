@@ -9,7 +9,6 @@ from polewise.circuit.message_form import article, at, declared_at, error, meant
 from polewise.grammar.diagnostics import Diagnostic
 from polewise.grammar.source import Span
 
-
 # ---------------------------------------------------------------- events
 
 
@@ -20,7 +19,9 @@ def set_twice(span: Span, name: str, first: Span) -> Diagnostic:
 
 def not_settable(span: Span, name: str, word: str, declared: Span, hint: str | None) -> Diagnostic:
     """set of a signal."""
-    return error("not-settable", f"`{name}` is {article(word)}; events set latches, states and `closed`", span, labels=declared_at(declared), hint=hint)
+    return error(
+        "not-settable", f"`{name}` is {article(word)}; events set latches, states and `closed`", span, labels=declared_at(declared), hint=hint
+    )
 
 
 def nothing_to_switch(span: Span, word: str, name: str, thing: str, declared: Span) -> Diagnostic:

@@ -126,7 +126,9 @@ def _assignment(x: Expansion, action: syntax.Action, thing: Thing, env: Env) -> 
     if isinstance(action, syntax.SwitchAction):
         latch = contact_of(thing)
         if latch is None:
-            x.report.add(event_messages.nothing_to_switch(action.target.span, "close" if action.closed else "open", thing.flat, thing.word, thing.span))
+            x.report.add(
+                event_messages.nothing_to_switch(action.target.span, "close" if action.closed else "open", thing.flat, thing.word, thing.span)
+            )
             return None
         return Assignment("latch", latch.flat, x.graph.constant(1.0 if action.closed else 0.0), action.span)
     if not isinstance(thing, LatchThing | StateThing | BlockStateThing):

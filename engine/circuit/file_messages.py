@@ -8,7 +8,6 @@ from polewise.circuit.message_form import at, error, listed
 from polewise.grammar.diagnostics import Diagnostic
 from polewise.grammar.source import Span
 
-
 # ---------------------------------------------------------------- files
 
 

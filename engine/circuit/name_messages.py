@@ -9,7 +9,6 @@ from polewise.circuit.message_form import article, at, declared_at, error, liste
 from polewise.grammar.diagnostics import Diagnostic, Label
 from polewise.grammar.source import Span
 
-
 # ---------------------------------------------------------------- declaring names
 
 

@@ -67,7 +67,7 @@ def letters(name: str) -> str:
 
 
 def mistyped_among(once: Iterable[str], names: Iterable[str]) -> Iterator[tuple[str, str]]:
-    """Pairs (name used once, name it looks like). Names are compared by groups that differ in digits alone, so that many numbered ones cost little."""
+    """Pairs (name used once, name it looks like). Names that differ in digits alone are compared as one group, so many of them cost little."""
     groups: dict[str, list[str]] = {}
     for name in names:
         groups.setdefault(letters(name), []).append(name)

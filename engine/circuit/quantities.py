@@ -81,7 +81,9 @@ def select(circuit: Circuit, pattern: str) -> tuple[Quantity, ...] | Diagnostic:
     for thing, rest in matching_things(x, x.top, names):
         value = thing.reading(x, rest) if rest else thing.value(x)
         if value is None:
-            return no_reading(x, span, rest, thing) if rest else name_messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span)
+            return (
+                no_reading(x, span, rest, thing) if rest else name_messages.not_a_value(span, thing.flat, thing.word, thing.readings(x), thing.span)
+            )
         found.append(_quantity(f"{thing.flat}.{rest}" if rest else thing.flat, value))
     return tuple(found) if found else name_messages.nothing_selected(span)
 

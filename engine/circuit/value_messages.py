@@ -9,7 +9,6 @@ from polewise.circuit.message_form import LISTED_MAX, article, at, declared_at, 
 from polewise.grammar.diagnostics import Diagnostic, Label
 from polewise.grammar.source import Span
 
-
 # ---------------------------------------------------------------- units
 
 

@@ -85,7 +85,7 @@ def test_find(circuit, name, text):
         ("bus", "not-a-value", "Write `bus.v`."),
         ("buss.v", "unknown-name", "Did you mean `bus`?"),
         ("berth2.leg.dutty", "unknown-reading", "Did you mean `duty`?"),
-        ("berth2.leg", "not-a-value", "Write `berth2.leg.p`."),
+        ("berth2.leg", "not-a-value", "Write `berth2.leg.p`, `berth2.leg.duty` or `berth2.leg.share`."),
         ("shaft.v", "unknown-reading", "It has `speed`."),
         ("feeder.i.x", "unknown-reading", None),
         ("", "unknown-name", None),
