@@ -308,7 +308,7 @@ def _barrier(ax: Axes, times: Any, values: Any, forbidden: str, shade: str) -> N
     from matplotlib import patheffects
 
     angle = 90.0 if forbidden == "above" else -90.0  # counted from the line's direction, to its left
-    strokes = patheffects.TickedStroke(spacing=14.0, angle=angle, length=0.55, linewidth=0.8, foreground=shade)
+    strokes = patheffects.TickedStroke(spacing=14.0, angle=angle, length=0.4, linewidth=0.8, foreground=shade)
     ax.plot(times, values, color=shade, linewidth=1.0, path_effects=[strokes, patheffects.Normal()], zorder=1.5)
 
 
@@ -359,18 +359,9 @@ def _draw_tags(figure: Figure, axes: list[Axes], tags: list[tuple[float, str]], 
 def _head(figure: Figure, verdict: Verdict, facts: FigureFacts, height_in: float) -> None:
     figure.text(0.085, 1.0 - 0.16 / height_in, facts.study.replace("_", " "), fontsize=13, color=_INK, weight="bold", va="top")
     figure.text(0.085, 1.0 - 0.42 / height_in, facts.title, fontsize=8.5, color=_INK, va="top")
-    total, failed = len(verdict.requirements), len(verdict.failed)
-    if total:
-        words = (
-            "the requirement holds"
-            if total == 1 and not failed
-            else f"all {total} requirements hold"
-            if not failed
-            else f"{failed} of {total} requirements fail"
-        )
-        if total == 1 and failed:
-            words = "the requirement fails"
-        figure.text(0.985, 1.0 - 0.18 / height_in, words, fontsize=10, color=_FAILS if failed else _HOLDS, va="top", ha="right", weight="bold")
+    if verdict.requirements:
+        shade = _FAILS if verdict.failed else _HOLDS
+        figure.text(0.985, 1.0 - 0.18 / height_in, verdict.sentence, fontsize=10, color=shade, va="top", ha="right", weight="bold")
     if facts.reached_s < facts.planned_s * (1.0 - 1e-9):
         words = f"incomplete: stopped at {format_value(facts.reached_s, units.TIME)} of {format_value(facts.planned_s, units.TIME)}"
         figure.text(0.985, 1.0 - 0.42 / height_in, words, fontsize=8.5, color=_FAILS, va="top", ha="right")

@@ -17,6 +17,7 @@ from polewise.results.verdict import RequirementVerdict, Verdict
 
 _SEPARATE_MAX: Final = 6  # members of a family drawn as traces of their own; more become a band
 _SHOWN_OF_BAND_MAX: Final = 3  # members of a band that fail a requirement and are drawn as well
+_OUTLIER: Final = 0.3  # of a band's height: what reaches further from the middle than this has a name worth telling
 _TRACES_MAX: Final = 12  # traces and bands of one unit
 _LANES_MAX: Final = 16  # conditions
 _PANELS_MAX: Final = 10
@@ -80,13 +81,24 @@ def _traces(recording: Recording, verdict: Verdict, names: list[str], reached_s:
             whole = band((recorded_curve(recording, m) for m in members), 0.0, reached_s)
             low, high = _range(np.concatenate([whole.low, whole.high]))
             traces.append(Trace(f"{name} ({len(members)})", frozenset(members), whole.time, whole.middle, whole, low, high))
-            failing = {r.subject for r in verdict.failed}
-            members = [m for m in members if m in failing][:_SHOWN_OF_BAND_MAX]
+            members = _worth_showing(verdict, members, whole)
         for member in members:
             times, values = polyline(recorded_curve(recording, member))
             low, high = _range(np.append(values, list(_limits(verdict, member))))
             traces.append(Trace(member, frozenset((member,)), times, values, None, low, high))
     return traces, left_out
+
+
+def _worth_showing(verdict: Verdict, members: list[str], whole: Band) -> list[str]:
+    """Of a family drawn as a band, the members that fail a requirement and those that make it as wide as it is."""
+    failing = {r.subject for r in verdict.failed}
+    shown = [m for m in members if m in failing][:_SHOWN_OF_BAND_MAX]
+    height = float(np.max(whole.high) - np.min(whole.low))
+    if float(np.max(whole.high) - np.max(whole.middle)) > _OUTLIER * height:
+        shown.append(members[whole.highest])
+    if float(np.min(whole.middle) - np.min(whole.low)) > _OUTLIER * height:
+        shown.append(members[whole.lowest])
+    return list(dict.fromkeys(shown))
 
 
 def _limits(verdict: Verdict, name: str) -> Iterator[float]:

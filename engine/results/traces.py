@@ -87,30 +87,39 @@ def _refined_pieces(curve: Curve, width_s: float) -> tuple[FloatArray, FloatArra
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Band:
-    """The lowest and highest value of several traces over time, each shape (b,)."""
+    """The lowest and highest value of several traces over time, each shape (b,); which of them reach the whole band's lowest and highest."""
 
     time: FloatArray
     low: FloatArray
     high: FloatArray
     middle: FloatArray
+    lowest: int
+    highest: int
 
 
 def band(curves: Iterable[Curve], begin_s: float, end_s: float, bins: int = BINS) -> Band:
     """The band that holds all curves; `middle` is their mean. Curves are taken one at a time."""
     edges = np.linspace(begin_s, end_s, bins + 1)
     low, high, total = np.full(bins + 1, np.inf), np.full(bins + 1, -np.inf), np.zeros(bins + 1)
+    lowest, highest = (np.inf, 0), (-np.inf, 0)
     count = 0
     for curve in curves:
         value = curve.at(edges)
         value = np.where(np.isnan(value), curve.last_value if not curve.is_empty else np.nan, value)
-        low, high, total = np.fmin(low, value), np.fmax(high, value), total + value
+        total += value
+        own_low, own_high = value.copy(), value
         smallest, largest = curve.piece_ranges()
         short = curve.length <= (end_s - begin_s) / bins  # longer ones are seen at the edges
         index = np.clip(((curve.start[short] - begin_s) / (end_s - begin_s) * bins).astype(np.int64), 0, bins)
-        np.fmin.at(low, index, smallest[short])
-        np.fmax.at(high, index, largest[short])
+        np.fmin.at(own_low, index, smallest[short])
+        np.fmax.at(own_high, index, largest[short])
+        low, high = np.fmin(low, own_low), np.fmax(high, own_high)
+        if own_low.min() < lowest[0]:
+            lowest = (float(own_low.min()), count)
+        if own_high.max() > highest[0]:
+            highest = (float(own_high.max()), count)
         count += 1
-    return Band(edges, low, high, total / max(count, 1))
+    return Band(edges, low, high, total / max(count, 1), lowest[1], highest[1])
 
 
 def family(name: str) -> str:

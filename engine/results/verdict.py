@@ -97,6 +97,18 @@ class Verdict:
         """Those that don't hold."""
         return tuple(r for r in self.requirements if not r.passed)
 
+    @property
+    def sentence(self) -> str:
+        """ "all 6 requirements hold", "2 of 6 requirements fail" and the like."""
+        total, failed = len(self.requirements), len(self.failed)
+        if not total:
+            return "nothing was required"
+        if not failed:
+            return {1: "the requirement holds", 2: "both requirements hold"}.get(total, f"all {total} requirements hold")
+        if failed == total:
+            return {1: "the requirement fails", 2: "both requirements fail"}.get(total, f"all {total} requirements fail")
+        return f"{failed} of {total} requirements fail{'s' if failed == 1 else ''}"
+
     def __getitem__(self, name: str) -> RequirementVerdict:
         """A requirement by name.
 

@@ -34,13 +34,9 @@ def verdict_lines(verdict: Verdict, style: Style) -> list[str]:
 
 
 def summary_line(verdict: Verdict, style: Style) -> str:
-    """ "All 6 requirements hold." and the like."""
-    total, failed = len(verdict.requirements), len(verdict.failed)
-    if not total:
-        return "Nothing was required."
-    if not failed:
-        return style.paint("The requirement holds." if total == 1 else f"All {total} requirements hold.", "good")
-    return style.paint("The requirement fails." if total == 1 else f"{failed} of {total} requirements fail.", "bad")
+    """The verdict as one sentence."""
+    sentence = verdict.sentence[0].upper() + verdict.sentence[1:] + "."
+    return style.paint(sentence, "bad" if verdict.failed else "good" if verdict.requirements else "plain")
 
 
 def _row(r: RequirementVerdict) -> list[str]:

@@ -75,6 +75,7 @@ def test_a_thousand_converters_become_bands() -> None:
     (axes,) = figure.axes
     assert "berth{*}.choke.i (1000)" in _texts(figure)
     assert len(axes.lines) < 20
+    assert "berth999.choke.i" in _texts(figure)  # what reaches furthest has its name
 
 
 def test_nothing_kept() -> None:
@@ -123,6 +124,7 @@ def test_band_holds_every_curve() -> None:
     assert got.high.max() == pytest.approx(3.0, abs=1e-3)
     assert got.low.min() == pytest.approx(-3.0, abs=1e-3)
     assert np.allclose(got.middle, 0.0, atol=1e-9)
+    assert {got.highest, got.lowest} <= {0, 6}
 
 
 def test_families() -> None:

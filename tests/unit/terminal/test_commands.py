@@ -212,7 +212,7 @@ def test_run_holds(good: Path, say) -> None:
     assert err == ""
     assert "load_step" in out
     assert "idle" in out
-    assert "All 2 requirements hold." in out
+    assert "Both requirements hold." in out
     assert re.search(r"200 us .*ohms = 2 ohm", out)
     assert max(len(line) for line in out.splitlines()) <= 100
 
@@ -228,7 +228,7 @@ def test_a_requirement_that_fails(failing: Path, say) -> None:
     assert code == 1
     assert "FAILS" in out
     assert "below its limit of 20 V" in out
-    assert "1 of 2 requirements fail." in out
+    assert "1 of 2 requirements fails." in out
 
 
 def test_files_of_a_run(good: Path, tmp_path: Path, say) -> None:
