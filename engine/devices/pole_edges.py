@@ -10,6 +10,8 @@ from polewise.expression.graph import ExpressionGraph, Node
 
 # What `mode` reads: with edges a pole is either conducting or open.
 CONDUCTING, OPEN = 2.0, 0.0
+# A diode's current below this is none: rounding on either side of zero must not turn the opposite diode on.
+CURRENT_LEAST_A = 1e-9
 
 
 def _value(part: PartValue, name: str, graph: ExpressionGraph) -> Node:
@@ -41,7 +43,8 @@ def edge_equations(context: DeviceContext) -> DeviceEquations:
     by_lower = g.negate(g.multiply(r_lower, i))
     by_upper_diode = g.subtract(g.add(rail, v_upper), g.multiply(diode_r_upper, i))
     by_lower_diode = g.subtract(g.negate(v_lower), g.multiply(diode_r_lower, i))
-    leaving, entering = g.positive(i), g.positive(g.negate(i))
+    least = g.constant(CURRENT_LEAST_A)
+    leaving, entering = g.greater(i, least), g.greater(g.negate(i), least)
     if context.choke is None:
         open_mid, drives_upper, drives_lower = g.multiply(g.constant(0.5), rail), zero, zero
     else:
