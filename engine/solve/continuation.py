@@ -41,9 +41,7 @@ class RampOutcome:
     factors: Factors | None
 
 
-def ramp(
-    square: SquareSystem, start: NewtonOutcome, parameter: int, refused: Callable[[FloatArray], bool], *, begin: float = 0.0
-) -> RampOutcome:
+def ramp(square: SquareSystem, start: NewtonOutcome, parameter: int, refused: Callable[[FloatArray], bool], *, begin: float = 0.0) -> RampOutcome:
     """Follow the solution `start` at `begin` until the parameter is 1.
 
     Args:

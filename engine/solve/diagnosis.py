@@ -307,13 +307,13 @@ def not_finite(t: float, row: Named) -> NotFinite:
     )
 
 
-def outside_table(t: float, table: str, value: float, low: float, high: float, row: Named | None) -> OutsideTable:
+def outside_table(t: float, table: str, above: bool, low: float, high: float, row: Named | None) -> OutsideTable:
     """A table without `hold`, `extend` or `repeat` was read outside its range."""
     return OutsideTable(
         [
             _error(
                 "outside-table",
-                f"at {time_text(t)} table `{table}` is read at {value:.6g} (SI), outside its range {low:.6g} .. {high:.6g}",
+                f"at {time_text(t)} table `{table}` is read {'above' if above else 'below'} its range {low:.6g} .. {high:.6g} (in SI)",
                 row.span if row is not None else no_span(),
                 hint="end the table with `hold` or `extend`, or give it more points",
             )

@@ -44,8 +44,8 @@ def _switch_failure(problem: DaeProblem, work: Workspace, status: Status, t: flo
     what, span, row = _user_of_switch(system, node)
     if status == Status.OUTSIDE_TABLE and system.graph.operation[node] == opcodes.TABLE:
         table = system.graph.tables[system.graph.c[node]]
-        value = float(work.reg[problem.program.switch_reg[int(work.counter[N_WORST_SWITCH])]])
-        return diagnosis.outside_table(t, table.name, value, table.knots[0], table.knots[-1], row)
+        above = int(work.mode[int(work.counter[N_WORST_SWITCH])]) > 0
+        return diagnosis.outside_table(t, table.name, above, table.knots[0], table.knots[-1], row)
     return diagnosis.chatter(t, what, span, int(work.counter[N_CHATTER_LIMIT]))
 
 

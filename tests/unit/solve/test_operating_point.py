@@ -8,7 +8,10 @@ import numpy as np
 import pytest
 
 from polewise.errors import DependsOnTime, IntegratorCannotRest, IntegratorsFight, NoOperatingPoint, PowerLimit, SingularSystem
+from polewise.kernels import opcodes as op
 from polewise.solve.operating_point import find_operating_point
+from polewise.solve.pseudo_transient import settle_in_pseudo_time
+from polewise.solve.square_system import SquareSystem, rest_rows
 
 
 def _line_with_power(b, power, *, source=100.0, r=0.1, v_min=30.0):
@@ -92,6 +95,52 @@ def test_two_of_three_integrators_are_named(build):
     with pytest.raises(IntegratorsFight) as caught:
         find_operating_point(b.system())
     assert "`other`" not in caught.value.diagnostic.headline
+
+
+def test_integrators_that_fight_behind_limits(build):
+    """The searches end where one output is at its limit; the fight is told all the same."""
+    b = build()
+    v = b.x("v")
+    drives = []
+    for k, setpoint in enumerate((50.0, 51.0)):
+        integ = b.state(f"integ{k}", b.mul(4.0, b.sub(setpoint, v)), initial=0.5, integrator=True)
+        drives.append(b.mul(40.0, b.g.limit(integ, b.c(0.0), b.c(1.0))))
+    b.algebraic("v", b.sub(b.div(v, 1.0), b.add(*drives)), scale=100.0)
+    with pytest.raises(IntegratorsFight) as caught:
+        find_operating_point(b.system())
+    assert "`integ0` and `integ1` work against each other" in caught.value.diagnostic.headline
+
+
+def test_an_inductor_on_a_source_never_rests(build):
+    b = build()
+    i = b.x("i")
+    b.state("i", 300.0, charge=b.mul(1e-3, i), integrator=True)
+    with pytest.raises(IntegratorCannotRest) as caught:
+        find_operating_point(b.system())
+    assert "3e+05 /s" in caught.value.diagnostic.headline
+
+
+def test_sources_are_ramped_where_newton_fails(build):
+    """From a guess far up a steep law Newton's steps are too short; from no source at all a few small steps of the source get there."""
+    b = build()
+    v = b.x("v")
+    steep = b.g.unary(op.SINH, b.div(v, 0.03))
+    b.algebraic("v", b.sub(b.mul(1e-9, steep), b.sub(b.mul(b.source_scale, 20.0), v)), guess=60.0)
+    point = find_operating_point(b.system())
+    assert point.strategy == "source ramp"
+    assert 1e-9 * math.sinh(point.x[0] / 0.03) == pytest.approx(20.0 - point.x[0], rel=1e-9)
+
+
+def test_pseudo_time_settles_where_newton_goes_astray(build):
+    """x' = -x - 3 sin(9 x) has many stationary points of its residual's size; in pseudo-time x falls into a basin and rests."""
+    b = build()
+    x = b.x("x")
+    b.state("x", b.sub(b.mul(-1.0, x), b.mul(3.0, b.g.unary(op.SIN, b.mul(9.0, x)))))
+    system = b.system()
+    square = SquareSystem(system, rest_rows(system))
+    outcome, _ = settle_in_pseudo_time(square, np.array([3.0]))
+    assert outcome.converged
+    assert outcome.z[0] + 3 * math.sin(9 * outcome.z[0]) == pytest.approx(0.0, abs=1e-12)
 
 
 def test_an_integrator_of_a_constant_never_rests(build):
