@@ -1,58 +1,75 @@
-"""The progress line of a run: study time, share, time remaining; only where a person looks."""
+"""The progress line of a run: share done, study time, time remaining; only where a person looks."""
 
 from __future__ import annotations
 
 import os
 import sys
+import time
 from pathlib import Path
 from types import TracebackType
-from typing import TYPE_CHECKING, Any
+from typing import Final, TextIO
 
 import click
 
 from polewise.api import Progress
 from polewise.grammar.units import TIME, format_value
+from polewise.terminal.style import style_of
 
-if TYPE_CHECKING:
-    from rich.progress import Progress as Bar
+_CELLS: Final = 24
+_DRAWN_EVERY_S: Final = 0.2
+_ESTIMATE_FROM_SHARE: Final = 0.005  # before, the time remaining is anyone's guess
 
 
 class StudyProgress:
-    """Shows how far a study is on the error stream; on anything but a terminal it shows nothing."""
+    """Shows how far a study is on a stream; on anything but a terminal it shows nothing."""
 
-    def __init__(self, study: str) -> None:
+    def __init__(self, study: str, stream: TextIO | None = None) -> None:
         self._study = study
-        self._bar: Bar | None = None
-        self._task: Any = None
+        self._stream = sys.stderr if stream is None else stream
+        self._shown = False
+        self._began_s = time.monotonic()
+        self._drawn_s = -1.0
 
     def __enter__(self) -> StudyProgress:
-        if sys.stderr.isatty():
-            from rich.console import Console
-            from rich.progress import BarColumn, TextColumn, TimeRemainingColumn
-            from rich.progress import Progress as Bar
-
-            self._bar = Bar(
-                TextColumn("{task.description}"),
-                BarColumn(bar_width=30),
-                TextColumn("{task.percentage:>3.0f} %  {task.fields[at]}  about"),
-                TimeRemainingColumn(compact=True),
-                TextColumn("left"),
-                console=Console(stderr=True),
-                transient=True,
-            )
-            self._bar.start()
-            self._task = self._bar.add_task(self._study, total=1.0, at="")
+        self._began_s = time.monotonic()
+        if self._stream.isatty():
+            self._draw(f"{self._study}: begins")
         return self
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
-        if self._bar is not None:
-            self._bar.stop()
+        if self._shown:
+            self._stream.write("\r\033[K")
+            self._stream.flush()
 
     def __call__(self, progress: Progress) -> None:
         """Take note of how far the run is."""
-        if self._bar is not None:
-            at = f"{format_value(progress.time_s, TIME, digits=3)} of {format_value(progress.end_s, TIME, digits=3)}"
-            self._bar.update(self._task, completed=progress.share, at=at)
+        now_s = time.monotonic()
+        if not self._shown or now_s - self._drawn_s < _DRAWN_EVERY_S:
+            return
+        self._drawn_s = now_s
+        self._draw(progress_text(self._study, progress, now_s - self._began_s))
+
+    def _draw(self, text: str) -> None:
+        self._shown = True
+        self._stream.write("\r" + style_of(self._stream).paint(text, "faint") + "\033[K")
+        self._stream.flush()
+
+
+def progress_text(study: str, progress: Progress, elapsed_s: float) -> str:
+    """ "load_step  [######..................]  25 %  20 ms of 80 ms, about 3 s left"."""
+    share = progress.share
+    full = int(share * _CELLS)
+    bar = "#" * full + "." * (_CELLS - full)
+    at = f"{format_value(progress.time_s, TIME, digits=3)} of {format_value(progress.end_s, TIME, digits=3)}"
+    left = "" if share < _ESTIMATE_FROM_SHARE else f", about {_duration(elapsed_s * (1.0 - share) / share)} left"
+    return f"{study}  [{bar}]  {100.0 * share:.0f} %  {at}{left}"
+
+
+def _duration(seconds: float) -> str:
+    if seconds < 100.0:
+        return f"{seconds:.0f} s"
+    minutes = round(seconds / 60.0)
+    return f"{minutes} min" if minutes < 100 else f"{minutes // 60} h {minutes % 60} min"
 
 
 def say_first_compile() -> None:
