@@ -9,7 +9,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from polewise.api import Progress, System, from_text, load, read, read_text
+    from polewise.api import System, from_text, load, read, read_text
     from polewise.errors import NetlistError, NoOperatingPoint, PolewiseError, SolverError
     from polewise.grammar.diagnostics import Diagnostic, Severity
     from polewise.results.balance import PowerBalance
@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from polewise.results.overview import Overview
     from polewise.results.result import EventEntry, RecordedFile, Result, open_recorded
     from polewise.results.settled import PoleState, Settled
+    from polewise.results.study_run import Progress
     from polewise.results.verdict import RequirementVerdict, Verdict
 
 __version__: str  # of the installed package; pyproject.toml is its one source
@@ -33,7 +34,7 @@ _HOMES = {
     "PoleState": "polewise.results.settled",
     "PolewiseError": "polewise.errors",
     "PowerBalance": "polewise.results.balance",
-    "Progress": "polewise.api",
+    "Progress": "polewise.results.study_run",
     "RecordedFile": "polewise.results.result",
     "RequirementVerdict": "polewise.results.verdict",
     "Result": "polewise.results.result",

@@ -3,56 +3,31 @@
 from __future__ import annotations
 
 import threading
-import time
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Final, Literal
+from typing import TYPE_CHECKING, Literal
 
 from polewise.circuit.expand import expand
 from polewise.circuit.load import Sources, load_files, load_text
 from polewise.circuit.model import Circuit, Quantity, StudyDef
-from polewise.circuit.quantities import all_quantities, find, select
-from polewise.errors import NetlistError, SolverError
-from polewise.grammar.diagnostics import Diagnostic, Label, Severity
-from polewise.grammar.source import no_span
-from polewise.grammar.units import NONE, format_value, read_value, unit_text
+from polewise.circuit.quantities import all_quantities
+from polewise.errors import NetlistError
+from polewise.grammar.diagnostics import Diagnostic
 from polewise.network.graph import Network
 from polewise.results.failures import Interrupted, UnknownName, nearest_names
+from polewise.results.lookup import Value, default_quantities, found_quantity, input_value, selected_quantities, whole_network
 from polewise.results.overview import Overview, overview
-from polewise.results.result import EventEntry, Result, RunFacts
+from polewise.results.result import Result, RunFacts
+from polewise.results.study_run import Nothing, Progress, RunWishes, Sampling, StudyPlan, carry_out, equations_of, find_point, finished
 
 if TYPE_CHECKING:
     from polewise.equations.system import EquationSystem
     from polewise.expression.graph import Node
-    from polewise.kernels.program import FloatArray
-    from polewise.results.plan import RecordPlan
-    from polewise.results.recording import Recording, Sink
+    from polewise.results.recording import Sink
     from polewise.results.settled import Settled
     from polewise.solve.initial import Snapshot
     from polewise.solve.operating_point import OperatingPoint
-    from polewise.solve.transient import Counters, RunSummary
-
-TOLERANCE: Final = 1e-6  # relative, where neither the study nor the caller states one
-DEFAULT_KEPT_MAX: Final = 60  # nodes, and paths, that a study without `keep` records
-COUNTERS_TOLD: Final = ("steps", "rejected", "newton_iterations", "factorisations", "switch_flips", "sample_instants", "restarts")
-EVENT_CHANGES_TOLD: Final = 4  # of one event, in the log
-_ASKED: Final = "<asked for>"  # source name of instants that only the caller wants
-Sampling = Literal["exact", "mean"]
-Value = str | float | int | bool
-
-
-@dataclass(frozen=True, slots=True)
-class Progress:
-    """How far a run is: study time reached and wanted, s."""
-
-    time_s: float
-    end_s: float
-
-    @property
-    def share(self) -> float:
-        """0 .. 1."""
-        return min(1.0, self.time_s / self.end_s) if self.end_s > 0.0 else 1.0
 
 
 def load(path: str | Path, *, given: Mapping[str, Value] | None = None) -> System:
@@ -226,7 +201,7 @@ class System:
         """
         prepared = self._prepared[""]
         with self._lock:
-            system = _assemble(prepared.circuit, prepared.network, None, (), "exact")
+            system = equations_of(prepared.circuit, prepared.network, None, (), "exact")
         return overview(prepared.circuit, prepared.network, len(system.unknowns), self._diagnostics)
 
     def with_given(self, values: Mapping[str, Value]) -> System:
@@ -272,7 +247,7 @@ class System:
         >>> round(lamp.with_input({"level": "24 V"}).settled()["lamp.i"], 6)
         4.0
         """
-        inputs = {**self._inputs, **{name: _input_value(self.circuit, name, value) for name, value in values.items()}}
+        inputs = {**self._inputs, **{name: input_value(self.circuit, name, value) for name, value in values.items()}}
         other = System(self._sources, self._overrides, self._prepared[""], self._diagnostics, inputs)
         other._prepared, other._lock = self._prepared, self._lock  # the circuit is shared, and so is what guards its graph
         return other
@@ -285,7 +260,7 @@ class System:
         """
         prepared = self._prepared[""]
         with self._lock:
-            system = _assemble(prepared.circuit, prepared.network, None, _whole_network(prepared.circuit), "exact")
+            system = equations_of(prepared.circuit, prepared.network, None, whole_network(prepared.circuit), "exact")
             point = find_point(system, self._inputs)
         return self._settled(prepared, system, point)
 
@@ -338,7 +313,7 @@ class System:
         prepared = self._prepared_for(study)
         definition = prepared.circuit.studies[study]
         with self._lock:
-            kept: Sequence[Quantity] = definition.keep if keep is None else [q for name in keep for q in _selected(prepared.circuit, name)]
+            kept: Sequence[Quantity] = definition.keep if keep is None else [q for name in keep for q in selected_quantities(prepared.circuit, name)]
             record = plan_recording(prepared.circuit.graph, kept or default_quantities(prepared.circuit), definition.requirements)
         return StudyPlan(definition, prepared.circuit, prepared.network, record, sampling or definition.sampling)
 
@@ -361,76 +336,20 @@ class System:
         Raises:
             NoOperatingPoint, StartFailure: there was nothing to begin from.
         """
-        return self._carry_out(plan, sink, tolerance, progress, at, should_stop)[0]
+        wishes = RunWishes(tolerance, progress, at, should_stop)
+        return carry_out(plan, sink, wishes, self._inputs, self._lock, self._before(plan.study, wishes))[0]
 
-    def _carry_out(
-        self,
-        plan: StudyPlan,
-        sink: Sink,
-        tolerance: float | None,
-        progress: Callable[[Progress], None] | None,
-        at: Sequence[float],
-        should_stop: Callable[[], bool] | None,
-        stop_s: float | None = None,
-    ) -> tuple[RunFacts, Snapshot | None]:
-        from polewise.solve import initial, sampling, transient
-        from polewise.solve.problem import build_problem
-
-        began = time.perf_counter()
-        definition = plan.study
-        end_s = _length_s(definition) if stop_s is None else stop_s
-        before = self._snapshot(definition, tolerance, should_stop) if definition.start == "from" else None
-        strategy: str | None = None
-        with self._lock:
-            system = _assemble(plan.circuit, plan.network, definition.name, plan.record.outputs, plan.sampling or "exact")
-            sampling.require_choice(system, end_s, plan.sampling, study=definition.name, span=definition.span)
-            problem = build_problem(_hitting(system, at, end_s))
-            if before is not None:
-                start = initial.start_from(problem, before, start_latches=self._inputs)
-            elif definition.start == "settled":
-                point = find_point(problem.system, self._inputs)
-                strategy, start = point.strategy, initial.settled_at(problem, point)
-            else:
-                start = initial.start_cold(problem, start_latches=self._inputs)
-        trouble: SolverError | None = None
-        try:
-            summary: RunSummary = transient.run(
-                problem,
-                start=start,
-                stop_s=end_s,
-                tolerance=tolerance or definition.tolerance or TOLERANCE,
-                sink=sink,
-                progress=None if progress is None else lambda t, end: progress(Progress(t, end)),
-                should_stop=should_stop,
-            )
-        except SolverError as error:
-            if not isinstance(error.partial, transient.RunSummary):
-                raise
-            trouble, summary = error, error.partial
-        facts = RunFacts(
-            title=plan.circuit.title,
-            study=definition.name,
-            planned_s=end_s,
-            reached_s=summary.end_s,
-            complete=summary.complete,
-            trouble=trouble,
-            events=tuple(EventEntry(e.time_s, event_text(plan.circuit, e.text, e.changes)) for e in summary.events if e.span.source.name != _ASKED),
-            counters=_counters(summary.counters),
-            elapsed_s=time.perf_counter() - began,
-            sampling=plan.sampling or "exact",
-            strategy=strategy,
-            warnings=summary.warnings,
-        )
-        return facts, summary.snapshot
-
-    def _snapshot(self, definition: StudyDef, tolerance: float | None, should_stop: Callable[[], bool] | None) -> Snapshot:
-        """Where the study that another one starts from stands at its time. Reading has made sure that no study starts from itself."""
-        other = definition.start_study or ""
-        facts, snapshot = self._carry_out(self.plan(other, keep=()), _Nothing(), tolerance, None, (), should_stop, definition.start_time_s)
+    def _before(self, study: StudyDef, wishes: RunWishes) -> Snapshot | None:
+        """Where the study that this one starts from stands at its time. Reading has made sure that no study starts from itself."""
+        if study.start != "from":
+            return None
+        plan = self.plan(study.start_study or "", keep=())
+        until = RunWishes(wishes.tolerance, None, (), wishes.should_stop, study.start_time_s)
+        facts, snapshot = carry_out(plan, Nothing(), until, self._inputs, self._lock, self._before(plan.study, wishes))
         if facts.trouble is not None:
             raise facts.trouble
         if snapshot is None or not facts.complete:
-            raise Interrupted(other)
+            raise Interrupted(plan.study.name)
         return snapshot
 
     def _prepared_for(self, study: str) -> _Prepared:
@@ -464,7 +383,7 @@ class System:
 
         def quantity(name: str) -> Quantity:
             with self._lock:
-                return _found(circuit, name)
+                return found_quantity(circuit, name)
 
         with self._lock:
             balance, poles = power_balance(circuit, evaluate), pole_states(circuit, evaluate)
@@ -480,146 +399,3 @@ class System:
             evaluate,
             lambda: self.names,
         )
-
-
-@dataclass(frozen=True, slots=True)
-class StudyPlan:
-    """A study ready to run: the circuit its givens make, and what is recorded."""
-
-    study: StudyDef
-    circuit: Circuit
-    network: Network
-    record: RecordPlan
-    sampling: Sampling | None
-
-    @property
-    def length_s(self) -> float:
-        """How long it runs, s."""
-        return _length_s(self.study)
-
-
-def finished(plan: StudyPlan, facts: RunFacts, recording: Recording) -> Result:
-    """Judge what a run recorded."""
-    from polewise.results.result import Result
-    from polewise.results.verdict import judge
-
-    verdict = judge(plan.study.name, plan.record.judged, recording, planned_end_s=facts.planned_s, reached_s=facts.reached_s)
-    return Result(recording, verdict, facts)
-
-
-def default_quantities(circuit: Circuit) -> list[Quantity]:
-    """What a study without `keep` records: named nodes and paths at top level, at most DEFAULT_KEPT_MAX of each."""
-    nodes = [n for n in circuit.nodes.values() if n.named and not n.is_reference and not n.owner][:DEFAULT_KEPT_MAX]
-    names = [f"{n.name}.{n.domain.across}" for n in nodes]
-    for path in [p for p in circuit.paths.values() if not p.owner][:DEFAULT_KEPT_MAX]:
-        branches = [b for item in path.items for b in item]
-        if branches:
-            names.append(f"{path.name}.{circuit.branches[branches[0]].domain.through}")
-    found = [find(circuit, name) for name in names]
-    return [q for q in found if isinstance(q, Quantity)]
-
-
-def _whole_network(circuit: Circuit) -> list[Quantity]:
-    """Every voltage, current and potential: equations that can tell them can tell everything else afterwards."""
-    g = circuit.graph
-    outputs = [Quantity(n.name, g.symbol("potential", n.name), n.domain.across_dimension) for n in circuit.nodes.values()]
-    for b in circuit.branches.values():
-        outputs.append(Quantity(f"{b.name}.{b.domain.across}", g.symbol("v", b.name), b.domain.across_dimension))
-        outputs.append(Quantity(f"{b.name}.{b.domain.through}", g.symbol("i", b.name), b.domain.through_dimension))
-    return outputs
-
-
-def _length_s(study: StudyDef) -> float:
-    if study.run_for_s is None:
-        headline = f"study `{study.name}` does not say how long it runs"
-        raise NetlistError([Diagnostic("study-without-length", Severity.ERROR, headline, study.span, hint="add a line such as `run for 50 ms`")])
-    return study.run_for_s
-
-
-def _assemble(circuit: Circuit, network: Network, study: str | None, outputs: Sequence[Quantity], sampling: Sampling) -> EquationSystem:
-    from polewise.equations.assemble import assemble
-
-    return assemble(circuit, network, study=study, outputs=outputs, sampling=sampling)
-
-
-def _hitting(system: EquationSystem, times: Sequence[float], end_s: float) -> EquationSystem:
-    """The same equations with further instants that a run must hit; nothing happens at them."""
-    from polewise.equations.system import Timed
-
-    wanted = sorted({float(t) for t in times if 0.0 < t < end_s})
-    if not wanted:
-        return system
-    return replace(system, timed=(*system.timed, *(Timed(t, (), no_span(_ASKED)) for t in wanted)))
-
-
-def find_point(system: EquationSystem, inputs: Mapping[str, float]) -> OperatingPoint:
-    """The operating point of equations."""
-    from polewise.solve.operating_point import find_operating_point
-
-    return find_operating_point(system, start_latches=inputs)
-
-
-def _input_value(circuit: Circuit, name: str, value: Value) -> float:
-    """An input's value in SI."""
-    if name not in circuit.inputs:
-        raise UnknownName(name, f"there is no top-level input `{name}`", nearest_names(name, circuit.inputs))
-    latch = circuit.latches[name]
-    if isinstance(value, bool) or value in ("true", "false"):
-        if latch.is_condition:
-            return float(value in (True, "true"))
-    elif not isinstance(value, str):
-        return float(value)
-    elif not latch.is_condition:
-        got = read_value(value)
-        if got is not None and got[1] == latch.dimension:
-            return got[0]
-    wanted = "true or false" if latch.is_condition else f"a value in {unit_text(latch.dimension)}"
-    headline = f"the input `{name}` asks for {wanted}, not `{value}`"
-    raise NetlistError([Diagnostic("input-value", Severity.ERROR, headline, no_span("input"), (Label(latch.span, "the input stands here"),))])
-
-
-def event_text(circuit: Circuit, text: str, changes: Sequence[tuple[str, float]]) -> str:
-    """A line of the event log: what set it off, and what it set."""
-    if not changes:
-        return text
-    shown = ", ".join(f"{target} = {_changed(circuit, target, value)}" for target, value in changes[:EVENT_CHANGES_TOLD])
-    rest = len(changes) - EVENT_CHANGES_TOLD
-    shown += f" and {rest} more" if rest > 0 else ""
-    return f"set {shown}" if text.startswith("at ") else f"{text}: set {shown}"  # the entry has its time already
-
-
-def _changed(circuit: Circuit, target: str, value: float) -> str:
-    latch, state = circuit.latches.get(target), circuit.states.get(target)
-    if latch is not None and latch.is_condition:
-        return "true" if value > 0.5 else "false"
-    dimension = latch.dimension if latch is not None else state.dimension if state is not None else NONE
-    return format_value(value, dimension)
-
-
-def _counters(counters: Counters) -> dict[str, int]:
-    return {name.replace("_", " "): getattr(counters, name) for name in COUNTERS_TOLD}
-
-
-def _found(circuit: Circuit, name: str) -> Quantity:
-    """A quantity by name."""
-    quantity = find(circuit, name)
-    if isinstance(quantity, Quantity):
-        return quantity
-    raise UnknownName(name, quantity.headline, nearest_names(name, (q.name for q in all_quantities(circuit))), quantity.hint)
-
-
-def _selected(circuit: Circuit, name: str) -> list[Quantity]:
-    """The quantities that a name or selection stands for."""
-    if "{" not in name:
-        return [_found(circuit, name)]
-    chosen = select(circuit, name)
-    if isinstance(chosen, Diagnostic):
-        raise UnknownName(name, chosen.headline, (), chosen.hint)
-    return list(chosen)
-
-
-class _Nothing:
-    """A sink that forgets."""
-
-    def write(self, rows: FloatArray) -> None:
-        """Forget."""

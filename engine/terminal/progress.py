@@ -11,8 +11,8 @@ from typing import Final, TextIO
 
 import click
 
-from polewise.api import Progress
 from polewise.grammar.units import TIME, format_value
+from polewise.results.study_run import Progress
 from polewise.terminal.style import style_of
 
 _CELLS: Final = 24

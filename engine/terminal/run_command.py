@@ -14,12 +14,13 @@ from typing import Any
 
 import click
 
-from polewise.api import Sampling, StudyPlan, System, finished
+from polewise.api import System
 from polewise.errors import EXIT_HOLDS, EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, EXIT_REQUIREMENT_FAILS, PolewiseError
 from polewise.results.failures import OutputFailed
 from polewise.results.junit import StudyReport, junit_xml
 from polewise.results.recording import MemorySink, Recording, SeveralSinks, Sink
 from polewise.results.result import Result, RunFacts, about_run
+from polewise.results.study_run import Sampling, StudyPlan, finished
 from polewise.results.summary import verdict_content, write_summary
 from polewise.results.verdict import Verdict
 from polewise.terminal.json_form import diagnostics_content

@@ -6,7 +6,7 @@ import io
 
 import pytest
 
-from polewise.api import Progress
+from polewise.results.study_run import Progress
 from polewise.terminal.progress import StudyProgress, progress_text
 
 
