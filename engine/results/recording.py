@@ -74,8 +74,11 @@ class Recording(Protocol):
 
 
 def recorded_curve(recording: Recording, name: str) -> Curve:
-    """A column as a curve."""
-    return curve(recording.grid, recording.values(name))
+    """A column as a curve; a condition keeps through each step what it was at its start."""
+    whole = curve(recording.grid, recording.values(name))
+    if recording.columns[column_index(recording.columns, name)].is_condition:
+        whole.coefficient[:, 1:] = 0.0
+    return whole
 
 
 def row_blocks(recording: Recording, columns: Sequence[Column]) -> Iterator[FloatArray]:

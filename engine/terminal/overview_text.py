@@ -47,7 +47,7 @@ def _counts(facts: Overview) -> list[str]:
 
 
 def _singular(what: str) -> str:
-    return {"boxes": "box", "studies": "study", "assemblies": "assembly"}.get(what, what.removesuffix("s"))
+    return {"boxes": "box", "studies": "study", "assemblies": "assembly", "latches": "latch"}.get(what, what.removesuffix("s"))
 
 
 def _islands(facts: Overview, style: Style) -> list[str]:
@@ -78,7 +78,7 @@ def _chokes(facts: Overview, style: Style) -> list[str]:
     for (pole, names), members in folded.items():
         rows.append([pole, names, str(len(members))] if len(members) > 1 else [members[0], ", ".join(facts.chokes[members[0]]) or "none", "1"])
     headings = (Heading("pole"), Heading("choke", most=48), Heading("poles", right=True))
-    return ["", title_line("Diode poles and the choke each one faces", style), *table(headings, rows[:_ROWS_MAX], style), *_left_out(len(rows))]
+    return ["", title_line("Poles and the choke each one faces", style), *table(headings, rows[:_ROWS_MAX], style), *_left_out(len(rows))]
 
 
 def _studies(facts: Overview, style: Style) -> list[str]:

@@ -74,6 +74,14 @@ def test_both_sides_of_a_jump(system: polewise.System) -> None:
     assert "extra = 5 mA" in result.events[0].text
 
 
+def test_a_condition_between_points_is_0_or_1() -> None:
+    text = CHARGE.replace("latch extra = 0 A", "latch extra = 0 A\nsignal full = top.v > 5 V").replace("keep top.v, feed.i", "keep top.v, full")
+    result = polewise.from_text(text).run("charge")
+    assert set(result.at("full", np.linspace(0.0, 3.0, 1000)).tolist()) == {0.0, 1.0}
+    assert set(result["full"].tolist()) == {0.0, 1.0}
+    assert result.unit("full") == "1"
+
+
 def test_keep_selects_other_quantities(system: polewise.System) -> None:
     result = system.run("charge", keep=["store.c.i", "src.v"])
     assert result.names == ("store.c.i", "src.v")
