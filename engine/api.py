@@ -22,12 +22,23 @@ from polewise.results.result import Result, RunFacts
 from polewise.results.study_run import Nothing, Progress, RunWishes, Sampling, StudyPlan, carry_out, equations_of, find_point, finished
 
 if TYPE_CHECKING:
+    from polewise.analysis.handover import StateSpace
+    from polewise.analysis.impedance import Impedance
+    from polewise.analysis.limits import StabilityLimit
+    from polewise.analysis.loop import Loop
+    from polewise.analysis.modes import Modes
+    from polewise.analysis.point import ComplexArray
+    from polewise.analysis.standpoint import Standpoint
+    from polewise.analysis.tune import Shape, Tuned
     from polewise.equations.system import EquationSystem
     from polewise.expression.graph import Node
+    from polewise.kernels.program import FloatArray
     from polewise.results.recording import Sink
     from polewise.results.settled import Settled
     from polewise.solve.initial import Snapshot
     from polewise.solve.operating_point import OperatingPoint
+
+Place = tuple[str, float]  # a study and a time in it, s
 
 
 def load(path: str | Path, *, given: Mapping[str, Value] | None = None) -> System:
@@ -299,6 +310,132 @@ class System:
         if outcome.trouble is not None and on_failure == "raise":
             raise outcome.trouble
         return finished(plan, outcome, sink.finish())
+
+    # ------------------------------------------------------------ small-signal
+
+    def modes(self, *, at: Place | None = None, sensitivities: bool = True) -> Modes:
+        """Modes with participation, and the elements that move their damping.
+
+        Args:
+            at: (study, time in s); None: the operating point.
+            sensitivities: whether elements are ranked; large systems are faster without.
+
+        >>> tank = from_text('''
+        ... title "Tank"
+        ... reference gnd
+        ... feed: a --[1 V]-- gnd
+        ... tank: a --[r: 0.2 ohm]--[l: 100 uH]-- b
+        ... store: b --[200 uF]-- gnd
+        ... ''')
+        >>> tank.modes()[0].eigenvalue.imag.__round__(6)
+        7000.0
+        """
+        from polewise.analysis.modes import find_modes
+
+        with self._lock:
+            return find_modes(self._stand(at), sensitivities=sensitivities)
+
+    def response(
+        self, y: str | Sequence[str], u: str | Sequence[str], frequencies: Sequence[float] | FloatArray, *, at: Place | None = None
+    ) -> ComplexArray:
+        """Frequency response of y to u, exact delays and holds included.
+
+        Args:
+            y, u: names, or sequences of them.
+            frequencies: shape (m,), Hz.
+        Returns:
+            shape (m,) for two names, else (m, n_y, n_u); SI units of y over those of u.
+        """
+        from polewise.analysis.response import response
+
+        outputs, inputs = ([y] if isinstance(y, str) else list(y)), ([u] if isinstance(u, str) else list(u))
+        with self._lock:
+            linear = self._stand(at).between(inputs, outputs)
+        values = response(linear, frequencies)
+        return values[:, 0, 0] if isinstance(y, str) and isinstance(u, str) else values
+
+    def loop(self, signal: str, frequencies: Sequence[float] | FloatArray, *, at: Place | None = None) -> Loop:
+        """Loop gain at a signal, opened there without changing the operating point; margins and Nyquist verdict. See also loops."""
+        return self.loops([signal], frequencies, at=at)[0]
+
+    def loops(self, signals: Sequence[str], frequencies: Sequence[float] | FloatArray, *, at: Place | None = None) -> tuple[Loop, ...]:
+        """Loop gains at several signals, each with the others closed."""
+        from polewise.analysis.loop import open_loops
+
+        with self._lock:
+            return open_loops(self._stand(at), signals, frequencies)
+
+    def impedance(
+        self,
+        node: str | Sequence[str],
+        frequencies: Sequence[float] | FloatArray,
+        *,
+        source: Sequence[str] = (),
+        load: Sequence[str] = (),
+        at: Place | None = None,
+    ) -> Impedance:
+        """Impedance at a node ("bus"), between two ("a to b"), at a port ("berth2.inp"), or the matrix at a pair of them (d and q).
+
+        Args:
+            source, load: elements or assemblies on either side of the node; what is on neither belongs to the side that is not named.
+        """
+        from polewise.analysis.impedance import find_impedance
+
+        with self._lock:
+            return find_impedance(self._stand(at), [node] if isinstance(node, str) else node, frequencies, source, load)
+
+    def linear(self, inputs: Sequence[str], outputs: Sequence[str], *, at: Place | None = None, pade_order: int = 8) -> StateSpace:
+        """State space (E, A, B, C, D) with names and units. Delays become rational forms of `pade_order` here, and only here."""
+        from polewise.analysis.handover import hand_over
+
+        with self._lock:
+            return hand_over(self._stand(at), inputs, outputs, pade_order=pade_order)
+
+    def tune(
+        self,
+        signal: str,
+        *,
+        crossover: float,
+        phase_margin: float,
+        shape: Shape = "pi",
+        error: str | None = None,
+        at: Sequence[Place | None] = (None,),
+    ) -> Tuned:
+        """Gains for a crossover (Hz) and a phase margin (degrees); the netlist is not rewritten, the result holds text to paste.
+
+        Args:
+            signal: output of the compensator. error: its input; None: the block's own `error`.
+            shape: "pi", "lead", "one zero", "two zeros".
+            at: operating points; the first sets the crossover.
+        """
+        from polewise.analysis.tune import tune
+
+        with self._lock:
+            places = [self._stand(place) for place in at]
+            return tune(places, signal, error=error, crossover_hz=crossover, phase_margin_deg=phase_margin, shape=shape)
+
+    def stability_limit(self, name: str, low: float, high: float) -> StabilityLimit:
+        """Value (SI) of an element, a constant power, a latch or an input at which the circuit stops being stable."""
+        from polewise.analysis.limits import stability_limit
+
+        with self._lock:
+            return stability_limit(self._stand(None), name, low, high)
+
+    def _stand(self, at: Place | None) -> Standpoint:
+        from polewise.analysis.standpoint import Standpoint
+
+        if at is None:
+            prepared = self._prepared[""]
+            return Standpoint(prepared.circuit, prepared.network, self._inputs)
+        study, time_s = at
+        plan = self.plan(study, keep=())
+        until = RunWishes(None, None, (), None, time_s)
+        facts, snapshot = carry_out(plan, Nothing(), until, self._inputs, self._lock, self._before(plan.study, until))
+        if facts.trouble is not None:
+            raise facts.trouble
+        if snapshot is None or not facts.complete:
+            raise Interrupted(study)
+        return Standpoint(plan.circuit, plan.network, self._inputs, study, snapshot)
 
     # ------------------------------------------------------------ for faces that record elsewhere than in memory
 

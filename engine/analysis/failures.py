@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 from polewise.circuit.model import Circuit
 from polewise.circuit.quantities import all_quantities
 from polewise.errors import EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, PolewiseError
@@ -30,6 +32,11 @@ def refused(code: str, headline: str, hint: str | None = None, span: Span | None
 def unknown_input(circuit: Circuit, name: str, found: Diagnostic) -> UnknownName:
     """A name that stands for nothing."""
     return UnknownName(name, found.headline, nearest_names(name, (q.name for q in all_quantities(circuit))), found.hint)
+
+
+def unknown_node(name: str, known: Iterable[str]) -> UnknownName:
+    """A node that there is not."""
+    return UnknownName(name, f"there is no node `{name}`", nearest_names(name, known))
 
 
 def not_an_input(name: str) -> NotAnInput:

@@ -37,6 +37,9 @@ class Loop:
     linear: LinearSystem
     _gain: Gain
 
+    def __array__(self, dtype: object = None, copy: object = None) -> ComplexArray:
+        return self.gain
+
     @property
     def stable(self) -> bool:
         """Whether the closed loop is stable."""

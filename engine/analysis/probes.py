@@ -91,6 +91,11 @@ class Probing:
         self.probes[injection.name] = probe
         return probe
 
+    def adopt(self, name: str, latch: str, dimension: Dimension) -> Probe:
+        """Take a latch that the copy has already as a disturbance."""
+        self.probes[name] = Probe(name, latch, dimension)
+        return self.probes[name]
+
     def scale_elements(self, wanted: Callable[[Branch], bool] | None = None) -> dict[str, Probe]:
         """Give every resistor, capacitor and inductor a factor 1 + latch; branch name → probe."""
         g = self.graph

@@ -21,9 +21,9 @@ DELAY_ANGLE_MAX = 10.0
 NEWTON_LIMIT = 30
 NEWTON_RELATIVE = 1e-13
 SAME_ROOT_RELATIVE = 1e-8
-# Beyond this condition number the algebraic rows are not eliminated by themselves; the whole pencil is solved.
+# Beyond this condition number the algebraic rows are not eliminated by themselves.
 CONDITION_MAX = 1e12
-INFINITE_RELATIVE = 1e-13
+RANK_RELATIVE = 1e-12
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -49,8 +49,8 @@ def spectrum(linear: LinearSystem) -> Spectrum:
 def finite_modes(e: FloatArray, a: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
     """Eigenvalues s of (sE - A) v = 0 that are finite, with right and left vectors as columns (left^T (sE - A) = 0).
 
-    Algebraic rows are eliminated where they determine their unknowns (index 1); other pencils go through the QZ form.
-    Source: Golub & Van Loan 2013, 7.7 (QZ); Kunkel & Mehrmann 2006, Differential-Algebraic Equations, ch. 2 (index).
+    Algebraic rows are eliminated where they determine their unknowns (index 1); other pencils are shuffled.
+    Source: Kunkel & Mehrmann 2006, Differential-Algebraic Equations, ch. 2 (index).
     """
     rows = ~np.any(e != 0.0, axis=1)
     columns = ~np.any(e != 0.0, axis=0)
@@ -58,7 +58,7 @@ def finite_modes(e: FloatArray, a: FloatArray) -> tuple[ComplexArray, ComplexArr
         reduced = _eliminated(e, a, rows, columns)
         if reduced is not None:
             return reduced
-    return _qz(e, a)
+    return _by_shuffle(e, a)
 
 
 def _eliminated(e: FloatArray, a: FloatArray, rows: BoolArray, columns: BoolArray) -> tuple[ComplexArray, ComplexArray, ComplexArray] | None:
@@ -110,17 +110,62 @@ def _condition(matrix: FloatArray) -> float:
     return float(np.linalg.cond(scaled / columns))
 
 
-def _qz(e: FloatArray, a: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
-    from scipy.linalg import eig
+def _by_shuffle(e: FloatArray, a: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+    """Any index: values by shuffling, vectors as null vectors at each value."""
+    values = finite_values(e, a)
+    right = np.zeros((len(e), len(values)), dtype=complex)
+    left = np.zeros((len(e), len(values)), dtype=complex)
+    done: list[int] = []
+    for k, value in enumerate(values):
+        if k in done:
+            continue
+        same = [j for j in range(k, len(values)) if abs(values[j] - value) <= SAME_ROOT_RELATIVE * max(abs(value), 1e-9)]
+        basis_r, basis_l = null_vectors(value * e - a, len(same))
+        right[:, same], left[:, same] = basis_r, basis_l
+        done += same
+    return values, right, left
 
-    # Rows and columns to size one, so that "infinite" can be told from "large".
-    size = np.maximum(np.max(np.abs(a), axis=1), np.max(np.abs(e), axis=1))
-    size[size == 0.0] = 1.0
-    shift = np.max(np.abs(a / size[:, None])) / max(np.max(np.abs(e / size[:, None])), 1e-300)
-    (alpha, beta), left_h, right = eig(a / size[:, None], shift * e / size[:, None], left=True, right=True, homogeneous_eigvals=True)
-    finite = np.abs(beta) > INFINITE_RELATIVE * np.abs(alpha)
-    values = shift * alpha[finite] / beta[finite]
-    return values, right[:, finite], left_h[:, finite].conj() / size[:, None]
+
+def null_vectors(matrix: ComplexArray, count: int) -> tuple[ComplexArray, ComplexArray]:
+    """The `count` smallest right and left singular directions of a matrix, rows and columns scaled first; shapes (n, count)."""
+    rows = np.maximum(np.max(np.abs(matrix), axis=1, keepdims=True), 1e-300)
+    columns = np.maximum(np.max(np.abs(matrix / rows), axis=0, keepdims=True), 1e-300)
+    u, _, v = np.linalg.svd(matrix / rows / columns)
+    return v[-count:].conj().T / columns.T, u[:, -count:].conj() / rows
+
+
+def finite_values(e: FloatArray, a: FloatArray) -> ComplexArray:
+    """Finite eigenvalues of sE - A of any index.
+
+    Rows without E are constraints A_2 x = 0: x is written in their null space, and so on until E is regular.
+    Source: Luenberger 1977, Dynamic equations in descriptor form, IEEE Trans. Automatic Control 22 (the shuffle algorithm; here with
+    singular values for every decision of rank).
+    """
+    while len(e):
+        rows = np.maximum(np.maximum(np.max(np.abs(e), axis=1), np.max(np.abs(a), axis=1)), 1e-300)[:, None]
+        e, a = e / rows, a / rows
+        columns = np.maximum(np.maximum(np.max(np.abs(e), axis=0), np.max(np.abs(a), axis=0)), 1e-300)[None, :]
+        e, a = e / columns, a / columns
+        size = np.maximum(np.max(np.abs(e), axis=1), 1e-300)[:, None]
+        live = np.max(np.abs(e), axis=1) > 0.0
+        u, values, _ = np.linalg.svd(np.where(live[:, None], e / size, 0.0))
+        rank = int(np.count_nonzero(values > RANK_RELATIVE * max(values[0], 1e-300))) if len(values) else 0
+        scaled_e = np.where(live[:, None], e / size, 0.0)
+        scaled_a = np.where(live[:, None], a / size, a)
+        e_1, a_1, a_2 = (u.T @ scaled_e)[:rank], (u.T @ scaled_a)[:rank], (u.T @ scaled_a)[rank:]
+        if rank == len(e):
+            found: ComplexArray = np.linalg.eigvals(np.linalg.solve(e_1, a_1)).astype(np.complex128)
+            return found
+        if rank == 0:
+            return np.zeros(0, dtype=complex)
+        a_2 = a_2 / np.maximum(np.max(np.abs(a_2), axis=1, keepdims=True), 1e-300)
+        _, constraint, v = np.linalg.svd(a_2)
+        kept = int(np.count_nonzero(constraint > RANK_RELATIVE * max(constraint[0], 1e-300)))
+        null = v[kept:].T
+        if null.shape[1] != rank:
+            return np.zeros(0, dtype=complex)  # a singular pencil: every s would do
+        e, a = e_1 @ null, a_1 @ null
+    return np.zeros(0, dtype=complex)
 
 
 # ---------------------------------------------------------------- delays
@@ -255,14 +300,9 @@ def _vectors(linear: LinearSystem, values: ComplexArray, limit: float) -> Spectr
     while k < len(values):
         same = [j for j in range(k, len(values)) if values[j] == values[k]]
         m = len(same)
-        full = pencil(linear, complex(values[k])).toarray()
-        rows = np.maximum(np.max(np.abs(full), axis=1, keepdims=True), 1e-300)
-        columns = np.maximum(np.max(np.abs(full / rows), axis=0, keepdims=True), 1e-300)
-        u, _, v = np.linalg.svd(full / rows / columns)
-        basis_r = v[-m:].conj().T / columns.T
-        basis_l = u[:, -m:].conj() / rows
+        basis_r, basis_l = null_vectors(pencil(linear, complex(values[k])).toarray(), m)
         gram = basis_l.T @ pencil_slope(linear, complex(values[k])) @ basis_r
-        basis_l = np.linalg.solve(gram.T, basis_l.T).T if np.linalg.cond(gram) < 1e12 else basis_l
+        basis_l = np.linalg.solve(gram, basis_l.T).T if np.linalg.cond(gram) < 1e12 else basis_l
         right[:, same], left[:, same] = basis_r, basis_l
         k = same[-1] + 1 if same == list(range(k, k + m)) else k + 1
     return Spectrum(values, right, left, limit)
