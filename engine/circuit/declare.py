@@ -527,10 +527,11 @@ def _placement(x: Expansion, scope: Scope, statement: syntax.Placement, frame: F
     elif kind is not None:
         x.report.add(box_messages.device_belongs_in_box(statement.kind_span, statement.kind, name))
     else:
-        assemblies = [n for n in (scope.top or scope).names if getattr((scope.top or scope).names[n], "word", "") == "assembly"]
-        candidates = [*assemblies, *(k for k, v in KINDS.items() if not v.two_terminal), *BLOCKS]
-        word = None if definition is None else definition.word
-        x.report.add(box_messages.unknown_kind(statement.kind_span, statement.kind, nearest(statement.kind, candidates), word))
+        if x.report.wants("unknown-kind", statement.kind_span):
+            assemblies = [n for n, t in (scope.top or scope).names.items() if t.word == "assembly"]
+            candidates = [*assemblies, *(k for k, v in KINDS.items() if not v.two_terminal), *BLOCKS]
+            word = None if definition is None else definition.word
+            x.report.add(box_messages.unknown_kind(statement.kind_span, statement.kind, nearest(statement.kind, candidates), word))
         _add(x, scope, name, WrongThing(flat, scope, statement.name.span))
 
 
@@ -636,7 +637,7 @@ def _port_names(x: Expansion, definition: syntax.Assembly) -> tuple[str, ...] | 
 def _check_settings(x: Expansion, thing: InstanceThing, definition: syntax.Assembly) -> None:
     for name, setting in thing.inner.settings.items():
         target = thing.inner.names.get(name)
-        if not isinstance(target, GivenThing | InputThing):
+        if not isinstance(target, GivenThing | InputThing) and x.report.wants("unknown-setting", setting.name_span):
             known = [n for n, t in thing.inner.names.items() if isinstance(t, GivenThing | InputThing)]
             word = None if target is None else target.word
             x.report.add(box_messages.unknown_setting(setting.name_span, name, definition.name, nearest(name, known), known, word))

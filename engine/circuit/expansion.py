@@ -88,21 +88,22 @@ class Report:
         """What reading found, so that nothing is said twice."""
         self.broken_names, self.lacks_files, self.reported = broken_names, lacks_files, reported
 
-    def add(self, diagnostic: Diagnostic) -> None:
-        """Keep a diagnostic unless its place already has one of its code."""
-        if self.mute or len(self.found) >= DIAGNOSTICS_MAX or self._follows_from_reading(diagnostic):
-            return
-        span = diagnostic.span
-        self.found.setdefault((diagnostic.code, span.source.name, span.start, span.end), diagnostic)
-
-    def _follows_from_reading(self, diagnostic: Diagnostic) -> bool:
-        """Whether something is only missing because its line or its file could not be read, which is reported already."""
-        span = diagnostic.span
-        if (span.source.name, span.start, span.end) in self.reported:
-            return True
-        if diagnostic.code not in MISSING_CODES:
+    def wants(self, code: str, span: Span) -> bool:
+        """Whether a diagnostic of this code at this place would be news. Asked before a costly one is made: copies repeat their errors."""
+        if self.mute or len(self.found) >= DIAGNOSTICS_MAX or (code, span.source.name, span.start, span.end) in self.found:
             return False
-        return (self.lacks_files and diagnostic.code in ("unknown-kind", "unknown-function")) or diagnostic.span.text in self.broken_names
+        if (span.source.name, span.start, span.end) in self.reported:
+            return False
+        if code not in MISSING_CODES:
+            return True
+        # What is only missing because its line or its file could not be read is reported already.
+        return not (self.lacks_files and code in ("unknown-kind", "unknown-function")) and span.text not in self.broken_names
+
+    def add(self, diagnostic: Diagnostic) -> None:
+        """Keep a diagnostic if it is news."""
+        span = diagnostic.span
+        if self.wants(diagnostic.code, span):
+            self.found[diagnostic.code, span.source.name, span.start, span.end] = diagnostic
 
     def note_call(self, first: int, span: Span, name: str) -> None:
         """Add to the diagnostics found since there were `first` that a call of a function led to them."""

@@ -61,7 +61,8 @@ def lower_call(x: Expansion, e: syntax.Call, env: Env) -> Value:
         return read_table(x, e, env, thing)
     built_in = BUILT_IN.get(e.name)
     if built_in is None:
-        x.report.add(_no_function(e, env.scope, None if thing is None else thing.word))
+        if x.report.wants("unknown-function", e.name_span):
+            x.report.add(_no_function(e, env.scope, None if thing is None else thing.word))
         return poisoned(x)
     if e.settings:
         x.report.add(name_messages.setting_in_function(e.settings[0].span, e.name))

@@ -12,7 +12,7 @@ from polewise.circuit.expansion import Expansion
 from polewise.circuit.functions import lower_call
 from polewise.circuit.memory import lower_averaged, lower_delayed, lower_filtered, lower_sampled
 from polewise.circuit.model import Domain, RateDef
-from polewise.circuit.naming import name_of, read_along, unknown_name, whole_value
+from polewise.circuit.naming import name_of, read_along, report_unknown_name, whole_value
 from polewise.circuit.scope import Env, Value
 from polewise.circuit.things import ACROSS, READING_WORDS, THROUGH, GivenThing, Thing
 from polewise.expression.graph import ExpressionGraph, Node
@@ -79,7 +79,7 @@ def _reference(x: Expansion, e: syntax.Reference, env: Env) -> Value:
         return _own_by_domain_name(x, e, env, name)
     thing = env.scope.names.get(name) or env.scope.find(name)
     if thing is None:
-        x.report.add(unknown_name(x, e.span, name, env))
+        report_unknown_name(x, e.span, name, env)
         return poisoned(x)
     return thing.value(x) or whole_value(x, e.span, thing)
 
@@ -93,7 +93,7 @@ def _in_function(x: Expansion, e: syntax.Reference, env: Env, name: str) -> Valu
     if isinstance(thing, GivenThing):
         return thing.value(x) or poisoned(x)
     if thing is None:
-        x.report.add(unknown_name(x, e.span, name, env))
+        report_unknown_name(x, e.span, name, env)
     else:
         x.report.add(name_messages.function_reads_outside(e.span, name, thing.word, thing.span))
     return poisoned(x)
@@ -144,7 +144,7 @@ def _dotted(x: Expansion, e: syntax.Reference, env: Env, first: str) -> Value:
     if thing is None:
         thing = env.scope.find(first)
         if thing is None:
-            x.report.add(unknown_name(x, e.parts[0].span, first, env))
+            report_unknown_name(x, e.parts[0].span, first, env)
             return poisoned(x)
     return read_along(x, e, env, thing)
 

@@ -80,6 +80,12 @@ def unknown_name(x: Expansion, span: Span, name: str, env: Env) -> Diagnostic:
     return name_messages.unknown_name(span, name, nearest(name, candidates))
 
 
+def report_unknown_name(x: Expansion, span: Span, name: str, env: Env) -> None:
+    """Say that a name means nothing here, unless that is said."""
+    if x.report.wants("unknown-name", span):
+        x.report.add(unknown_name(x, span, name, env))
+
+
 # ---------------------------------------------------------------- dotted names
 
 
@@ -90,7 +96,7 @@ def find_thing(x: Expansion, reference: syntax.Reference, env: Env) -> Thing | N
         return None
     thing = env.scope.find(name)
     if thing is None:
-        x.report.add(unknown_name(x, reference.parts[0].span, name, env))
+        report_unknown_name(x, reference.parts[0].span, name, env)
         return None
     for part in reference.parts[1:]:
         name = name_of(x, part, env)
@@ -98,7 +104,8 @@ def find_thing(x: Expansion, reference: syntax.Reference, env: Env) -> Thing | N
             return None
         inner = thing.member(name)
         if inner is None:
-            x.report.add(_no_member(x, part, name, thing))
+            if x.report.wants("unknown-reading", part.span):
+                x.report.add(_no_member(x, part, name, thing))
             return None
         thing = inner
     return thing
@@ -124,7 +131,7 @@ def read_along(x: Expansion, reference: syntax.Reference, env: Env, thing: Thing
             continue
         value = thing.reading(x, name) if position == last else None
         if value is None:
-            if getattr(thing, "quality", None) is not POISON:
+            if getattr(thing, "quality", None) is not POISON and x.report.wants("unknown-reading", part.span):
                 x.report.add(no_reading(x, part.span, name, thing) if position == last else _no_further(x, part, name, thing))
             return poisoned(x)
         return value

@@ -194,3 +194,8 @@ def test_recursive_assemblies(check):
 def test_nesting_depth(check):
     chain = "".join(f"assembly x{n}(a) {{\n x: x{n + 1}(a)\n}}\n" for n in range(60)) + "assembly x60(a) {\n a --[1 ohm]-- b\n}\n"
     check(HEAD + chain + "top: x0(gnd)\n", [("nested-too-deep", "x40")])
+
+
+def test_copies_of_a_wrong_statement_say_it_once(check):
+    copies = "each k in 1..3000 {\n x{k}: bertg(gnd)\n y{k}: gnd --[1 ohm]-- a{k}\n whenever y{k}.q > 3 A: set nothing = 3\n}\n"
+    check(HEAD + BERTH + copies, [("unknown-kind", "bertg"), ("unknown-reading", "q"), ("unknown-name", "nothing")])
