@@ -9,13 +9,24 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from polewise.kernels.layout import AT_CANDIDATE, AT_REG, AT_REG3, AT_SWITCH_NOW, AT_SWITCH_REG, AT_SWITCH_SCALE, AT_SWITCH_WATCHED, SIZE_S
-from polewise.kernels.opcodes import Status
+from polewise.kernels.layout import (
+    AT_CANDIDATE,
+    AT_MODE,
+    AT_REG,
+    AT_REG3,
+    AT_SWITCH_KIND,
+    AT_SWITCH_NOW,
+    AT_SWITCH_REG,
+    AT_SWITCH_SCALE,
+    AT_SWITCH_WATCHED,
+    SIZE_S,
+)
+from polewise.kernels.opcodes import SWITCH_POSITIVE, Status
 from polewise.kernels.radau import C1, C2
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.step import attempt_step_c, run_inside_c
 from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
-from polewise.kernels.tape import WHOLE
+from polewise.kernels.tape import WHOLE, U
 from polewise.kernels.workspace import (
     N_CHATTER_LIMIT,
     N_LOCATED,
@@ -52,14 +63,17 @@ def _build(stamp: int):
         _ = stamp
         band, switch_reg, switch_scale = F[S_BAND], W[AT_SWITCH_REG], W[AT_SWITCH_SCALE]
         candidate, switch_now = W[AT_CANDIDATE], W[AT_SWITCH_NOW]
+        kind, mode, reg3 = W[AT_SWITCH_KIND], W[AT_MODE], W[AT_REG3]
         found = False
         for s in range(W[SIZE_S]):
-            at = W[AT_REG3] + 3 * W[switch_reg + s]
-            worst = -np.inf
-            for lane in range(3):
-                worst = max(worst, violation_c(F, W, s, F[at + lane]))
-            W[candidate + s] = 0
-            if worst > band * F[switch_scale + s]:
+            at = U(reg3 + 3 * W[U(switch_reg + s)])
+            u, v, w = F[at], F[at + U(1)], F[at + U(2)]
+            if W[U(kind + s)] == SWITCH_POSITIVE:  # the many: as violation_c, in place
+                worst = max(-u, -v, -w) if W[U(mode + s)] != 0 else max(u, v, w)
+            else:
+                worst = max(violation_c(F, W, s, u), violation_c(F, W, s, v), violation_c(F, W, s, w))
+            W[U(candidate + s)] = 0
+            if worst > band * F[U(switch_scale + s)]:
                 W[candidate + s] = 1
                 F[switch_now + s] = worst
                 found = True

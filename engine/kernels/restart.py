@@ -20,6 +20,7 @@ from polewise.kernels.layout import (
     AT_HISTORY_START,
     AT_JF_REG,
     AT_JQ_REG,
+    AT_MODE,
     AT_Q_KEEP,
     AT_Q_REG,
     AT_Q_START,
@@ -28,6 +29,7 @@ from polewise.kernels.layout import (
     AT_RESTART_SCALE,
     AT_ROW_IDX,
     AT_SCALE,
+    AT_SWITCH_KIND,
     AT_SWITCH_REG,
     AT_SWITCH_SCALE,
     AT_WEIGHT,
@@ -40,11 +42,11 @@ from polewise.kernels.layout import (
     SIZE_S,
 )
 from polewise.kernels.lu import LU_DONE, LU_FULL, lu_factor_c, lu_solve_c
-from polewise.kernels.opcodes import Status
+from polewise.kernels.opcodes import SWITCH_POSITIVE, Status
 from polewise.kernels.program import Program
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
-from polewise.kernels.tape import WHOLE, residual_at_c, segment_c
+from polewise.kernels.tape import WHOLE, U, residual_at_c, segment_c
 from polewise.kernels.workspace import (
     N_FULL_FACTORS,
     N_JACOBIANS,
@@ -221,15 +223,19 @@ def _build(stamp: int):
         W[N_START_READY] = 0
         W[N_MADE_JUMP] = 1
         load_delayed_c(F, W, WHOLE(1))
-        switch_reg, switch_scale, reg = W[AT_SWITCH_REG], W[AT_SWITCH_SCALE], W[AT_REG]
+        switch_reg, switch_scale, reg, kind, mode = W[AT_SWITCH_REG], W[AT_SWITCH_SCALE], W[AT_REG], W[AT_SWITCH_KIND], W[AT_MODE]
         for round_number in range(ROUND_LIMIT):
             status = solve_frozen_c(F, W, K)
             if status == FACTORS_FULL:
                 return status
             flips = 0
             for s in range(W[SIZE_S]):
-                value = F[reg + W[switch_reg + s]]
-                if violation_c(F, W, s, value) > F[switch_scale + s] * F[S_BAND]:
+                value = F[U(reg + W[U(switch_reg + s)])]
+                if W[U(kind + s)] == SWITCH_POSITIVE:  # the many: as violation_c, in place
+                    beyond = -value if W[U(mode + s)] != 0 else value
+                else:
+                    beyond = violation_c(F, W, s, value)
+                if beyond > F[U(switch_scale + s)] * F[S_BAND]:
                     flips += 1
                     trouble = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(1)))
                     if trouble != DONE:
