@@ -8,12 +8,14 @@ from dataclasses import dataclass
 import numpy as np
 from timing import interleaved
 
+SHORT_S = 30e-3
+SHORT_ROUNDS = 8
 ERROR_SLACK = 1.05  # a run whose error is within 5 % of the wanted one counts as equal
 
 
 @dataclass(frozen=True, slots=True)
 class Point:
-    """One tolerance: measured error and median seconds."""
+    """One tolerance: measured error, and seconds of the quickest run."""
 
     tolerance: float
     error: float
@@ -26,7 +28,10 @@ def sweep(run: Callable[[float], object], error: Callable[[float], float], toler
     for tolerance in tolerances:
         try:
             measured = error(tolerance)  # warms the run up too
-            timing = interleaved([lambda at=tolerance: run(at)], rounds=rounds, warm=False)[0]
+            job = [lambda at=tolerance: run(at)]
+            timing = interleaved(job, rounds=rounds, warm=False)[0]
+            if timing.best < SHORT_S:  # another program's time slice is as long as the run itself: try until one run was left alone
+                timing = min(timing, interleaved(job, rounds=SHORT_ROUNDS, warm=False)[0], key=lambda t: t.best)
         except (RuntimeError, ValueError, ArithmeticError):
             continue
         points.append(Point(tolerance, measured, timing.best))
