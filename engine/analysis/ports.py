@@ -63,7 +63,7 @@ def belongs(items: Sequence[str]) -> Callable[[str], bool]:
     """Whether a path lies in one of the named elements or assemblies."""
 
     def inside(path: str) -> bool:
-        return any(path == item or path.startswith(f"{item}.") for item in items)
+        return any(path == item or path.startswith((f"{item}.", f"{item}#")) for item in items)
 
     return inside
 
@@ -96,7 +96,7 @@ def load_side(circuit: Circuit, node: str, source: Sequence[str], load: Sequence
 
 
 def _top(name: str) -> str:
-    return name.split(".")[0]
+    return name.split(".")[0].split("#")[0]
 
 
 def split(stand: Standpoint, port: Port, load: Sequence[str]) -> tuple[Standpoint, Branch]:

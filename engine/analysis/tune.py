@@ -17,7 +17,7 @@ from polewise.analysis import failures
 from polewise.analysis.linearise import LinearSystem
 from polewise.analysis.loop import opened
 from polewise.analysis.margins import Margins, margins_of
-from polewise.analysis.nyquist import on_axis_count, unstable_count, winding
+from polewise.analysis.nyquist import unstable_count
 from polewise.analysis.point import ComplexArray
 from polewise.analysis.response import transfer
 from polewise.analysis.spectrum import spectrum
@@ -29,6 +29,7 @@ Shape = Literal["pi", "lead", "one zero", "two zeros"]
 SHAPES: tuple[Shape, ...] = ("pi", "lead", "one zero", "two zeros")
 BOOST_MAX_DEG = {"pi": 90.0, "lead": 90.0, "one zero": 90.0, "two zeros": 180.0}
 POLISH_LIMIT = 60
+RESTING_RELATIVE = 1e-6  # modes this much slower than the crossover stand for integrators left idle
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -116,7 +117,17 @@ def tune(
         margins.append(found)
         stable.append(ok)
     quantities = stands[0].quantity(signal).dimension, stands[0].quantity(fed).dimension
-    return Tuned(shape, values, _text(shape, signal, fed, values, *quantities), tuple(margins), tuple(stable), tuple(notes))
+    if shape == "pi":
+        notes.append("keep the block's other settings (low, high)")
+    return Tuned(shape, values, _text(shape, signal, _spelling(stands[0], fed), values, *quantities), tuple(margins), tuple(stable), tuple(notes))
+
+
+def _spelling(stand: Standpoint, error: str) -> str:
+    """The error's own name where the block was fed with a signal."""
+    graph = stand.circuit.graph
+    node = stand.quantity(error).expression
+    kind, name = graph.symbols.get(node, ("", ""))
+    return name if kind == "signal" else error
 
 
 def _plant(stand: Standpoint, signal: str, error: str) -> _Plant:
@@ -216,13 +227,69 @@ def _judge(plant: _Plant, shape: Shape, values: dict[str, float], law: Callable[
         return value
 
     margins = margins_of(gain, np.array([f / 1e3, f * 1e2]), poles)
-    zeros, integrators = unstable_count(poles), 0 if shape == "lead" else 1
-    origin, axis = on_axis_count(poles)
-    if axis:
-        return margins, False
-    corners = [v for name, v in values.items() if name.startswith("w")] or [values["ki"] / values["kp"]]
-    turns = winding(lambda g: 1.0 + gain(g), np.concatenate([poles[np.abs(poles) > 0], corners]), origin + integrators)
-    return margins, turns is not None and round(turns) + zeros == 0
+    closed = spectrum(_closed(plant.linear, shape, values)).values
+    # The circuit's own compensator still follows the error without driving anything: its integrators stay at the origin.
+    moving = closed[np.abs(closed) > RESTING_RELATIVE * 2.0 * math.pi * f]
+    return margins, unstable_count(moving) == 0
+
+
+def _closed(cut: LinearSystem, shape: Shape, values: dict[str, float]) -> LinearSystem:
+    """The cut system with input a = C(s) * error: states of C and a itself become unknowns."""
+    from scipy.sparse import bmat, csc_matrix, vstack
+
+    a_c, b_c, c_c, d_c = _realised(shape, values)
+    m, n = len(a_c), cut.n
+    like = replace(cut.unknowns[0], owner="")
+    extra = tuple(replace(like, name=f"compensator {j}") for j in range(m + 1))
+    error = cut.c.toarray()
+    direct = cut.d.toarray()
+    # compensator: xi' = a_c xi + b_c (c x + c_w w + d a);   0 = c_c xi + d_c (c x + c_w w + d a) - a
+    a = bmat(
+        [
+            [cut.a, csc_matrix((n, m)), cut.b],
+            [csc_matrix(b_c @ error), csc_matrix(a_c), csc_matrix(b_c @ direct)],
+            [csc_matrix(d_c @ error), csc_matrix(c_c), csc_matrix(d_c @ direct - 1.0)],
+        ],
+        format="csc",
+    )
+    e = bmat([[cut.e, csc_matrix((n, m)), cut.e_u], [None, csc_matrix(np.eye(m)), None], [None, None, csc_matrix((1, 1))]], format="csc")
+    late = cut.c_w.toarray()
+    return replace(
+        cut,
+        unknowns=(*cut.unknowns, *extra),
+        inputs=(),
+        input_dimensions=(),
+        outputs=(),
+        output_dimensions=(),
+        e=e,
+        e_w=vstack([cut.e_w, csc_matrix((m + 1, cut.e_w.shape[1]))], format="csc"),
+        e_u=csc_matrix((n + m + 1, 0)),
+        a=a,
+        a_w=vstack([cut.a_w, csc_matrix(b_c @ late), csc_matrix(d_c @ late)], format="csc"),
+        b=csc_matrix((n + m + 1, 0)),
+        c=csc_matrix((0, n + m + 1)),
+        c_w=csc_matrix((0, cut.c_w.shape[1])),
+        d=csc_matrix((0, 0)),
+        g=bmat([[cut.g, csc_matrix((cut.g.shape[0], m)), cut.g_u]], format="csc"),
+        g_u=csc_matrix((cut.g.shape[0], 0)),
+        values=(),
+    )
+
+
+def _realised(shape: Shape, values: dict[str, float]) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """C(s) as matrices of its own states."""
+    from scipy.signal import tf2ss
+
+    if shape == "pi":
+        return np.zeros((1, 1)), np.ones((1, 1)), np.array([[values["ki"]]]), np.array([[values["kp"]]])
+    zero, pole = [1.0 / values["wz"], 1.0], [1.0 / values["wp"], 1.0]
+    if shape == "lead":
+        num, den = np.multiply(values["k"], zero), np.array(pole)
+    elif shape == "one zero":
+        num, den = np.multiply(values["k"], zero), np.polymul(pole, [1.0, 0.0])
+    else:
+        num, den = np.multiply(values["k"], np.polymul(zero, zero)), np.polymul(np.polymul(pole, pole), [1.0, 0.0])
+    return tf2ss(num, den)  # type: ignore[no-any-return]
 
 
 def _text(shape: Shape, signal: str, error: str, values: dict[str, float], out: Dimension, fed: Dimension) -> str:
