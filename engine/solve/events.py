@@ -14,7 +14,7 @@ from __future__ import annotations
 
 from bisect import bisect_left, insort
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TypeAlias
 
 import numpy as np
@@ -40,6 +40,7 @@ from polewise.kernels.workspace import (
     Workspace,
 )
 from polewise.solve import diagnosis, kernel_calls
+from polewise.solve.initial import Snapshot
 from polewise.solve.problem import DaeProblem, Reader, reader
 
 BoolArray: TypeAlias = NDArray[np.bool_]
@@ -143,14 +144,41 @@ class Events:
 
     # ------------------------------------------------------------ one instant
 
-    def begin(self) -> bool:
-        """The instant 0. The workspace stands at a consistent point just before it. Returns whether anything was set."""
+    def begin(self, continues: Snapshot | None = None) -> bool:
+        """The instant of the start. The workspace stands at a consistent point just before it. Returns whether anything was set.
+
+        Args:
+            continues: the run that goes on here: what has happened in it does not happen again.
+        """
         self._settle_watched()
         truth = self._read_truth()
         # "rises above" at the start: what is true already does not become true.
         for k, conditional in enumerate(self.system.conditionals):
             self.state.truth[k] = truth[k] and conditional.crossing
+        if continues is not None:
+            self._go_on(continues)
         return self.instant()
+
+    def _go_on(self, continues: Snapshot) -> None:
+        state, t = self.state, continues.time_s
+        while state.next_timed < len(self.timed) and self.timed[state.next_timed].time_s <= t + merge_distance(t):
+            state.next_timed += 1
+        for k, conditional in enumerate(self.system.conditionals):
+            state.truth[k] = continues.truths.get(conditional.name, bool(state.truth[k]))
+            if conditional.name in continues.timers:
+                insort(state.timers, (continues.timers[conditional.name], k))
+
+    def noted(self, snapshot: Snapshot) -> Snapshot:
+        """A snapshot with what the events and clocks of this run must not forget."""
+        names = [c.name for c in self.system.conditionals]
+        ticks = self.work.clock_offset + self.work.clock_count * self.problem.program.clock_period
+        parameters = self.system.parameters
+        return replace(
+            snapshot,
+            next_ticks={parameters[j].name: float(t) for c, t in zip(self.system.clocks, ticks, strict=True) for j, _ in c.updates},
+            truths={name: bool(value) for name, value in zip(names, self.state.truth, strict=True)},
+            timers={names[k]: t for t, k in self.state.timers},
+        )
 
     def instant(self) -> bool:
         """All that is due at the workspace's time, in the language's order. Returns whether anything was set."""

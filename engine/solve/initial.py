@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Literal
 
 import numpy as np
@@ -46,22 +46,28 @@ class Snapshot:
         time_s: in the study it was taken from.
         unknowns, parameters: values, SI.
         delays: past of each delayed expression, by the name of its parameter, times against time_s.
+        next_ticks: of each clocked parameter, s of that study's time; a tick at time_s itself may be still to come.
+        truths, timers: conditions of events as last read, and until when (s) those that must stay true for a while have to, by name.
     """
 
     time_s: float
     unknowns: Mapping[str, float]
     parameters: Mapping[str, float]
     delays: Mapping[str, DelayPast]
+    next_ticks: Mapping[str, float] = field(default_factory=dict)
+    truths: Mapping[str, bool] = field(default_factory=dict)
+    timers: Mapping[str, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class StartState:
-    """A consistent point at time 0 of a study.
+    """A consistent point where a run begins.
 
     Args:
         x: shape (n,). p: shape (n_p,).
         past: of each delay line, in the system's order.
         kind: how it was found. warnings: what the search had to say.
+        time_s: of the study. continues: the run that goes on here, with its events and clocks; None at a study's start.
     """
 
     x: FloatArray
@@ -69,6 +75,8 @@ class StartState:
     past: tuple[DelayPast, ...]
     kind: Literal["cold", "settled", "from"]
     warnings: tuple[Diagnostic, ...] = ()
+    time_s: float = 0.0
+    continues: Snapshot | None = None
 
 
 def start_settled(problem: DaeProblem, *, guess: FloatArray | None = None, start_latches: Mapping[str, float] | None = None) -> StartState:
@@ -106,6 +114,20 @@ def start_from(problem: DaeProblem, snapshot: Snapshot, *, start_latches: Mappin
     state = _solved(problem, square, start, "from")
     past = tuple(snapshot.delays.get(system.parameters[d.parameter].name, own) for d, own in zip(system.delays, state.past, strict=True))
     return StartState(state.x, state.p, past, "from", state.warnings)
+
+
+def start_within(problem: DaeProblem, snapshot: Snapshot) -> StartState:
+    """Go on with the same study in the middle of it, perhaps in another picture of the poles: time, states, latches, clocks, events."""
+    system = problem.system
+    rows = [r for r in start_rows(system) if r.kind == "x" or system.parameters[r.index].name not in snapshot.parameters]
+    square = SquareSystem(system, rows)
+    square.at_time(snapshot.time_s)
+    for j, parameter in enumerate(system.parameters):
+        square.p[j] = snapshot.parameters.get(parameter.name, square.p[j])
+    start = np.array([snapshot.unknowns.get(u.name, u.initial) for u in system.unknowns])
+    state = _solved(problem, square, start, "from", snapshot.time_s)
+    past = tuple(snapshot.delays.get(system.parameters[d.parameter].name, own) for d, own in zip(system.delays, state.past, strict=True))
+    return StartState(state.x, state.p, past, "from", state.warnings, snapshot.time_s, snapshot)
 
 
 def rescue_restart(problem: DaeProblem, work: Workspace) -> bool:
@@ -155,11 +177,11 @@ def _set_latches(square: SquareSystem, start_latches: Mapping[str, float]) -> No
         square.p[index_of[name]] = value
 
 
-def _solved(problem: DaeProblem, square: SquareSystem, start: FloatArray, kind: Literal["cold", "from"]) -> StartState:
+def _solved(problem: DaeProblem, square: SquareSystem, start: FloatArray, kind: Literal["cold", "from"], time_s: float = 0.0) -> StartState:
     """States as in `start`, the rest from their laws."""
     system = problem.system
     states = [i for i, unknown in enumerate(system.unknowns) if unknown.is_state]
-    kept = reader(system, [kept_at_start(system, i) for i in states])(start, 0.0, square.p)
+    kept = reader(system, [kept_at_start(system, i) for i in states])(start, time_s, square.p)
     square.offset[states] = kept
     z = np.concatenate([start, square.p[square.solved_p]])
     outcome = solve_newton(square, z)

@@ -11,7 +11,7 @@ import numpy as np
 from polewise.errors import SolverError
 from polewise.grammar.diagnostics import Diagnostic
 from polewise.kernels.opcodes import Status
-from polewise.kernels.program import FloatArray
+from polewise.kernels.program import FloatArray, IntArray
 from polewise.kernels.workspace import (
     FLAG_AFTER,
     N_EVENTS,
@@ -106,7 +106,7 @@ def run(
     max_steps: int | None = None,
     record_rows: int = 4096,
 ) -> RunSummary:
-    """Integrate from `start` at time 0 to stop_s.
+    """Integrate from `start` at its time (0 but for a run that goes on) to stop_s.
 
     Args:
         start: consistent, see solve.initial.
@@ -165,20 +165,22 @@ class _Run:
         return self._summary(reason)
 
     def _begin(self) -> None:
-        """Put the start into the workspace, make it consistent, record it, and do all that is due at 0."""
+        """Put the start into the workspace, make it consistent, record it, and do all that is due there."""
         work, program = self.work, self.problem.program
         work.x[:] = self.start.x
         work.p[:] = self.start.p
-        work.state[S_H_MAX] = min(self.stop_s / STEPS_FEWEST, self.problem.step_largest_s)
+        work.state[S_H_MAX] = min((self.stop_s - self.start.time_s) / STEPS_FEWEST, self.problem.step_largest_s)
         work.clock_offset[:] = [c.offset_s for c in self.problem.system.clocks]
-        work.state[S_T] = 0.0
+        work.state[S_T] = self.start.time_s
+        work.clock_count[:] = _first_ticks(self.problem, self.start)
+        self.rebase.last_s = self.start.time_s
         if len(program.delay_p):
             _load_past(work, self.start)
         kernel_calls.run_residual_live(program, work)
         work.q_keep[:] = np.where(program.q_reg >= 0, work.reg[program.q_reg], 0.0)
         self.events.work = self._restart(work)
         kernel_calls.record_point(program, self.work, FLAG_AFTER)
-        self.events.begin()
+        self.events.begin(self.start.continues)
 
     def _loop(self) -> str:
         """Advance from instant to instant. Returns "" at the stop time, else why it ended before."""
@@ -285,8 +287,23 @@ class _Run:
             restarts=int(count[N_RESTARTS]),
             wall_s=clock.perf_counter() - self.began,
         )
-        snapshot = take_snapshot(self.problem, work) if reason != "failed" else None
+        snapshot = self.events.noted(take_snapshot(self.problem, work)) if reason != "failed" else None
         return RunSummary(reason == "", reason, float(work.state[S_T]), tuple(self.events.state.log), self.warnings, counters, snapshot)
+
+
+def _first_ticks(problem: DaeProblem, start: StartState) -> IntArray:
+    """Number of each clock's first firing at or after the start; a run that goes on does not fire again what has fired at that very instant."""
+    t, counts = start.time_s, np.zeros(len(problem.system.clocks), dtype=np.int64)
+    if start.continues is None and t == 0.0:
+        return counts
+    known = start.continues.next_ticks if start.continues is not None else {}
+    distance = merge_distance(t)
+    for k, ticking in enumerate(problem.system.clocks):
+        names = [problem.system.parameters[j].name for j, _ in ticking.updates]
+        fired = any(known.get(name, t) > t + distance for name in names)
+        least = t + distance if fired else t - distance
+        counts[k] = max(0, int(np.ceil((least - ticking.offset_s) / ticking.period_s)))
+    return counts
 
 
 def _load_past(work: Workspace, start: StartState) -> None:
@@ -302,10 +319,10 @@ def _load_past(work: Workspace, start: StartState) -> None:
             work.history_v[: len(pieces), d, :] = line.values
         elif len(line.start_s):
             work.delay_value0[d], work.delay_slope0[d] = float(line.values[-1, 3]), 0.0
-    work.state[S_HISTORY_T0] = past[0].reach_s if shared else 0.0
+    work.state[S_HISTORY_T0] = start.time_s + (past[0].reach_s if shared else 0.0)
     work.counter[N_HISTORY_FIRST] = 0
     work.counter[N_HISTORY_COUNT] = len(pieces) if shared else 0
     if shared:
-        work.history_t[: len(pieces)] = pieces
+        work.history_t[: len(pieces)] = start.time_s + pieces
         work.history_h[: len(pieces)] = past[0].size_s
     work.counter[N_REG_AT_START] = 0
