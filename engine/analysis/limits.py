@@ -18,7 +18,7 @@ from polewise.circuit.model import Law
 from polewise.errors import SolverError
 
 SCAN_POINTS = 25  # values looked at between the ends before a root is enclosed
-FOLD_BISECTIONS = 60
+FOLD_BISECTIONS = 34  # the end of operating points to 1e-10 of the range
 
 
 @dataclass(frozen=True, slots=True, eq=False)

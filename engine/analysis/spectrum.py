@@ -259,7 +259,7 @@ def refine(linear: LinearSystem, start: complex, vector: ComplexArray) -> comple
         try:
             step = np.linalg.solve(matrix, right)
         except np.linalg.LinAlgError:
-            return s
+            return s if _rank_loss(linear, s) else None
         v = v + step[:size]
         s += step[size]
         if abs(s - start) > 0.5 * abs(start) + 1.0:
@@ -277,7 +277,7 @@ def _multiplied(linear: LinearSystem, found: list[complex]) -> list[complex]:
             distinct.append(root)
     result: list[complex] = []
     for root in distinct:
-        times = max(1, min(_rank_loss(linear, root), sum(abs(root - f) <= 1e3 * SAME_ROOT_RELATIVE * max(abs(root), 1e-9) for f in found)))
+        times = min(_rank_loss(linear, root), sum(abs(root - f) <= 1e3 * SAME_ROOT_RELATIVE * max(abs(root), 1e-9) for f in found))
         result += [root] * times
         if root.imag != 0.0:
             result += [root.conjugate()] * times
