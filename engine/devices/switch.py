@@ -27,7 +27,7 @@ DIODE = register(
         settings=(
             SettingSpec("drop", units.VOLTAGE, "constant", 0.0, document="forward voltage at no current"),
             SettingSpec("resistance", units.RESISTANCE, "constant", 1e-3, document="slope resistance when it conducts"),
-            SettingSpec("reverse", units.RESISTANCE, "constant", 1e7, document="resistance when it blocks"),
+            SettingSpec("reverse", units.RESISTANCE, "constant", 1e6, document="resistance when it blocks"),
         ),
         slots=(BranchSlot("", "left", "right", "nonlinear"),),
         equations=_diode,

@@ -119,7 +119,9 @@ class _Assembler:
                 if self.sketch.mean:
                     self.sketch.mean_state(symbol, name, value, sampler.period_s, 0.0, dimension, sampler.owner, sampler.span, name == sampler.name)
                     continue
-                self.sketch.definitions[symbol] = self.sketch.parameter(name, "sampled", None, value, dimension, span=sampler.span)
+                # A filter's memory of earlier instants is empty at a cold start; what an instant reads there is read at time 0.
+                initial = 0.0 if name.startswith(f"{sampler.name.removesuffix('.memory')}.") else None
+                self.sketch.definitions[symbol] = self.sketch.parameter(name, "sampled", initial, value, dimension, span=sampler.span)
                 sketch.updates.append((name, value))
             if not self.sketch.mean:
                 self.sketch.clocks.append(sketch)

@@ -15,7 +15,7 @@ from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar.source import Span
 from polewise.grammar.units import NONE, Dimension
-from polewise.network.graph import ChokePath, Network, slot_form
+from polewise.network.graph import ChokePath, Network, below, cutset, slot_form
 
 
 @dataclass(slots=True)
@@ -64,6 +64,7 @@ class Definitions:
     equations: dict[str, DeviceEquations] = field(default_factory=dict)
     owner_of: dict[Node, tuple[str, Span]] = field(default_factory=dict)
     dimension_of: dict[Node, Dimension] = field(default_factory=dict)
+    depth: dict[str, int] = field(default_factory=dict)  # of nodes in the tree
 
     @property
     def graph(self) -> ExpressionGraph:
@@ -72,6 +73,9 @@ class Definitions:
 
     def define_all(self) -> None:
         """Fill in nodes, branches and devices."""
+        self.depth = dict.fromkeys(self.circuit.nodes, 0)
+        for name, step in self.network.steps.items():  # parents come first
+            self.depth[name] = self.depth[step.parent] + 1
         self._define_potentials()
         self._define_currents()
         for device in self.circuit.devices.values():
@@ -107,6 +111,38 @@ class Definitions:
             own = i if step.sign > 0 else g.negate(i)
             others = g.sum(k for k in leaving[node] if k != own)
             self.defined[i] = g.negate(others) if step.sign > 0 else others
+        for name in self.network.dependent_inductors:
+            self._define_by_cutset(name)
+
+    def _define_by_cutset(self, name: str) -> None:
+        """A dependent inductor's current from its cut-set, which holds inductors and given currents only: node by node the same sum would pass
+        through currents that cancel in the end but hang on this inductor's own voltage."""
+        g = self.graph
+        inside = below(self.network.steps, name)
+        branch = self.circuit.branches[name]
+        terms = []
+        for other in cutset(self.circuit, self.network.steps, self.network.tree, name):
+            i = g.symbol("i", other)
+            terms.append(i if self.circuit.branches[other].left in inside else g.negate(i))
+        total = g.sum(terms)
+        self.defined[g.symbol("i", name)] = g.negate(total) if branch.left in inside else total
+
+    def _voltage_along_tree(self, left: str, right: str) -> Node:
+        """potential(left) - potential(right) as the voltages on the tree's path between them: what both have in common does not appear."""
+        g, steps, depth = self.graph, self.network.steps, self.depth
+        terms = []
+        while left != right:
+            if depth[left] >= depth[right]:
+                step = steps[left]
+                v = g.symbol("v", step.branch)
+                terms.append(v if step.sign > 0 else g.negate(v))
+                left = step.parent
+            else:
+                step = steps[right]
+                v = g.symbol("v", step.branch)
+                terms.append(g.negate(v) if step.sign > 0 else v)
+                right = step.parent
+        return g.sum(terms)
 
     # ------------------------------------------------------------ branches
 
@@ -118,8 +154,7 @@ class Definitions:
         form = self.network.forms[name]
         in_tree = name in self.network.tree
         if not in_tree:
-            left, right = g.symbol("potential", branch.left), g.symbol("potential", branch.right)
-            self.defined[v] = g.subtract(left, right)
+            self.defined[v] = self._voltage_along_tree(branch.left, branch.right)
         law = self._law(branch)
         if form == "charge":
             self._charge(branch, law, v, i, in_tree)

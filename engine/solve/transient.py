@@ -17,6 +17,7 @@ from polewise.kernels.workspace import (
     N_EVENTS,
     N_FACTORISATIONS,
     N_JACOBIANS,
+    N_LOCATED,
     N_MADE_JUMP,
     N_NEEDS_RESTART,
     N_NEWTON_FAILED,
@@ -28,6 +29,7 @@ from polewise.kernels.workspace import (
     N_SOLVES,
     N_STEPS,
     N_TICKS,
+    S_BAND,
     S_H_MAX,
     S_T,
     Workspace,
@@ -45,6 +47,8 @@ STEPS_FEWEST = 50  # of a run: what only outputs show is drawn with at least so 
 CALL_AIM_S = 0.1  # wall time of a call: how often progress is told and a stop is heeded
 STEPS_LARGEST_CALL = 1_000_000
 GROWN_MOST = 40  # times that buffers may double
+BAND_WIDENING = 100.0  # how much wider the band of values that count as zero becomes where switches flip to and fro
+BAND_WIDEST = 1e6  # times the band of the program: a millionth of what a switch compares
 ROWS_KEPT_FREE = 64  # of the record buffer, before events write to it
 
 
@@ -228,6 +232,11 @@ class _Run:
             self.work = self.events.work
         elif status in (Status.NO_CONVERGENCE, Status.NOT_FINITE) and work.counter[N_NEEDS_RESTART] == 1:
             self._restart(work)
+        elif status == Status.CHATTER and work.state[S_BAND] < BAND_WIDEST:
+            # Flips without end are often rounding: a voltage that only leakage holds is known to few digits. Let more of it count as zero.
+            work.state[S_BAND] *= BAND_WIDENING
+            work.counter[N_LOCATED] = 0
+            self._restart(work)
         elif status != Status.DONE:
             raise explain_failure(self.problem, work, status)
 
@@ -243,8 +252,10 @@ class _Run:
         while True:
             guess = self.work.x.copy()
             status = kernel_calls.restart(self.problem.program, self.work)
-            if status in (Status.NO_CONVERGENCE, Status.NOT_FINITE) and not rescued:
+            if status in (Status.NO_CONVERGENCE, Status.NOT_FINITE, Status.CHATTER) and not rescued:
                 rescued = True
+                if status == Status.CHATTER:
+                    self.work.state[S_BAND] = max(self.work.state[S_BAND], BAND_WIDEST)
                 self.work.x[:] = guess
                 if rescue_restart(self.problem, self.work):
                     kernel_calls.run_residual_live(self.problem.program, self.work)

@@ -5,8 +5,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 PHASES = {"a": 0.0, "b": -2 * math.pi / 3, "c": 2 * math.pi / 3}
 
@@ -56,21 +57,26 @@ def test_three_phase_choke_switched_on() -> None:
     np.testing.assert_allclose(result["coil_a.i"], wanted, rtol=0, atol=2e-6)
 
 
-def test_six_pulse_diode_bridge_with_overlap() -> None:
+@pytest.mark.parametrize("slope_ohm", [1e-4, 1e-3])
+@pytest.mark.parametrize("bleed", ["", "bleed: minus --[r: 10 Mohm]-- star"], ids=["chokes meet alone", "with a bleeder"])
+def test_six_pulse_diode_bridge_with_overlap(slope_ohm: float, bleed: str) -> None:
     # 400 V line to line, 50 Hz, 1 mH in each phase, 50 A smooth: mean 540.189790 - 3 w L I/pi = 525.189790 V, overlap u 19.184734 deg
-    # (Kassakian, Schlecht & Verghese, Principles of Power Electronics, 1991, ch. 5; IEC 60146-1-1). The diodes' slope of 1 uohm takes 0.1 mV.
+    # (Kassakian, Schlecht & Verghese, Principles of Power Electronics, 1991, ch. 5; IEC 60146-1-1).
+    # Diodes of slope r take 2 r I outside the overlaps and 1.5 r I in them, and as the incoming current there averages about I/3, a
+    # commutation loses r I u/3 less: 2 r I (1 - 3 u/(4 pi)) - r I u/(2 pi) in all, to second order.
     peak = 400 * math.sqrt(2 / 3)
     lines = "\n".join(
         f"mains_{k}: m{k} --[{peak!r} V * cos(2*pi * 50 Hz * time + {shift!r})]-- star\n"
         f"coil_{k}: m{k} --[l: 1 mH]-- {k}\n"
-        f"up_{k}: {k} --[d: diode(0 V, 1 uohm)]-- plus\n"
-        f"down_{k}: minus --[d: diode(0 V, 1 uohm)]-- {k}"
+        f"up_{k}: {k} --[d: diode(0 V, {slope_ohm!r} ohm, reverse = 100 Mohm)]-- plus\n"
+        f"down_{k}: minus --[d: diode(0 V, {slope_ohm!r} ohm, reverse = 100 Mohm)]-- {k}"
         for k, shift in PHASES.items()
     )
     result = polewise.from_text(
         f"""
         reference star
         {lines}
+        {bleed}
         load: plus --[amps]-- minus
         table rise(t in s) in A = (0 s, 0 A) (50 ms, 50 A) hold
         signal amps = rise(time)
@@ -84,14 +90,16 @@ def test_six_pulse_diode_bridge_with_overlap() -> None:
         }}
         """
     ).run("steady", tolerance=1e-8)
-    assert result.verdict["mean"].value == pytest.approx(525.189790, abs=3e-4)
+    u = math.radians(19.184734)
+    drop = 2 * slope_ohm * 50 * (1 - 3 * u / (4 * math.pi)) - slope_ohm * 50 * u / (2 * math.pi)
+    assert result.verdict["mean"].value == pytest.approx(525.189790 - drop, abs=5e-4)
     # line current of the same case, from the closed-form overlap waveform: 39.943934 A rms, fundamental 38.863355 A at -12.768465 deg
     assert result.verdict["size"].value == pytest.approx(39.943934, rel=2e-5)
     t = np.linspace(100e-3, 120e-3, 20001)
     i = result.at("coil_a.i", t)
     fundamental = 2 * np.trapezoid(i * np.exp(-2j * math.pi * 50 * t), t) / 20e-3 / math.sqrt(2)
     assert abs(fundamental) == pytest.approx(38.863355, rel=5e-5)
-    assert math.degrees(np.angle(fundamental)) == pytest.approx(-12.768465, abs=5e-3)
+    assert math.degrees(np.angle(fundamental)) == pytest.approx(-12.768465, abs=1e-2)
 
 
 def test_bus_ripple_at_twice_line_frequency() -> None:
