@@ -81,6 +81,8 @@ def networks(draw: st.DrawFn, *, stores: bool = True) -> RandomNetwork:
         if size >= 3 and draw(st.booleans()):
             ends = draw(st.permutations(range(size + 1)))[:3]
             stars.append((tuple(ends), tuple(draw(INDUCTANCE) for _ in range(3))))
+    touched = [end for e in elements for end in (e.a, e.b)] + [end for ends, _ in stars for end in ends]
+    elements += [Element("R", k, 0, 50.0) for k in range(1, size + 1) if touched.count(k) < 2]  # a node touched once is an error
     return RandomNetwork(size, tuple(elements), tuple(stars))
 
 

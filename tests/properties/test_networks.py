@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
-import polewise
 from hypothesis import HealthCheck, assume, given, settings
+
+import polewise
 
 from .networks import RandomNetwork, branches, dense, netlist, networks
 

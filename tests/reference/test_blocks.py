@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 
 def run(text: str, study: str = "run_in", **how) -> polewise.Result:
@@ -74,7 +75,8 @@ def test_averages_obey_linear_laws_and_products_do_not() -> None:
 
 
 def test_delayed_sine_keeps_its_shape() -> None:
-    # Phase -360 deg f tau (e.g. Buso & Mattavelli 2006): 1.5 periods of 10 kHz turn 500 Hz by 27 deg; before the start the signal is at its start value.
+    # Phase -360 deg f tau (e.g. Buso & Mattavelli 2006): 1.5 periods of 10 kHz turn 500 Hz by 27 deg;
+    # before the start the signal is at its start value.
     result = run(
         """
         reference gnd

@@ -5,8 +5,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 from .by_hand import integrate, relative_error
 

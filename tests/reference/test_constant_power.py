@@ -9,8 +9,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 # 270 V, 50 mohm, 50 uH, 200 uF: P kW → eigenvalue of the upper half plane, 1/s; P* = 14.2927164004 kW.
 EIGENVALUES = [(5.0, -327.346008 + 9977.351182j), (10.0, -152.278037 + 9964.003587j), (20.0, 205.358965 + 9927.089693j)]
@@ -50,7 +51,10 @@ def test_eigenvalues_seen_in_a_small_disturbance(kw: float, eigenvalue: complex)
 
 
 # Vs, r, L, C, P*, V at P*, frequency: both rows published with these digits.
-LIMITS = [(100.0, 0.1, 100e-6, 500e-6, 4535.14739229, 95.2380952381, 693.740313), (270.0, 0.05, 50e-6, 200e-6, 14292.7164004, 267.326732673, 1583.571689)]
+LIMITS = [
+    (100.0, 0.1, 100e-6, 500e-6, 4535.14739229, 95.2380952381, 693.740313),
+    (270.0, 0.05, 50e-6, 200e-6, 14292.7164004, 267.326732673, 1583.571689),
+]
 
 
 @pytest.mark.parametrize(("vs", "r", "l", "c", "limit", "v_limit", "f"), LIMITS)

@@ -9,8 +9,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 from .converters import Stage, settle, step_up
 from .switched import Part, continuous, discontinuous

@@ -7,8 +7,9 @@ from __future__ import annotations
 
 import math
 
-import polewise
 import pytest
+
+import polewise
 
 from .converters import Stage, efficiency, settle, step_down, step_up
 
@@ -67,7 +68,9 @@ def test_step_up_with_choke_resistance(share: float, d: float, ratio: float, eta
     assert efficiency(point) == pytest.approx(1 / (1 + share / off**2), rel=1e-9)
 
 
-@pytest.mark.parametrize(("share", "highest", "at"), [(0.01, 5.0, 0.9), (0.02, 3.535534, 0.858579), (0.05, 2.236068, 0.776393), (0.1, 1.581139, 0.683772)])
+@pytest.mark.parametrize(
+    ("share", "highest", "at"), [(0.01, 5.0, 0.9), (0.02, 3.535534, 0.858579), (0.05, 2.236068, 0.776393), (0.1, 1.581139, 0.683772)]
+)
 def test_step_up_has_a_highest_ratio(share: float, highest: float, at: float) -> None:
     # EM 3.2: the largest M is 1/(2 sqrt(R_L/R)), at D' = sqrt(R_L/R).
     best = 1 - math.sqrt(share)

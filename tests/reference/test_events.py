@@ -5,9 +5,10 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
 from scipy.optimize import brentq
+
+import polewise
 
 
 def run(text: str, study: str = "go", **how) -> polewise.Result:

@@ -9,8 +9,9 @@ from __future__ import annotations
 from pathlib import Path
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 
 CIRCUITS = Path(__file__).parent / "circuits"
 

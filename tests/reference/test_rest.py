@@ -5,8 +5,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-import polewise
 import pytest
+
+import polewise
 from polewise.errors import DependsOnTime, IntegratorCannotRest, IntegratorsFight, PowerLimit
 
 

@@ -7,9 +7,10 @@ never taken from the package. Compared at the ends of the solver's own steps.
 from __future__ import annotations
 
 import numpy as np
-import polewise
 import pytest
 from scipy.optimize import brentq
+
+import polewise
 
 from .by_hand import integrate, relative_error
 
@@ -292,3 +293,39 @@ def test_saturating_choke_and_voltage_dependent_capacitor() -> None:
     assert np.max(np.abs(i)) > 6.0  # deep in saturation
     assert relative_error(result["choke.i"], i) < ERROR_MAX
     assert relative_error(result["b.v"], v) < ERROR_MAX
+
+
+def test_straight_line_flux_table_by_pieces() -> None:
+    # Flux (0, 0) (2 A, 1 mWb) (10 A, 1.5 mWb), straight and extended: 0.5 mH up to 2 A, 62.5 uH above. 12 V, 1 ohm: i = 12 (1 - e^(-t/0.5 ms)) to
+    # 2 A at t1 = 0.5 ms ln(12/10), then 12 - 10 e^(-(t - t1)/62.5 us). The source turns at 1 ms: down through 2 A with 62.5 us, on with 0.5 ms,
+    # through -2 A (odd) with 62.5 us again.
+    result = polewise.from_text(
+        """
+        reference gnd
+        table flux(i) = (0 A, 0 Wb) (2 A, 1 mWb) (10 A, 1.5 mWb) odd extend
+        supply: a --[volts]-- gnd
+        choke: a --[r: 1 ohm]--[core: v = d/dt flux(i)]-- gnd
+        latch volts = 12 V
+        study go {
+            start cold
+            run for 2 ms
+            at 1 ms: set volts = -12 V
+            keep choke.i
+        }
+        """
+    ).run("go", tolerance=TOLERANCE)
+    slow, fast = 0.5e-3, 62.5e-6
+    t1 = slow * np.log(12 / 10)
+    top = 12 - 10 * np.exp(-(1e-3 - t1) / fast)
+    t2 = 1e-3 + fast * np.log((12 + top) / 14)  # down to 2 A
+    t3 = t2 + slow * np.log(14 / 10)  # to -2 A
+    pieces = [
+        (0.0, t1, lambda t: 12 - 12 * np.exp(-t / slow)),
+        (t1, 1e-3, lambda t: 12 - 10 * np.exp(-(t - t1) / fast)),
+        (1e-3, t2, lambda t: -12 + (12 + top) * np.exp(-(t - 1e-3) / fast)),
+        (t2, t3, lambda t: -12 + 14 * np.exp(-(t - t2) / slow)),
+        (t3, 2e-3, lambda t: -12 + 10 * np.exp(-(t - t3) / fast)),
+    ]
+    t = result.time
+    wanted = np.piecewise(t, [(t >= low) & (t <= high) for low, high, _ in pieces], [f for _, _, f in pieces])
+    assert relative_error(result["choke.i"], wanted) < ERROR_MAX
