@@ -41,8 +41,8 @@ class Prepared:
         return transient.run(self.problem, start=self.start, stop_s=self.plan.length_s, tolerance=tolerance, sink=sink).counters
 
 
-def prepare(text: str, study: str) -> Prepared:
-    """Read, check, assemble, compile and settle, each timed."""
+def prepare(text: str, study: str, *, settle: bool = True) -> Prepared:
+    """Read, check, assemble, compile and settle, each timed; without `settle` there is no start."""
     from polewise.circuit.expand import expand
     from polewise.circuit.load import load_text
     from polewise.equations.assemble import assemble
@@ -67,6 +67,8 @@ def prepare(text: str, study: str) -> Prepared:
     clock.lap("assemble")
     problem = build_problem(equations)
     clock.lap("compile")
+    if not settle:
+        return Prepared(system, plan, problem, None, clock.seconds)
     if plan.study.start == "settled":
         start = initial.settled_at(problem, find_operating_point(equations))
     else:
