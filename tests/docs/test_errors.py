@@ -23,21 +23,26 @@ from .blocks import DOCS, ROOT, blocks_of
 
 PAGES = sorted((DOCS / "errors").glob("*.md"))
 FOLDERS = ("grammar", "engine")
-WORDING = ("messages.py", "diagnosis.py", "failures.py", "api.py")
 UPDATE = os.environ.get("POLEWISE_UPDATE") == "1"
 _CODE = re.compile(r"[a-z0-9]+(-[a-z0-9]+)*")
 
 
 def _codes() -> set[str]:
-    """Codes of every diagnostic: first argument of `Diagnostic(…)` and of the helpers that make one, in the files that word messages."""
+    """Codes of every diagnostic: first argument of `Diagnostic(…)` and of the helpers that make one."""
     found: set[str] = set()
-    for file in sorted(f for folder in FOLDERS for name in WORDING for f in (ROOT / folder).rglob(name)):
+    for file in sorted(f for folder in FOLDERS for f in (ROOT / folder).rglob("*.py")):
         tree = ast.parse(file.read_text(encoding="utf-8"))
-        makers = {"Diagnostic"} | {
-            function.name
-            for function in tree.body
-            if isinstance(function, ast.FunctionDef) and function.args.args and function.args.args[0].arg == "code"
-        }
+        borrowed = [node for node in tree.body if isinstance(node, ast.ImportFrom) and (node.module or "").endswith(".message_form")]
+        shared = {"error", "warning"} if borrowed else set()
+        makers = (
+            {"Diagnostic"}
+            | shared
+            | {
+                function.name
+                for function in tree.body
+                if isinstance(function, ast.FunctionDef) and function.args.args and function.args.args[0].arg == "code"
+            }
+        )
         for node in ast.walk(tree):
             if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id in makers and node.args:
                 for value in ast.walk(node.args[0]):

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 Array = NDArray[np.float64]
 
 CLOSED = 1e-4  # a closed breaker, ohm
-LEAK = 1e7  # a blocking diode, ohm
+LEAK = 1e6  # a blocking diode, ohm
 
 
 @dataclass(frozen=True)
