@@ -332,7 +332,7 @@ def _build(stamp: int):
                     return HISTORY_FULL
                 if pop_breaks_c(F, W) > 0 and load_delayed_c(F, W, WHOLE(1)) > DELAY_JUMP:
                     W[N_NEEDS_RESTART] = 1
-                    jump_level = BREAK_LEVEL_TICK + 1
+                    jump_level = WHOLE(BREAK_LEVEL_TICK)  # a jump is followed on for as long as it is one
                     continue
             tick = next_tick_c(F, W)
             if tick <= t + merge_distance_c(t):

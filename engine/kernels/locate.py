@@ -199,7 +199,7 @@ def _build(stamp: int):
                 value = F[reg + lanes * W[switch_reg + s]]
                 beyond = violation_c(F, W, s, value)
                 if beyond / F[switch_now + s] >= nearest or beyond >= -band * F[switch_scale + s]:
-                    status = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(0)))
+                    status = set_mode_c(F, W, s, next_mode_c(F, W, s, value))
                     if W[N_LOCATED] > W[N_CHATTER_LIMIT]:
                         W[N_WORST_SWITCH] = s
                         return CHATTER

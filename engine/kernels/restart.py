@@ -45,8 +45,8 @@ from polewise.kernels.lu import LU_DONE, LU_FULL, lu_factor_c, lu_solve_c
 from polewise.kernels.opcodes import SWITCH_POSITIVE, Status
 from polewise.kernels.program import Program
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.switches import next_mode_c, set_mode_c, violation_c
-from polewise.kernels.tape import WHOLE, U, residual_at_c, segment_c
+from polewise.kernels.switches import set_mode_c, violation_c
+from polewise.kernels.tape import WHOLE, U, live_mode_c, residual_at_c, segment_c
 from polewise.kernels.workspace import (
     N_FULL_FACTORS,
     N_JACOBIANS,
@@ -77,39 +77,49 @@ ITERATION_LIMIT = 60  # Newton iterations per round
 DAMPING_MIN = 1e-4  # smallest damping factor
 TOLERANCE_MAX = 1e-10  # of the last correction against |x| + scale; at most this, at best
 TOLERANCE_MIN = 1e-14
-STALLED = 1e-7  # a correction this small that no longer shrinks is rounding (a node that only leakage holds is known to no more digits)
+STALLED = 1e-9  # a correction this small that no longer shrinks is rounding
 RATE_REUSE = 0.1  # factors serve on while each correction is at most this part of the one before
 
 
 def _build(stamp: int):
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def mismatch(F, W, K):
-        """RESIDUAL at x; dx = dx_try = kept charges minus charges, or minus f."""
+        """RESIDUAL at x; dx = dx_try = kept charges minus charges, or minus f. Returns whether all are finite."""
         _ = stamp
         residual_at_c(F, W, K, W[AT_X], WHOLE(0))
         reg, f_reg, q_reg, q_keep, dx, dx_try = W[AT_REG], W[AT_F_REG], W[AT_Q_REG], W[AT_Q_KEEP], W[AT_DX], W[AT_DX_TRY]
+        total = 0.0
         for i in range(W[SIZE_N]):
             value = F[q_keep + i] - F[reg + W[q_reg + i]] if W[q_reg + i] >= 0 else -F[reg + W[f_reg + i]]
             F[dx + i] = value
             F[dx_try + i] = value
+            total += value
+        return np.isfinite(total)
+
+    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    def size(F, W, v):
+        """Largest entry of F[v:] against |x_try| + scale, inf if one is not finite."""
+        _ = stamp
+        x_try, scale = W[AT_X_TRY], W[AT_SCALE]
+        norm = 0.0
+        for i in range(W[SIZE_N]):
+            part = abs(F[v + i]) / (abs(F[x_try + i]) + F[scale + i])
+            if not (part <= norm):
+                norm = part
+                W[N_WORST] = i
+                if not np.isfinite(part):
+                    return np.inf
+        return norm
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def correction(F, W):
-        """dx_try becomes the Newton correction it is the right side of. Returns its largest entry against |x| + scale."""
+        """dx_try becomes the Newton correction it is the right side of. Returns its size."""
         _ = stamp
-        n, dx_try, scale, x, row_scale = W[SIZE_N], W[AT_DX_TRY], W[AT_SCALE], W[AT_X], W[AT_RESTART_SCALE]
-        for i in range(n):
+        dx_try, row_scale = W[AT_DX_TRY], W[AT_RESTART_SCALE]
+        for i in range(W[SIZE_N]):
             F[dx_try + i] *= F[row_scale + i]
         lu_solve_c(W, F, WHOLE(RESTART), dx_try)
-        norm = 0.0
-        for i in range(n):
-            size = abs(F[dx_try + i]) / (abs(F[x + i]) + F[scale + i])
-            if not (size <= norm):
-                norm = size
-                W[N_WORST] = i
-                if not np.isfinite(size):
-                    return np.inf
-        return norm
+        return size_c(F, W, dx_try)
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
     def restart_factorise(F, W, K):
@@ -149,7 +159,10 @@ def _build(stamp: int):
         fresh = False  # the factors were made at the point the present step starts from
         trying = False  # x is the end of a step of size `damping` from x_try, to be judged
         base, damping = np.inf, 1.0
-        mismatch_c(F, W, K)
+        for i in range(n):
+            F[x_try + i] = F[x + i]
+        if not mismatch_c(F, W, K):
+            return NOT_FINITE
         for _iteration in range(ITERATION_LIMIT):
             if need:
                 status = restart_factorise_c(F, W, K)
@@ -190,10 +203,10 @@ def _build(stamp: int):
                         return NOT_FINITE
                     need = True
                     continue
-                base, damping, trying = norm, 1.0, True
                 for i in range(n):
                     F[x_try + i] = F[x + i]
                     F[direction + i] = F[dx_try + i]
+                base, damping, trying = size_c(F, W, direction), 1.0, True
             for i in range(n):
                 F[x + i] = F[x_try + i] + damping * F[direction + i]
             mismatch_c(F, W, K)
@@ -237,7 +250,7 @@ def _build(stamp: int):
                     beyond = violation_c(F, W, s, value)
                 if beyond > F[U(switch_scale + s)] * F[S_BAND]:
                     flips += 1
-                    trouble = set_mode_c(F, W, s, next_mode_c(F, W, s, value, WHOLE(1)))
+                    trouble = set_mode_c(F, W, s, live_mode_c(F, W, s, value))
                     if trouble != DONE:
                         return trouble
                     W[N_WORST_SWITCH] = s
@@ -249,10 +262,10 @@ def _build(stamp: int):
                 return status
         return CHATTER
 
-    return mismatch, correction, restart_factorise, solve_frozen, start_from_registers, restart
+    return mismatch, size, correction, restart_factorise, solve_frozen, start_from_registers, restart
 
 
-(mismatch_c, correction_c, restart_factorise_c, solve_frozen_c, start_from_registers_c, restart_c) = _build(STAMP)
+(mismatch_c, size_c, correction_c, restart_factorise_c, solve_frozen_c, start_from_registers_c, restart_c) = _build(STAMP)
 
 
 def restart(program: Program, work: Workspace) -> int:

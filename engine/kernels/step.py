@@ -295,13 +295,14 @@ def _build(stamp: int):
             F[S_NEWTON_ITERATIONS] = iteration
             if norm == np.inf:
                 return NOT_FINITE
-            if norm <= round_off:
-                return DONE
             if iteration > 1:
                 rate = norm / norm_old
                 theta = rate if iteration == 2 else np.sqrt(rate * rate_old)
                 rate_old = rate
                 F[S_THETA] = theta
+                if norm <= round_off:
+                    F[S_ETA] = min(theta, 0.1)
+                    return DONE
                 if rate >= DIVERGED and max(norm, norm_old) <= STALLED:
                     return DONE
                 if theta >= DIVERGED:

@@ -20,7 +20,6 @@ from polewise.kernels.layout import (
 )
 from polewise.kernels.opcodes import SWITCH_FLOOR, SWITCH_POSITIVE, SWITCH_TABLE, Status
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.tape import FLOOR_LIMIT, table_segment_c
 from polewise.kernels.workspace import (
     N_EVENTS,
     N_FACTORS_READY,
@@ -55,21 +54,17 @@ def _build(stamp: int):
         return beyond
 
     @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
-    def next_mode(F, W, s, value, live):
-        """The mode on the other side of the boundary that the value is at or just beyond; live 1: the mode the value belongs to, wherever it is."""
+    def next_mode(F, W, s, value):
+        """The mode on the other side of the boundary that the value is at or just beyond."""
         _ = stamp
         kind, m = W[W[AT_SWITCH_KIND] + s], W[W[AT_MODE] + s]
         if kind == SWITCH_POSITIVE:
             return 1 - m
         if kind == SWITCH_FLOOR:
-            if live == 1:
-                return np.int64(np.floor(value)) if abs(value) < FLOOR_LIMIT else np.int64(0)
             return m + 1 if value - m > 0.5 else m - 1
         table = W[W[AT_SWITCH_TABLE] + s]
         first, last = W[W[AT_TABLE_PTR] + table], W[W[AT_TABLE_PTR] + table + 1]
         knots = W[AT_TABLE_KNOTS] + first
-        if live == 1:
-            return table_segment_c(F, knots, knots + last - first, value)
         below = F[knots + m - 1] - value if m > 0 else -np.inf
         above = value - F[knots + m] if m < last - first else -np.inf
         return m + 1 if above > below else m - 1

@@ -23,6 +23,7 @@ from polewise.kernels.layout import (
     AT_REG3,
     AT_SEGMENT_END,
     AT_SWITCH_KIND,
+    AT_SWITCH_REG,
     AT_SWITCH_TABLE,
     AT_TABLE_CLOSED,
     AT_TABLE_COEF,
@@ -58,6 +59,8 @@ from polewise.kernels.opcodes import (
     SINH,
     SQRT,
     SUB,
+    SWITCH_FLOOR,
+    SWITCH_POSITIVE,
     SWITCH_TABLE,
     TABLE,
     TABLE_SLOPE,
@@ -213,6 +216,18 @@ def _build(stamp: int):
         for j in range(W[SIZE_P]):
             F[at + j] = F[p + j]
 
+    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    def live_mode(F, W, s, value):
+        """The mode of switch s that belongs to a watched value."""
+        _ = stamp
+        kind = W[W[AT_SWITCH_KIND] + s]
+        if kind == SWITCH_POSITIVE:
+            return WHOLE(1 if value > 0.0 else 0)
+        if kind == SWITCH_FLOOR:
+            return np.int64(np.floor(value)) if abs(value) < FLOOR_LIMIT else WHOLE(0)
+        table = W[AT_TABLE_PTR] + W[W[AT_SWITCH_TABLE] + s]
+        return table_segment_c(F, W[AT_TABLE_KNOTS] + W[table], W[AT_TABLE_KNOTS] + W[table + 1], value)
+
     @njit(cache=True, nogil=True, error_model="numpy")
     def residual_at(F, W, K, at_x, live):
         """RESIDUAL at (F[at_x:], state[S_T], p) → reg; modes frozen, or live (1): following their values, which sets them."""
@@ -220,6 +235,9 @@ def _build(stamp: int):
         load_point_c(F, W, at_x, F[S_T])
         run_one_c(F, W, K, W[AT_REG], WHOLE(0), W[W[AT_SEGMENT_END]], live)
         W[N_RESIDUALS] += 1
+        if live == 1:  # also of switches that only later segments use
+            for s in range(W[SIZE_S]):
+                W[W[AT_MODE] + s] = live_mode_c(F, W, s, F[W[AT_REG] + W[W[AT_SWITCH_REG] + s]])
 
     @njit(cache=True, nogil=True, error_model="numpy")
     def segment(F, W, K, k):
@@ -246,10 +264,10 @@ def _build(stamp: int):
             F[jac_q + e] = F[reg + W[jq_reg + e]]
         W[N_JACOBIANS] += 1
 
-    return load_point, residual_at, segment, segment_three, jacobian
+    return load_point, live_mode, residual_at, segment, segment_three, jacobian
 
 
-(load_point_c, residual_at_c, segment_c, segment_three_c, jacobian_c) = _build(STAMP)
+(load_point_c, live_mode_c, residual_at_c, segment_c, segment_three_c, jacobian_c) = _build(STAMP)
 
 
 def run_residual(program: Program, work: Workspace) -> None:

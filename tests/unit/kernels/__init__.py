@@ -1,0 +1,1 @@
+"""Tests of the compiled kernels against slow twins and closed forms."""
