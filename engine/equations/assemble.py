@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from polewise.circuit.model import Assignment, Circuit, Quantity, StudyDef
+from polewise.circuit.model import Assignment, Circuit, Law, Quantity, StateDef, StudyDef
 from polewise.equations import messages
 from polewise.equations.definitions import Definitions, RowSketch
 from polewise.equations.derived import DerivedRates
@@ -15,6 +15,7 @@ from polewise.equations.sketch import ClockSketch, DelaySketch, SystemSketch
 from polewise.equations.system import Clock, Conditional, DelayLine, EquationSystem, Flag, Output, Parameter, Target, Timed, Unknown
 from polewise.errors import NetlistError
 from polewise.expression.collection import no_collection
+from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 from polewise.grammar.source import Span, no_span
@@ -146,14 +147,28 @@ class _Assembler:
                 rate = g.mux(outward, zero, rate)
             if state.held:
                 rest = g.subtract(x, g.constant(initial))
-            self.sketch.rows.append(
-                RowSketch(state.name, x, x, g.negate(rate), state.dimension, state.owner, state.span, initial, True, state.held, bounds, rest)
-            )
+            row = RowSketch(state.name, x, x, g.negate(rate), state.dimension, state.owner, state.span, initial, True, state.held, bounds, rest)
+            row.integrator = not self._reads_itself(state)
+            self.sketch.rows.append(row)
         for unknown in self.circuit.unknowns.values():
             x = g.symbol("x", unknown.name)
             self.sketch.definitions[g.symbol("unknown", unknown.name)] = x
             initial = (g.value_of(unknown.initial) or 0.0) if unknown.initial is not None else 0.0
             self.sketch.rows.append(RowSketch(unknown.name, x, None, unknown.residual, unknown.dimension, unknown.owner, unknown.span, initial))
+
+    def _reads_itself(self, state: StateDef) -> bool:
+        """Whether a state's rate reads the state in its own text or signals: a lag. One that is only fed back through the circuit integrates."""
+        g = self.graph
+        own, seen, stack = g.symbol("state", state.name), set[Node](), [state.rate]
+        while stack:
+            for symbol in g.symbols_under([stack.pop()]):
+                if symbol == own:
+                    return True
+                kind, name = g.symbols[symbol]
+                if kind == "signal" and symbol not in seen:
+                    seen.add(symbol)
+                    stack.append(self.circuit.signals[name].expression)
+        return False
 
     def _averages_and_delays(self, definitions: Definitions) -> None:
         g = self.graph
@@ -251,7 +266,25 @@ class _Assembler:
             source_scale=index_of_parameter["source_scale"],
             notes=(),
             resolver=look,
+            moving=self._moving(look),
         )
+
+    def _moving(self, look: _Look) -> tuple[tuple[str, Span], ...]:
+        """Boxes whose value follows `time` by itself, directly or through signals; a step in time is none."""
+        g = self.graph
+        time = g.symbol("time", "")
+        differentiator = Differentiator(g, [time])
+        found = []
+        for branch in self.circuit.branches.values():
+            if branch.expression is None or branch.law not in (Law.VOLTAGE, Law.CURRENT, Law.RESISTANCE, Law.CONDUCTANCE):
+                continue
+            symbols = g.symbols_under([branch.expression])
+            signals = [s for s in symbols if g.symbols[s][0] == "signal"]
+            if time in symbols or (signals and time in g.symbols_under(look.resolve(signals))):
+                expression = look.one(branch.expression)
+                if differentiator.gradients([expression])[0]:
+                    found.append((branch.name, branch.span))
+        return tuple(found)
 
     def _guarded(self, reduction: Reduction, definitions: Definitions, asked: Sequence[Node]) -> None:
         try:
@@ -266,7 +299,9 @@ class _Assembler:
         residual = row.residual
         rest = residual if row.rest is None else look.one(row.rest)
         bounds = None if row.bounds is None else (look.one(row.bounds[0]), look.one(row.bounds[1]))
-        integrator = row.charge is not None and row.symbol not in self.graph.symbols_under([residual])
+        integrator = row.integrator
+        if integrator is None:
+            integrator = row.charge is not None and row.symbol not in self.graph.symbols_under([residual])
         return Unknown(
             name=row.name,
             symbol=row.symbol,

@@ -34,6 +34,7 @@ class RowSketch:
     held: bool = False
     bounds: tuple[Node, Node] | None = None
     rest: Node | None = None  # where it is not the residual
+    integrator: bool | None = None  # where the text says more than the reduced row, see Unknown.integrator
 
 
 @dataclass(slots=True)

@@ -46,7 +46,7 @@ def _duty(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Node:
     sampling, delay_s = device.settings.get("sampling", "natural"), _constant(g, device, "delay")
     if sampling != "natural":
         period_s = 1.0 / _constant(g, device, "rate")
-        offset_s = period_s * _constant(g, device, "phase") / math.tau
+        offset_s = period_s * _constant(g, device, "phase") / math.tau % period_s
         if sampling == "double":
             period_s *= 0.5
         duty = sketch.held(f"{device.name}.sampled_duty", duty, period_s, device.owner, device.span, offset_s=math.fmod(offset_s, period_s))
@@ -58,7 +58,7 @@ def _duty(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Node:
 def _gates(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Mapping[str, Node]:
     rate_hz = _constant(g, device, "rate")
     period_s = 1.0 / rate_hz
-    offset_s = math.fmod(period_s * _constant(g, device, "phase") / math.tau, period_s)
+    offset_s = period_s * _constant(g, device, "phase") / math.tau % period_s
     duty = _duty(g, device, sketch)
     name, time = f"{device.name}.period_start", g.symbol("time", "")
     symbol = g.symbol("sampled", name)

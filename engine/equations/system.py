@@ -151,7 +151,10 @@ class Flag:
 
 @dataclass(frozen=True, slots=True)
 class EquationSystem:
-    """All of it. `notes` says what the reduction did, for `check`."""
+    """All of it.
+
+    notes: what the reduction did, for `check`. moving: boxes whose own value follows `time`, with their places: they never rest.
+    """
 
     graph: ExpressionGraph
     time: Node
@@ -167,6 +170,7 @@ class EquationSystem:
     source_scale: int
     notes: tuple[str, ...]
     resolver: Resolver
+    moving: tuple[tuple[str, Span], ...] = ()
 
     def resolve(self, expressions: Sequence[Node]) -> list[Node]:
         """Circuit-level expressions (circuit.model's symbols) as expressions of x, t, p."""

@@ -401,6 +401,11 @@ def _duration(seconds: float) -> str:
     return f"{seconds / 3600.0:.0f} h"
 
 
+def named_box(name: str, span: Span) -> Named:
+    """A box, for a message."""
+    return Named(name, span, "", units.NONE)
+
+
 def named_row(system: EquationSystem, kind: str, index: int) -> Named:
     """The unknown ("x") or held value ("p") of a row, for a message."""
     if kind == "x":

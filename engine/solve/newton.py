@@ -13,6 +13,7 @@ from polewise.solve.linear import Factors, SparseMatrix, factorise
 ITERATION_LIMIT = 80
 CORRECTION_RELATIVE = 1e-11  # a correction below this part of |z| + scale ends the iteration
 ROUNDING_RELATIVE = 1e-8  # below this, a correction that shrinks no more is rounding, not failure
+RUNAWAY = 1e9  # scales: an open voltage that constant power has driven this far is no solution, although p/v is nearly zero there
 STEP_SMALLEST = 2.0**-9  # shortest step of the line search
 FREE_STEPS = 12  # full steps taken although the line search failed: a kink may have to be crossed uphill
 
@@ -87,7 +88,7 @@ def solve_newton(equations: Equations, start: FloatArray, *, limit: int = ITERAT
             if size <= ROUNDING_RELATIVE and factors.exact:
                 equations.residual(z)
                 return NewtonOutcome(z, "converged", f, factors, count)
-            if not factors.exact and _resting(factors, f):
+            if not factors.exact and _resting(factors, f) and _size(z, equations.scale) < RUNAWAY:
                 equations.residual(z)
                 return NewtonOutcome(z, "converged", f, factors, count)
             if free_steps <= 0:

@@ -68,9 +68,10 @@ def find_operating_point(
         NoOperatingPoint: nothing worked; names the laws that hold least.
     """
     system = problem if isinstance(problem, EquationSystem) else problem.system
-    moving = rows_that_read_time(system)
-    if moving:
-        raise diagnosis.depends_on_time([diagnosis.named_row(system, r.kind, r.index) for r in moving])
+    moving = [diagnosis.named_row(system, r.kind, r.index) for r in rows_that_read_time(system)]
+    if moving or system.moving:
+        # A source that follows time is a plainer culprit than the unknowns it moves.
+        raise diagnosis.depends_on_time([diagnosis.named_box(name, span) for name, span in system.moving] or moving)
     return _Search(system, guess, start_latches or {}).run()
 
 

@@ -9,7 +9,7 @@ import numpy as np
 from polewise.kernels.program import IntArray, Program
 
 # Two orderings are tried: minimum degree on the pattern of A + A^T (nearly symmetric circuits) and column minimum degree (the rest).
-# Sources: Liu, ACM Trans. Math. Softw. 11(2), 1985; Davis, Gilbert, Larimore & Ng, ACM Trans. Math. Softw. 30(3), 2004 (as scipy.sparse provides them).
+# Sources: George & Liu 1981; Davis, Gilbert, Larimore & Ng, ACM Trans. Math. Softw. 30(3), 2004 (both as scipy.sparse has them).
 CANDIDATES: Final = ("MMD_AT_PLUS_A", "COLAMD")
 SEED: Final = 20240517  # of the values that stand in for the real ones
 

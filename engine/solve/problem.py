@@ -16,7 +16,6 @@ from polewise.kernels import opcodes as op
 from polewise.kernels.program import RANK_EVENTS, FloatArray, IntArray, Program
 from polewise.kernels.workspace import Workspace, kernel_program, make_workspace
 
-STEPS_PER_PERIOD = 8  # at least this many steps per period of a sine of time
 ORDERED_FROM = 12  # unknowns; below, any order will do
 
 
@@ -31,7 +30,7 @@ class DaeProblem:
         scale: shape (n,), natural size of each unknown, SI.
         condition_register: shape (number of conditionals,), register of each conditional's condition (RESIDUAL segment).
         sampling_ranks: ranks of the clocks that update sampled signals, ascending; `every` events have rank RANK_EVENTS and are not in it.
-        step_largest_s: no step may be longer, or a wave that no state follows would be stepped over; inf without waves.
+        wave_period_s: period of the fastest sine of time, inf without one; the error test sees states only, so steps must follow waves by themselves.
         order: shape (n,), order of elimination of the columns, or None for small systems. fill: entries of the factors in that order.
     """
 
@@ -41,7 +40,7 @@ class DaeProblem:
     scale: FloatArray
     condition_register: IntArray
     sampling_ranks: tuple[int, ...]
-    step_largest_s: float
+    wave_period_s: float
     order: IntArray | None
     fill: int | None
 
@@ -92,7 +91,7 @@ def build_problem(system: EquationSystem) -> DaeProblem:
         scale=program.scale,
         condition_register=np.array([compiled.registers[node] for node in conditions], dtype=np.int64),
         sampling_ranks=tuple(sorted({c.rank for c in system.clocks if c.rank < RANK_EVENTS})),
-        step_largest_s=_shortest_period(system) / STEPS_PER_PERIOD,
+        wave_period_s=_shortest_period(system),
         order=order,
         fill=fill,
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time as clock
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -31,6 +32,7 @@ from polewise.kernels.workspace import (
     N_TICKS,
     S_BAND,
     S_H_MAX,
+    S_RTOL,
     S_T,
     Workspace,
 )
@@ -43,6 +45,7 @@ from polewise.solve.run_failure import explain_failure
 from polewise.solve.trajectory import Sink
 
 STEPS_FIRST_CALL = 200  # of the first call of the kernel; later ones follow the clock
+STEPS_PER_PERIOD_LEAST = 12  # of the fastest sine of time
 STEPS_FEWEST = 50  # of a run: what only outputs show is drawn with at least so many points
 CALL_AIM_S = 0.1  # wall time of a call: how often progress is told and a stop is heeded
 STEPS_LARGEST_CALL = 1_000_000
@@ -173,7 +176,8 @@ class _Run:
         work, program = self.work, self.problem.program
         work.x[:] = self.start.x
         work.p[:] = self.start.p
-        work.state[S_H_MAX] = min((self.stop_s - self.start.time_s) / STEPS_FEWEST, self.problem.step_largest_s)
+        wave_step_s = _wave_step(self.problem.wave_period_s, float(work.state[S_RTOL]))
+        work.state[S_H_MAX] = min((self.stop_s - self.start.time_s) / STEPS_FEWEST, wave_step_s)
         work.clock_offset[:] = [c.offset_s for c in self.problem.system.clocks]
         work.state[S_T] = self.start.time_s
         work.clock_count[:] = _first_ticks(self.problem, self.start)
@@ -315,6 +319,14 @@ def _first_ticks(problem: DaeProblem, start: StartState) -> IntArray:
         least = t + distance if fired else t - distance
         counts[k] = max(0, int(np.ceil((least - ticking.offset_s) / ticking.period_s)))
     return counts
+
+
+def _wave_step(period_s: float, tolerance: float) -> float:
+    """Step in which the cubic of a step follows a sine to the tolerance: its error is (w h)^4/384 of the amplitude.
+
+    Source: remainder of cubic interpolation, here with the constant of Hermite's; e.g. Stoer & Bulirsch, Introduction to Numerical Analysis, 2.1.
+    """
+    return period_s / max(STEPS_PER_PERIOD_LEAST, 2.0 * math.pi / (384.0 * tolerance) ** 0.25)
 
 
 def _load_past(work: Workspace, start: StartState) -> None:
