@@ -33,9 +33,7 @@ def integrate(
     for end, rates in stretches:
         inside = np.flatnonzero((times >= begin) & (times <= end))
         wanted = np.unique(np.append(times[inside], end))
-        solution = solve_ivp(
-            rates, (begin, end), x, method=method, rtol=rtol, atol=rtol * np.asarray(scale), t_eval=wanted, max_step=max_step
-        )
+        solution = solve_ivp(rates, (begin, end), x, method=method, rtol=rtol, atol=rtol * np.asarray(scale), t_eval=wanted, max_step=max_step)
         assert solution.success, solution.message
         found[:, inside] = solution.y[:, np.searchsorted(solution.t, times[inside])]
         x, begin = solution.y[:, -1], end
