@@ -104,6 +104,7 @@ def _shortest_period(system: EquationSystem) -> float:
     """
     graph = system.graph
     roots = [*(u.residual for u in system.unknowns), *(c.condition for c in system.conditionals), *(o.expression for o in system.outputs)]
+    roots += [d.expression for d in system.delays]
     waves = [graph.a[k] for k in graph.reachable(roots) if graph.operation[k] in (op.SIN, op.COS)]
     slopes = Differentiator(graph, [system.time]).gradients(waves)
     rates = [graph.value_of(slope[system.time]) for slope in slopes if system.time in slope]
