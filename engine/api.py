@@ -22,10 +22,12 @@ from polewise.results.result import Result, RunFacts
 from polewise.results.study_run import Nothing, Progress, RunWishes, Sampling, StudyPlan, carry_out, equations_of, find_point, finished
 
 if TYPE_CHECKING:
+    from polewise.analysis.edge_window import WindowTask
     from polewise.analysis.handover import StateSpace
     from polewise.analysis.impedance import Impedance
     from polewise.analysis.limits import StabilityLimit
     from polewise.analysis.loop import Loop
+    from polewise.analysis.magnified import EdgeWindow
     from polewise.analysis.modes import Modes
     from polewise.analysis.point import ComplexArray
     from polewise.analysis.standpoint import Standpoint
@@ -310,6 +312,75 @@ class System:
         if outcome.trouble is not None and on_failure == "raise":
             raise outcome.trouble
         return finished(plan, outcome, sink.finish())
+
+    # ------------------------------------------------------------ every edge
+
+    def magnify(
+        self,
+        study: str,
+        begin: float,
+        end: float,
+        *,
+        keep: Sequence[str] | None = None,
+        tolerance: float | None = None,
+        preroll_periods: int | None = None,
+        progress: Callable[[Progress], None] | None = None,
+        should_stop: Callable[[], bool] | None = None,
+    ) -> EdgeWindow:
+        """Run a stretch of a study with every switching edge, from its averaged state with the ripple in phase.
+
+        Args:
+            study: its name. begin, end: of the window, s of its time.
+            keep: names or selections to record instead of the study's own.
+            tolerance: relative; None: the study's own, else 1e-7.
+            preroll_periods: of the slowest pole, run before the window; None: three.
+        Returns:
+            A result like a run's, with `.stress`, `.averaged`, `.cycle_average(name)` and `.overlay()`.
+        Raises:
+            UnknownName: no such study or quantity.
+            EdgesRefused: nothing switches, or the window is outside the study.
+            SolverError: the solver could not finish.
+        """
+        from dataclasses import replace
+
+        from polewise.analysis.edge_window import PREROLL_PERIODS, WindowTask
+        from polewise.analysis.magnified import check_window, magnify
+
+        plan = self.plan(study, keep=keep)
+        check_window(begin, end, plan.study.run_for_s, study)
+        plan = replace(plan, record=replace(plan.record, judged=()))
+        task = WindowTask(plan, study, begin, end, PREROLL_PERIODS if preroll_periods is None else preroll_periods)
+        wishes = RunWishes(tolerance, progress, (), should_stop)
+        until, cold = self._averaged_until(task, wishes)
+        return magnify(task, wishes, self._lock, until, cold=cold)
+
+    def magnify_settled(self, *, keep: Sequence[str] | None = None, periods: int = 1, tolerance: float = 1e-10) -> EdgeWindow:
+        """The periodic steady state with every edge at the operating point, by shooting.
+
+        Args:
+            keep: names or selections; None: nodes and paths at top level. periods: how many to show.
+        Raises:
+            NoOperatingPoint, EdgesRefused.
+        """
+        from polewise.analysis.magnified import magnify_settled
+
+        prepared = self._prepared[""]
+        with self._lock:
+            kept = [q for name in keep for q in selected_quantities(prepared.circuit, name)] if keep else default_quantities(prepared.circuit)
+        return magnify_settled(prepared.circuit, prepared.network, kept, self._inputs, periods=periods, tolerance=tolerance, guard=self._lock)
+
+    def _averaged_until(self, task: WindowTask, wishes: RunWishes) -> tuple[Callable[[float], Snapshot | None], bool]:
+        """How the magnified study gets to a time, and whether it starts from stated values."""
+        plan = self.plan(task.study, keep=())
+
+        def until(t: float) -> Snapshot | None:
+            until = RunWishes(None, None, (), wishes.should_stop, t)
+            facts, snapshot = carry_out(plan, Nothing(), until, self._inputs, self._lock, self._before(plan.study, until))
+            if facts.trouble is not None:
+                raise facts.trouble
+            return snapshot if facts.complete else None
+
+        return until, plan.study.start == "cold"
 
     # ------------------------------------------------------------ small-signal
 

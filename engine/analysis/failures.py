@@ -51,3 +51,25 @@ def no_constant_point(cause: Diagnostic, hint: str) -> AnalysisRefused:
     """A circuit that reads `time`: no constant operating point."""
     headline = f"the circuit has no constant operating point: {cause.headline}"
     return AnalysisRefused([Diagnostic("no-constant-point", Severity.ERROR, headline, cause.span, hint=hint)])
+
+
+class WaveformRefused(PolewiseError):
+    """A waveform that can't be averaged as it stands; the headline says why."""
+
+    exit_code = EXIT_NETLIST_WRONG
+
+
+def waveform_refused(headline: str, hint: str | None = None, code: str = "waveform") -> WaveformRefused:
+    """A WaveformRefused with one diagnostic."""
+    return WaveformRefused([Diagnostic(code, Severity.ERROR, headline, no_span(), hint=hint)])
+
+
+class EdgesRefused(PolewiseError):
+    """An edge-by-edge window that can't be made; the headline says why."""
+
+    exit_code = EXIT_NETLIST_WRONG
+
+
+def edges_refused(headline: str, hint: str | None = None, code: str = "no-edges") -> EdgesRefused:
+    """An EdgesRefused with one diagnostic."""
+    return EdgesRefused([Diagnostic(code, Severity.ERROR, headline, no_span(), hint=hint)])

@@ -10,8 +10,10 @@ from polewise.expression.graph import ExpressionGraph, Node
 
 # What `mode` reads: with edges a pole is either conducting or open.
 CONDUCTING, OPEN = 2.0, 0.0
-# A diode's current below this is none: rounding on either side of zero must not turn the opposite diode on.
+# A current below these is none. A diode that stops leaves its choke at the first; the error of the instant (2e-13 of the study's time, some
+# A/us steep) must not turn the opposite device's own diode on, which is why that one asks for more.
 CURRENT_LEAST_A = 1e-9
+CURRENT_OPPOSITE_A = 1e-5
 
 
 def _value(part: PartValue, name: str, graph: ExpressionGraph) -> Node:
@@ -43,8 +45,9 @@ def edge_equations(context: DeviceContext) -> DeviceEquations:
     by_lower = g.negate(g.multiply(r_lower, i))
     by_upper_diode = g.subtract(g.add(rail, v_upper), g.multiply(diode_r_upper, i))
     by_lower_diode = g.subtract(g.negate(v_lower), g.multiply(diode_r_lower, i))
-    least = g.constant(CURRENT_LEAST_A)
-    leaving, entering = g.greater(i, least), g.greater(g.negate(i), least)
+    least_leaving = CURRENT_LEAST_A if lower.kind == "diode" else CURRENT_OPPOSITE_A
+    least_entering = CURRENT_LEAST_A if upper.kind == "diode" else CURRENT_OPPOSITE_A
+    leaving, entering = g.greater(i, g.constant(least_leaving)), g.greater(g.negate(i), g.constant(least_entering))
     if context.choke is None:
         open_mid, drives_upper, drives_lower = g.multiply(g.constant(0.5), rail), zero, zero
     else:
