@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from hypothesis import HealthCheck, assume, given, settings
+from hypothesis import HealthCheck, assume, example, given, settings
 from hypothesis import strategies as st
 
 import polewise
@@ -51,8 +51,39 @@ def systems(draw: st.DrawFn) -> tuple[str, int]:
     return "reference gnd\nsupply: src --[48 V]-- gnd\nline: src --[r: 5 mohm]-- bus\n" + "\n".join(lines), number
 
 
+# Found by this test: discontinuous stages whose operating point no search reached.
+TWO_SMALL_CHOKES = """reference gnd
+supply: src --[48 V]-- gnd
+line: src --[r: 5 mohm]-- bus
+leg0: pole(o0, gnd, x0, duty = 0.2, rate = 20000.0 Hz, upper = diode(0.0 V, 0.0 ohm), lower = transistor(0.0 ohm))
+q0: bus --[l: 2.0 uH]-- x0
+c0: o0 --[100 uF]-- gnd
+load0: o0 --[r: 20 ohm]-- gnd
+leg1: pole(bus, o1, x1, duty = 0.2, rate = 20000.0 Hz, upper = transistor(0.002 ohm), lower = diode(0.0 V, 0.0 ohm))
+q1: x1 --[l: 20.0 uH]-- gnd
+c1: o1 --[100 uF]-- gnd
+load1: o1 --[r: 2 ohm]-- gnd"""
+# A light load: the output overshoots the rail, the pole blocks, and unblocks where the output has sunk back to the rail.
+OVERSHOOT = """reference gnd
+supply: src --[48 V]-- gnd
+line: src --[r: 5 mohm]-- bus
+leg0: pole(bus, gnd, x0, duty = 0.55, rate = 100000.0 Hz, upper = transistor(0.0 ohm), lower = diode(0.0 V, 0.0 ohm))
+q0: x0 --[l: 200.0 uH]-- o0
+c0: o0 --[100 uF]-- gnd
+load0: o0 --[r: 20 ohm]-- gnd"""
+# An inverting stage that starts with nothing at its output.
+FROM_NOTHING = """reference gnd
+supply: src --[48 V]-- gnd
+line: src --[r: 5 mohm]-- bus
+leg0: pole(bus, o0, x0, duty = 0.2, rate = 20000.0 Hz, upper = transistor(0.002 ohm), lower = diode(0.0 V, 0.01 ohm))
+q0: x0 --[l: 2.0 uH]-- gnd
+c0: o0 --[100 uF]-- gnd
+load0: o0 --[r: 2 ohm]-- gnd"""
+
+
 @settings(max_examples=60, **SETTINGS)
 @given(drawn=systems())
+@example(drawn=(TWO_SMALL_CHOKES, 2))
 def test_power_balances_at_rest(drawn: tuple[str, int]) -> None:
     text, number = drawn
     point = polewise.from_text(text).settled()
@@ -79,6 +110,8 @@ def test_power_balances_at_rest(drawn: tuple[str, int]) -> None:
 
 @settings(max_examples=12, **SETTINGS)
 @given(drawn=systems(), load=st.sampled_from([0.5, 3.0]))
+@example(drawn=(OVERSHOOT, 1), load=0.5)
+@example(drawn=(FROM_NOTHING, 1), load=0.5)
 def test_tellegen_in_transients(drawn: tuple[str, int], load: float) -> None:
     # The sum of v i over everything, poles by their terminals, is zero at every instant, whatever the mode of conduction.
     text, number = drawn
@@ -103,4 +136,4 @@ study step {{
             total = total + result[f"{part}{k}.p"]
             size = size + abs(result[f"{part}{k}.p"])
         total = total + result[f"leg{k}.loss"]
-    assert (abs(total) <= 1e-9 * (size.max() + 1.0)).all()
+    assert (abs(total) <= 1e-7 * (size.max() + 1.0)).all()  # the run's tolerance is 1e-6
