@@ -311,7 +311,7 @@ class System:
         outcome = self.carry_out(plan, sink, tolerance=tolerance, progress=progress, at=at, should_stop=should_stop)
         if outcome.trouble is not None and on_failure == "raise":
             raise outcome.trouble
-        return finished(plan, outcome, sink.finish())
+        return self.answered(plan, finished(plan, outcome, sink.finish()))
 
     # ------------------------------------------------------------ every edge
 
@@ -491,6 +491,20 @@ class System:
 
         with self._lock:
             return stability_limit(self._stand(None), name, low, high)
+
+    def answered(self, plan: StudyPlan, result: Result) -> Result:
+        """A run's result with answers to the study's small-signal orders and the verdict on requirements that rest on them."""
+        if not plan.study.asks_analysis or result.trouble is not None:
+            return result
+        from polewise.analysis.answers import answer_study, judge_answers
+        from polewise.analysis.standpoint import Standpoint
+
+        def stand_at(place: Place | None) -> Standpoint:
+            return self._stand(place) if place is not None else Standpoint(plan.circuit, plan.network, self._inputs)
+
+        with self._lock:
+            answers = answer_study(plan.study, stand_at)
+            return result.with_answers(answers, judge_answers(plan.study, answers, stand_at))
 
     def _stand(self, at: Place | None) -> Standpoint:
         from polewise.analysis.standpoint import Standpoint

@@ -98,8 +98,29 @@ def _line(statement: s.Statement | s.Order) -> str:
             return f"sampling = {statement.how}"
         case s.Require():
             return _require(statement)
+        case s.Analysis():
+            return _analysis(statement)
         case _:
             return _declaration(statement)
+
+
+def _analysis(order: s.Analysis) -> str:
+    """A small-signal order."""
+    text = order.kind
+    if order.kind == "response":
+        text += f" of {reference_text(order.subjects[0])}"
+    elif order.subjects:
+        text += " at " + ", ".join(reference_text(item) for item in order.subjects)
+    if order.other is not None:
+        text += f" to {reference_text(order.other)}"
+    if order.low is not None and order.high is not None:
+        text += f" over {_expression(order.low, _SUM)} .. {_expression(order.high, _SUM)}"
+    for word, side in (("source", order.source), ("load", order.load)):
+        if side:
+            text += f" {word} " + ", ".join(reference_text(item) for item in side)
+    if order.place is not None:
+        text += f" at {_expression(order.place.time, _SUM)} of {order.place.study}"
+    return text
 
 
 def _declaration(statement: s.Statement | s.Order) -> str:

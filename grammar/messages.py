@@ -513,7 +513,10 @@ def not_a_step(span: Span, word: str) -> Diagnostic:
 
 def unknown_order(span: Span, word: str, nearest: str | None) -> Diagnostic:
     """`frobnicate` inside a study."""
-    hint = _nearest(nearest) or "A study holds start, run for, keep, require, at, every, whenever, given, tolerance and sampling."
+    hint = (
+        _nearest(nearest)
+        or "A study holds start, run for, keep, require, at, every, whenever, given, tolerance, sampling, modes, loop, response and impedance."
+    )
     return _error("unknown-order", f"`{word}` is no order of a study", span, hint=hint, mended=nearest)
 
 

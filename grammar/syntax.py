@@ -570,6 +570,39 @@ class Require:
 
 
 @dataclass(frozen=True, slots=True)
+class Place:
+    """`at T of STUDY`: where a run stands at a time."""
+
+    span: Span
+    time: Expression
+    study: str
+    study_span: Span
+
+
+@dataclass(frozen=True, slots=True)
+class Analysis:
+    """A small-signal order: `modes`, `loop at S, …`, `response of Y to U`, `impedance at N`, each `[at T of STUDY]`.
+
+    Args:
+        kind: its first word.
+        subjects: signals of a loop; the one output of a response; one node, or two as a pair (d and q).
+        other: input of a response; second node of an impedance between two.
+        low, high: of `over A .. B`; None for modes.
+        source, load: elements or assemblies on either side of an impedance.
+    """
+
+    span: Span
+    kind: str
+    subjects: tuple[Reference, ...]
+    other: Reference | None
+    low: Expression | None
+    high: Expression | None
+    source: tuple[Reference, ...]
+    load: tuple[Reference, ...]
+    place: Place | None
+
+
+@dataclass(frozen=True, slots=True)
 class Study:
     """`study name { … }`. Orders also hold At, Every, Whenever and Given."""
 
@@ -580,7 +613,7 @@ class Study:
     orders: tuple[Order, ...]
 
 
-Order: TypeAlias = Start | RunFor | Keep | StudyTolerance | Sampling | Require | At | Every | Whenever | Given
+Order: TypeAlias = Start | RunFor | Keep | StudyTolerance | Sampling | Require | At | Every | Whenever | Given | Analysis
 
 Statement: TypeAlias = (
     Title

@@ -483,6 +483,72 @@ class Builder:
             self.diagnostics.append(messages.sampling_unknown(self._of(how), how.text, nearest_word(how.text, SAMPLING_WORDS)))
         return s.Sampling(self._span(start, end), how.text)
 
+    def modes(self, start: int, end: int, place: s.Place | None) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "modes", (), None, None, None, (), (), place)
+
+    def loop(
+        self, start: int, end: int, signals: tuple[s.Reference, ...], low: s.Expression, high: s.Expression, place: s.Place | None
+    ) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "loop", signals, None, low, high, (), (), place)
+
+    def response(
+        self, start: int, end: int, output: s.Reference, input: s.Reference, low: s.Expression, high: s.Expression, place: s.Place | None
+    ) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "response", (output,), input, low, high, (), (), place)
+
+    def impedance(
+        self,
+        start: int,
+        end: int,
+        node: s.Reference,
+        low: s.Expression,
+        high: s.Expression,
+        source: tuple[s.Reference, ...] | None,
+        load: tuple[s.Reference, ...] | None,
+        place: s.Place | None,
+    ) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "impedance", (node,), None, low, high, source or (), load or (), place)
+
+    def impedance_between(
+        self,
+        start: int,
+        end: int,
+        node: s.Reference,
+        other: s.Reference,
+        low: s.Expression,
+        high: s.Expression,
+        source: tuple[s.Reference, ...] | None,
+        load: tuple[s.Reference, ...] | None,
+        place: s.Place | None,
+    ) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "impedance", (node,), other, low, high, source or (), load or (), place)
+
+    def impedance_of_pair(
+        self,
+        start: int,
+        end: int,
+        d: s.Reference,
+        q: s.Reference,
+        low: s.Expression,
+        high: s.Expression,
+        source: tuple[s.Reference, ...] | None,
+        load: tuple[s.Reference, ...] | None,
+        place: s.Place | None,
+    ) -> s.Analysis:
+        return s.Analysis(self._span(start, end), "impedance", (d, q), None, low, high, source or (), load or (), place)
+
+    def source_side(self, start: int, end: int, items: tuple[s.Reference, ...]) -> tuple[s.Reference, ...]:
+        return items
+
+    def load_side(self, start: int, end: int, items: tuple[s.Reference, ...]) -> tuple[s.Reference, ...]:
+        return items
+
+    def references(self, start: int, end: int, *items: s.Reference) -> tuple[s.Reference, ...]:
+        return items
+
+    def place(self, start: int, end: int, time: s.Expression, study: Token) -> s.Place:
+        return s.Place(self._span(start, end), time, study.text, self._of(study))
+
     def require(
         self,
         start: int,

@@ -100,6 +100,22 @@ def requirement_without_bound(span: Span, subject: Span) -> Diagnostic:
     return error("requirement-bound", "a requirement on a number needs its bound", span, hint=hint)
 
 
+def requirement_subject(span: Span, measure: str, takes: str) -> Diagnostic:
+    """phase_margin(a + b)."""
+    return error("requirement-subject", f"`{measure}` asks for the name of a {takes}", span)
+
+
+def requirement_limit_varies(span: Span, measure: str) -> Diagnostic:
+    """phase_margin(drive) above bus.v."""
+    return error("requirement-limit-varies", f"the limit of `{measure}` must be constant", span)
+
+
+def requirement_window(span: Span, measure: str) -> Diagnostic:
+    """least_damping() above 0.1 after 3 ms."""
+    hint = "Leave `after` or `during` away."
+    return error("requirement-window", f"`{measure}` belongs to the operating point, not to a time of the run", span, hint=hint)
+
+
 def condition_with_bound(span: Span, relation: str) -> Diagnostic:
     """require a > b above 5."""
     return error(

@@ -365,6 +365,30 @@ class Requirement:
 
 
 @dataclass(frozen=True, slots=True)
+class AnalysisOrder:
+    """A small-signal order of a study.
+
+    Args:
+        subjects: signals of a loop, the output of a response, the node of an impedance or a pair of them. other: a response's input, an
+            impedance's second node, or "".
+        low_hz, high_hz: the range, Hz; 0 for modes.
+        source, load: elements or assemblies on either side.
+        place: (study, time in s) where it is asked; None: the operating point.
+    """
+
+    kind: Literal["modes", "loop", "response", "impedance"]
+    subjects: tuple[str, ...]
+    other: str
+    low_hz: float
+    high_hz: float
+    source: tuple[str, ...]
+    load: tuple[str, ...]
+    place: tuple[str, float] | None
+    text: str
+    span: Span
+
+
+@dataclass(frozen=True, slots=True)
 class StudyDef:
     """A study as read; its own givens are applied by expanding the circuit for it."""
 
@@ -383,6 +407,13 @@ class StudyDef:
     sampling: Literal["exact", "mean"] | None
     has_givens: bool
     span: Span
+    analyses: tuple[AnalysisOrder, ...] = ()
+    analysis_requirements: tuple[Requirement, ...] = ()  # on small-signal answers; measure: a name of circuit.analyses
+
+    @property
+    def asks_analysis(self) -> bool:
+        """Whether it asks for small-signal answers."""
+        return bool(self.analyses or self.analysis_requirements)
 
 
 @dataclass(frozen=True, slots=True)

@@ -7,13 +7,14 @@ from dataclasses import dataclass
 from typing import Final
 
 from polewise.circuit import box_messages, event_messages, file_messages, name_messages, value_messages
+from polewise.circuit.analyses import ANALYSIS_MEASURES, analysis_requirement, finish_analysis, is_analysis_measure
 from polewise.circuit.asking import Asked, constant_number, fits, positive_time
 from polewise.circuit.declare import declare_path_given
 from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, TIME, Quality, settled
 from polewise.circuit.events import finish_event
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.functions import BUILT_IN
-from polewise.circuit.model import ClockEvent, ConditionEvent, Quantity, Requirement, StudyDef, TimeEvent
+from polewise.circuit.model import AnalysisOrder, ClockEvent, ConditionEvent, Quantity, Requirement, StudyDef, TimeEvent
 from polewise.circuit.naming import find_thing, has_star, selected
 from polewise.circuit.near import nearest
 from polewise.circuit.scope import Env
@@ -112,6 +113,8 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
     sampling = None
     keep: list[Quantity] = []
     requirements: list[Requirement] = []
+    analyses: list[AnalysisOrder] = []
+    analysis_requirements: list[Requirement] = []
     times: list[TimeEvent] = []
     clocks: list[ClockEvent] = []
     conditions: list[ConditionEvent] = []
@@ -131,10 +134,14 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
         elif isinstance(order, syntax.Sampling):
             sampling = order.how
         elif isinstance(order, syntax.Require):
-            made = _requirement(x, order, env, len(requirements) + 1)
+            made = _requirement(x, order, env, len(requirements) + len(analysis_requirements) + 1)
             if made is not None:
-                _check_requirement_name(x, made, requirements)
-                requirements.append(made)
+                _check_requirement_name(x, made, [*requirements, *analysis_requirements])
+                (analysis_requirements if made.measure in ANALYSIS_MEASURES else requirements).append(made)
+        elif isinstance(order, syntax.Analysis):
+            asked = finish_analysis(x, order, env)
+            if asked is not None:
+                analyses.append(asked)
         elif isinstance(order, syntax.At | syntax.Every | syntax.Whenever):
             finish_event(x, order, env, (times, clocks, conditions))
         elif not isinstance(order, syntax.Given):
@@ -156,6 +163,8 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
         sampling if sampling in ("exact", "mean") else None,  # type: ignore[arg-type]
         any(isinstance(order, syntax.Given) for order in written.orders),
         thing.span,
+        tuple(analyses),
+        tuple(analysis_requirements),
     )
 
 
@@ -233,6 +242,8 @@ def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> 
     document = order.document
     text = " ".join(_text_of(order).split())
     name = order.name if order.name is not None else f"requirement {number}"
+    if is_analysis_measure(x, subject):
+        return analysis_requirement(x, order, env, name, text)
     window = _window(x, order, env)
     if isinstance(subject, syntax.Call) and subject.name in MEASURES and subject.name not in BUILT_IN and x.top.find(subject.name) is None:
         rule = MEASURES[subject.name]
@@ -243,7 +254,7 @@ def _requirement(x: Expansion, order: syntax.Require, env: Env, number: int) -> 
         measure = rule.name
     else:
         if isinstance(subject, syntax.Call) and x.top.find(subject.name) is None and subject.name not in BUILT_IN:
-            close = nearest(subject.name, [*MEASURES, *BUILT_IN])
+            close = nearest(subject.name, [*MEASURES, *ANALYSIS_MEASURES, *BUILT_IN])
             x.report.add(event_messages.unknown_measure(subject.name_span, subject.name, close, list(MEASURES)))
             return None
         node, kind = x.lower(subject, env)

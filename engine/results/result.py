@@ -16,7 +16,7 @@ from polewise.grammar.units import Dimension
 from polewise.results.curve import INTERIOR, FloatArray
 from polewise.results.failures import MissingExtra
 from polewise.results.recording import Column, Recording, column_index, recorded_curve, row_blocks
-from polewise.results.verdict import Verdict
+from polewise.results.verdict import RequirementVerdict, Verdict
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -162,12 +162,24 @@ class RunFacts:
 class Result(Record):
     """One study's result: kept quantities, verdict, events, counters."""
 
-    __slots__ = ("_facts", "_verdict")
+    __slots__ = ("_answers", "_facts", "_recording_itself", "_verdict")
 
-    def __init__(self, recording: Recording, verdict: Verdict, facts: RunFacts) -> None:
+    def __init__(self, recording: Recording, verdict: Verdict, facts: RunFacts, answers: tuple[object, ...] = ()) -> None:
         super().__init__(recording)
+        self._recording_itself = recording
         self._verdict = verdict
         self._facts = facts
+        self._answers = answers
+
+    def with_answers(self, answers: tuple[object, ...], rows: tuple[RequirementVerdict, ...]) -> Result:
+        """The same result with small-signal answers and the verdict on them."""
+        verdict = Verdict(self._verdict.study, (*self._verdict.requirements, *rows))
+        return Result(self._recording_itself, verdict, self._facts, answers)
+
+    @property
+    def answers(self) -> tuple[object, ...]:
+        """Answers to the study's small-signal orders (analysis.answers.Answer), in the order of the text."""
+        return self._answers
 
     @property
     def verdict(self) -> Verdict:

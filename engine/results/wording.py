@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from typing import Final
 
@@ -9,6 +10,7 @@ from polewise.grammar.units import TEMPERATURE, Dimension, format_value, parse_u
 
 _NUMBER: Final = re.compile(r"(?<![A-Za-z_.\d])\d+(?:\.\d+)?(?:[eE][+-]?\d+)?[ ]?")
 _DEGREES: Final = "degC"
+_ANGLE: Final = "deg"
 _ICE_POINT_K: Final = 273.15  # 0 degC, SI brochure 9th ed., 2.3.1
 
 
@@ -19,7 +21,7 @@ def preferred_unit(text: str, dimension: Dimension) -> str | None:
         if run.unit is None or run.unit.dimension != dimension:
             continue
         symbol = run.unit.symbol
-        if symbol == _DEGREES:
+        if symbol in (_DEGREES, _ANGLE):
             return symbol
         for candidate in (symbol, symbol[1:]):  # the second without its prefix
             unit = parse_unit(candidate) if candidate else None
@@ -32,9 +34,13 @@ def value_text(value: float, dimension: Dimension, *, prefer: str | None = None,
     """A value as text; `prefer` from preferred_unit."""
     if prefer == _DEGREES:
         return f"{value - _ICE_POINT_K:.{digits}g} degC"
+    if prefer == _ANGLE:
+        return f"{math.degrees(value):.{digits}g} deg"
     return format_value(value, dimension, digits=digits, prefer=prefer)
 
 
 def difference_text(value: float, dimension: Dimension, *, prefer: str | None = None, digits: int = 4) -> str:
     """A difference of two values as text: in K where the values are in degC."""
+    if prefer == _ANGLE:
+        return f"{math.degrees(value):.{digits}g} deg"
     return format_value(value, dimension, digits=digits, prefer="K" if dimension == TEMPERATURE else prefer)

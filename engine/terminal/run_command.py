@@ -117,7 +117,7 @@ def _run_one(system: System, plan: StudyPlan, options: RunOptions, stop: threadi
         with StudyProgress(plan.study.name) as progress:
             store: _Files | _Memory = files or _Memory(plan)
             facts = system.carry_out(plan, store.sink, tolerance=options.tolerance, progress=progress, should_stop=stop.is_set)
-            result = finished(plan, facts, store.close(facts))
+            result = system.answered(plan, finished(plan, facts, store.close(facts)))
         if files is not None:
             files.conclude(result)
         return _Outcome(plan.study.name, result, facts.trouble, facts.elapsed_s)
