@@ -252,18 +252,19 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         far = g.subtract(choke.far_potential, bottom)
         raising = g.subtract(rail, far) if lower_diode else far
         lowering = g.add(far, drop) if lower_diode else g.subtract(g.add(rail, drop), far)
-        driven = g.invert(g.positive(lowering))  # the diode is driven on
-        can_rise = g.positive(raising)
+        usual = g.mark_usual
+        driven = g.invert(usual(g.positive(lowering), 1))  # the diode is driven on
+        can_rise = usual(g.positive(raising), 1)
         ordinary = g.both(can_rise, g.invert(driven))
-        stopped = g.both(g.invert(g.positive(j)), g.invert(driven))  # no current, and no diode that takes one
+        stopped = g.both(g.invert(usual(g.positive(j), 1)), g.invert(driven))  # no current, and no diode that takes one
         blocked = g.both(stopped, g.invert(can_rise))
         # delta = limit(j(2Lf/d + R + r)/a, d, 1). Written with charge = j(2Lf + (R + r)d) and reach = a d it holds at d = 0 too: 1 while the
         # diode conducts, d at no current. Every choice below is continuous, so that no two of them can undo each other.
         slope = g.add(g.multiply(g.multiply(two, choke.inductance), pole.rate), g.multiply(g.add(r_on, choke.resistance), d))
         charge = g.multiply(j, slope)
         reach = g.multiply(raising, d)
-        continuous = g.greater(charge, reach)
-        starting = g.greater(g.multiply(reach, d), charge)
+        continuous = usual(g.greater(charge, reach), 1)
+        starting = usual(g.greater(g.multiply(reach, d), charge), 0)
         peak_half = g.divide(reach, slope)  # j/delta in discontinuous conduction: half the peak current
         part = g.divide(charge, g.maximum(reach, g.constant(REACH_MIN_V)))
         delta = g.mux(ordinary, g.mux(continuous, one, g.mux(starting, d, part)), one)

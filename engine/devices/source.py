@@ -19,7 +19,7 @@ def _constant_power(context: DeviceContext) -> DeviceEquations:
     if context.settings["relation"] == "above":
         x = g.divide(v, bound)
         faded = g.multiply(g.divide(power, bound), g.subtract(g.multiply(g.constant(2.0), x), g.power(x, g.constant(3.0))))
-        collapsed = g.positive(g.subtract(bound, v))
+        collapsed = g.mark_usual(g.positive(g.subtract(bound, v)), 0)
         # In the fading branch v may cross zero; p/v is only chosen where v >= bound > 0.
         current = g.mux(collapsed, faded, g.divide(power, v))
         return DeviceEquations({"": current}, flags={"collapsed": g.both(collapsed, g.positive(g.absolute(power)))})
@@ -31,9 +31,11 @@ def _constant_power(context: DeviceContext) -> DeviceEquations:
     one = g.constant(1.0)
     slope_match = g.constant(2.0 - GENERATOR_FADE_SHARE)
     fading = g.multiply(g.divide(power, bound), g.multiply(g.power(g.subtract(one, u), g.constant(2.0)), g.add(one, g.multiply(slope_match, u))))
-    over = g.positive(g.subtract(v, bound))
+    over = g.mark_usual(g.positive(g.subtract(v, bound)), 0)
     gone = g.positive(g.subtract(u, one))
-    current = g.mux(over, g.mux(gone, g.constant(0.0), fading), g.mux(g.positive(g.subtract(lowest, v)), starting, g.divide(power, v)))
+    current = g.mux(
+        over, g.mux(gone, g.constant(0.0), fading), g.mux(g.mark_usual(g.positive(g.subtract(lowest, v)), 0), starting, g.divide(power, v))
+    )
     return DeviceEquations({"": current}, flags={"curtailed": over})
 
 

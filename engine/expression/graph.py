@@ -75,6 +75,7 @@ class ExpressionGraph:
     values: dict[Node, float] = field(default_factory=dict)
     symbols: dict[Node, tuple[str, str]] = field(default_factory=dict)
     tables: list[PiecewiseCubic] = field(default_factory=list)
+    usual: dict[Node, int] = field(default_factory=dict)  # switch → its mode in regular operation, where one is known; see `mark_usual`
     _intern: dict[tuple[int, int, int, int] | tuple[str, str] | float, Node] = field(default_factory=dict)
 
     # ------------------------------------------------------------ leaves
@@ -252,6 +253,15 @@ class ExpressionGraph:
             return self.constant(1.0 if v > 0.0 else 0.0)
         return self._make(op.POSITIVE, x)
 
+    def mark_usual(self, switch: Node, mode: int) -> Node:
+        """Say how a switch stands in regular operation (a limit not reached, a pole in continuous conduction); the switch.
+
+        A search for a point of rest begins there. It changes no value.
+        """
+        if self.operation[switch] == op.POSITIVE:
+            self.usual[switch] = mode
+        return switch
+
     def floor(self, x: Node) -> Node:
         """The largest whole number not above x. A switch."""
         v = self.values.get(x)
@@ -296,7 +306,8 @@ class ExpressionGraph:
 
     def limit(self, x: Node, low: Node, high: Node) -> Node:
         """x held between low and high."""
-        return self.mux(self.greater(x, high), high, self.mux(self.greater(low, x), low, x))
+        above, below = self.mark_usual(self.greater(x, high), 0), self.mark_usual(self.greater(low, x), 0)
+        return self.mux(above, high, self.mux(below, low, x))
 
     def absolute(self, x: Node) -> Node:
         """|x|."""
@@ -387,7 +398,8 @@ class ExpressionGraph:
         if operation == op.TABLE_SLOPE:
             return self.table_slope(self.c[node], x)
         if operation == op.POSITIVE:
-            return self.positive(x)
+            image_node = self.positive(x)
+            return self.mark_usual(image_node, self.usual[node]) if node in self.usual else image_node
         if operation == op.FLOOR:
             return self.floor(x)
         if operation == op.NEG:

@@ -10,7 +10,9 @@ import numpy as np
 
 from polewise.equations.system import EquationSystem, Flag
 from polewise.errors import PolewiseError
+from polewise.grammar import units
 from polewise.grammar.diagnostics import Diagnostic
+from polewise.kernels import opcodes as op
 from polewise.kernels.program import FloatArray
 from polewise.solve import diagnosis
 from polewise.solve.continuation import RampOutcome, ramp
@@ -21,7 +23,7 @@ from polewise.solve.pseudo_transient import settle_in_pseudo_time
 from polewise.solve.rest_failure import RestFailure, explain, explain_singular, rows_that_read_time
 from polewise.solve.square_system import SquareSystem, rest_rows
 
-Strategy = Literal["newton", "power ramp", "source ramp", "pseudo-transient"]
+Strategy = Literal["newton", "regular operation", "power ramp", "source ramp", "pseudo-transient"]
 COLLAPSED = "collapsed"  # kind of the flags that tell that a constant power is below its stated voltage
 
 
@@ -32,7 +34,8 @@ class OperatingPoint:
     Args:
         x: shape (n,), unknowns, SI.
         p: shape (n_p,), parameters: latches as stated, sampled and delayed values at rest.
-        strategy: which search found it: "newton"; "power ramp": constant powers raised from the solution without them; "source ramp";
+        strategy: which search found it: "newton"; "regular operation": with every limit away and every pole in continuous conduction first;
+            "power ramp": constant powers raised from the solution without them; "source ramp";
             "pseudo-transient".
         iterations: Newton corrections in all.
         flags: every flag of the system that is true here.
@@ -75,6 +78,8 @@ def find_operating_point(
     return _Search(system, guess, start_latches or {}).run()
 
 
+# Newton corrections with every switch in its usual mode: nearly linear equations need few.
+REGULAR_CORRECTIONS = 30
 # Shares of the constant powers at which the ramp may begin, in the order in which the slow strategies try them.
 POWER_RAMP_BEGINS = (0.01, 0.0, 0.1, 1.0)
 
@@ -105,6 +110,9 @@ class _Search:
             outcome = self._newton(self.start)
             if outcome.converged and not self._refused(outcome.z):
                 return self._accept(outcome, "newton")
+        regular = self._regular()
+        if regular is not None:
+            return self._accept(regular, "regular operation")
         if not self.powered:
             return self._accept(*self._unpowered())
         base, strategy, begin = self._base()
@@ -126,6 +134,58 @@ class _Search:
             raise self._power_limit(result)
         self.ends.append(end)
         raise self._failure(f"; up to {result.reached:.3g} times the constant powers there is one")
+
+    def _regular(self) -> NewtonOutcome | None:
+        """The point at which everything regulates: no limit reached, poles in continuous conduction, loads above their voltage.
+
+        With those switches held the equations are smooth and determined even without load; the constant powers are ramped up there, then the
+        switches are let go. None where that leads to no point of rest.
+        """
+        square, power = self.square, self.system.power_scale
+        if len(square.usual_switch) == 0:
+            return None
+        square.assume_usual = True
+        try:
+            square.p[power] = 0.0 if self.powered else 1.0
+            base = solve_newton(square, self._powered_up(), limit=REGULAR_CORRECTIONS)
+            self.iterations += base.iterations
+            if not base.converged or base.factors is None or not base.factors.exact:
+                return None
+            z = base.z
+            if self.powered:
+                result = ramp(square, base, power, lambda z: False)
+                self.iterations += result.iterations
+                if result.limit != "none":
+                    return None
+                z = result.z
+        finally:
+            square.assume_usual = False
+            square.p[power] = 1.0
+        outcome = solve_newton(square, z)
+        self.iterations += outcome.iterations
+        good = outcome.converged and outcome.factors is not None and outcome.factors.exact and not self._refused(outcome.z)
+        return outcome if good else None
+
+    def _powered_up(self) -> FloatArray:
+        """The start with voltages that nothing states at the size of the strongest source, everything else away from zero.
+
+        Products of a voltage and a duty have two solutions: the one near the source's own voltage is wanted.
+        """
+        square, system, graph = self.square, self.system, self.system.graph
+        scale_symbol = system.parameters[system.source_scale].symbol
+        values = {q.symbol: float(v) for q, v in zip(system.parameters, square.p, strict=True)}
+        strongest = 0.0
+        for node in graph.reachable([r.residual for r in square.rows]):
+            if graph.operation[node] == op.MUL and scale_symbol in (graph.a[node], graph.b[node]):
+                other = graph.b[node] if graph.a[node] == scale_symbol else graph.a[node]
+                value = graph.value_of(other)
+                strongest = max(strongest, abs(values.get(other, 0.0) if value is None else value))
+        size = square.scale.copy()
+        if strongest > 0.0:
+            is_voltage = [r.kind == "x" and system.unknowns[r.index].dimension == units.VOLTAGE for r in square.rows]
+            size[is_voltage] = strongest
+        guess: FloatArray = np.where(self.start == 0.0, size, self.start)
+        return guess
 
     def _base(self) -> tuple[NewtonOutcome, Strategy, float]:
         """A solution to ramp the constant powers up from: without any, or with as little as makes it the only one.

@@ -48,7 +48,7 @@ def settle_in_pseudo_time(square: SquareSystem, start: FloatArray) -> tuple[Newt
     for _ in range(STEPS_MOST):
         square.residual(z)
         euler.q_last = square.charges()
-        outcome = solve_newton(euler, z, limit=12, free_steps=3)
+        outcome = solve_newton(euler, z, limit=25, free_steps=12)
         iterations += outcome.iterations
         if not outcome.converged:
             euler.dt /= SHRINKING

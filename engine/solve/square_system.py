@@ -38,6 +38,7 @@ class SquareSystem:
         rows: in the order of z: all x first, then the parameters that are solved for.
         p: shape (n_p,), values of the parameters; entries that are solved for are ignored.
         offset: shape (n,), taken from the rows: F(z) = row - offset.
+        assume_usual: whether switches with a usual mode (ExpressionGraph.usual) are held in it.
     """
 
     def __init__(self, system: EquationSystem, rows: Sequence[Row]) -> None:
@@ -64,6 +65,10 @@ class SquareSystem:
         self.p: FloatArray = np.array([0.0 if q.initial is None else q.initial for q in system.parameters], dtype=float)
         self.offset: FloatArray = np.zeros(len(rows))
         self.has_charge = self.program.q_reg >= 0
+        known = [(k, graph.usual[node]) for k, node in enumerate(self.compiled.switches) if node in graph.usual]
+        self.usual_switch: IntArray = np.array([k for k, _ in known], dtype=np.int64)
+        self.usual_mode: IntArray = np.array([mode for _, mode in known], dtype=np.int64)
+        self.assume_usual = False
 
     @property
     def n(self) -> int:
@@ -80,10 +85,13 @@ class SquareSystem:
         self.work.state[S_T] = t
 
     def residual(self, z: FloatArray) -> FloatArray:
-        """F(z), every switch live."""
+        """F(z), every switch live, or with `assume_usual` those that have a usual mode in it."""
         self.work.x[:] = z
         self.work.p[:] = self.p[self.other_p]
         kernel_calls.run_residual_live(self.program, self.work)
+        if self.assume_usual:
+            self.work.mode[self.usual_switch] = self.usual_mode
+            kernel_calls.run_residual(self.program, self.work)
         value: FloatArray = self.work.reg[self.program.f_reg] - self.offset
         return value
 
