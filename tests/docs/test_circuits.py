@@ -10,8 +10,8 @@ import polewise
 from polewise.grammar.diagnostics import Severity
 
 ROOT = Path(__file__).resolve().parents[2]
-BASICS = sorted((ROOT / "circuits" / "basics").glob("*.pole"))
 PIER = ROOT / "circuits" / "tern_point" / "pier.pole"
+CIRCUITS = sorted(path for path in (ROOT / "circuits").rglob("*.pole") if path.parent.name != "parts" and path != PIER)
 PIER_STUDIES = ("black_start", "load_step", "supply_loss", "berth_short")
 POLES_MIN, UNKNOWNS_MIN = 12, 80
 
@@ -22,14 +22,14 @@ def _holds(path: Path, study: str) -> None:
     assert verdict.passed, [f"{r.name}: {r.why}" for r in verdict.failed]
 
 
-@pytest.mark.parametrize("path", [*BASICS, PIER], ids=lambda p: p.stem)
+@pytest.mark.parametrize("path", [*CIRCUITS, PIER], ids=lambda p: p.stem)
 def test_checks_without_warnings(path: Path) -> None:
     report = polewise.load(path).check()
     warnings = [d.headline for d in report.diagnostics if d.severity is Severity.WARNING]
     assert not warnings
 
 
-@pytest.mark.parametrize("path", BASICS, ids=lambda p: p.stem)
+@pytest.mark.parametrize("path", CIRCUITS, ids=lambda p: p.stem)
 def test_studies_hold(path: Path) -> None:
     studies = polewise.load(path).studies
     assert studies, f"{path.name} has no study"
