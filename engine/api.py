@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Literal
 
+from polewise.circuit.event_messages import magnify_twice
 from polewise.circuit.expand import expand
 from polewise.circuit.load import Sources, load_files, load_text
 from polewise.circuit.model import Circuit, Quantity, StudyDef
@@ -22,7 +23,7 @@ from polewise.results.result import Result, RunFacts
 from polewise.results.study_run import Nothing, Progress, RunWishes, Sampling, StudyPlan, carry_out, equations_of, find_point, finished
 
 if TYPE_CHECKING:
-    from polewise.analysis.edge_window import WindowTask
+    from polewise.analysis.edge_window import WindowRun, WindowTask
     from polewise.analysis.handover import StateSpace
     from polewise.analysis.impedance import Impedance
     from polewise.analysis.limits import StabilityLimit
@@ -308,6 +309,13 @@ class System:
 
         plan = self.plan(study, keep=keep, sampling=sampling)
         sink = MemorySink(plan.record.columns)
+        if plan.study.magnifies is not None:
+            from polewise.analysis.magnified import edge_window
+
+            window = self._magnified(plan, sink, RunWishes(tolerance, progress, at, should_stop))
+            if window.facts.trouble is not None and on_failure == "raise":
+                raise window.facts.trouble
+            return edge_window(plan, window, sink.finish())
         outcome = self.carry_out(plan, sink, tolerance=tolerance, progress=progress, at=at, should_stop=should_stop)
         if outcome.trouble is not None and on_failure == "raise":
             raise outcome.trouble
@@ -343,16 +351,23 @@ class System:
         """
         from dataclasses import replace
 
-        from polewise.analysis.edge_window import PREROLL_PERIODS, WindowTask
-        from polewise.analysis.magnified import check_window, magnify
+        from polewise.analysis.edge_window import PREROLL_PERIODS, WindowTask, carry_out_window
+        from polewise.analysis.magnified import check_window, edge_window, with_stress
+        from polewise.results.recording import MemorySink
 
         plan = self.plan(study, keep=keep)
+        if plan.study.magnifies is not None:
+            raise NetlistError([magnify_twice(plan.study.span, study)])
         check_window(begin, end, plan.study.run_for_s, study)
-        plan = replace(plan, record=replace(plan.record, judged=()))
+        plan = with_stress(replace(plan, record=replace(plan.record, judged=())))
         task = WindowTask(plan, study, begin, end, PREROLL_PERIODS if preroll_periods is None else preroll_periods)
         wishes = RunWishes(tolerance, progress, (), should_stop)
         until, cold = self._averaged_until(task, wishes)
-        return magnify(task, wishes, self._lock, until, cold=cold)
+        sink = MemorySink(plan.record.columns)
+        run = carry_out_window(task, sink, wishes, self._lock, until, cold=cold)
+        if run.facts.trouble is not None:
+            raise run.facts.trouble
+        return edge_window(plan, run, sink.finish())
 
     def magnify_settled(self, *, keep: Sequence[str] | None = None, periods: int = 1, tolerance: float = 1e-10) -> EdgeWindow:
         """The periodic steady state with every edge at the operating point, by shooting.
@@ -384,12 +399,21 @@ class System:
 
     # ------------------------------------------------------------ small-signal
 
-    def modes(self, *, at: Place | None = None, sensitivities: bool = True) -> Modes:
+    def modes(
+        self,
+        *,
+        at: Place | None = None,
+        sensitivities: bool = True,
+        region: tuple[float, float, float] | None = None,
+        count: int = 20,
+    ) -> Modes:
         """Modes with participation, and the elements that move their damping.
 
         Args:
             at: (study, time in s); None: the operating point.
-            sensitivities: whether elements are ranked; large systems are faster without.
+            sensitivities: whether elements are ranked.
+            region: for large systems: oscillations from one frequency (Hz) to another with a damping ratio below the third value; of these the
+                `count` least damped ones, clusters with their sizes, without a ranking of elements.
 
         >>> tank = from_text('''
         ... title "Tank"
@@ -401,9 +425,12 @@ class System:
         >>> tank.modes()[0].eigenvalue.imag.__round__(6)
         7000.0
         """
+        from polewise.analysis.large_modes import Region, modes_in_region
         from polewise.analysis.modes import find_modes
 
         with self._lock:
+            if region is not None:
+                return modes_in_region(self._stand(at), Region(*region), count)
             return find_modes(self._stand(at), sensitivities=sensitivities)
 
     def response(
@@ -534,10 +561,19 @@ class System:
 
         prepared = self._prepared_for(study)
         definition = prepared.circuit.studies[study]
+        stretch, period_s = definition.magnifies, None
+        if stretch is not None:
+            prepared = self._prepared_for(stretch.study)
+            definition = prepared.circuit.studies[study]
+            from polewise.analysis.magnified import ripple_period_s, with_stress
+
+            period_s = ripple_period_s(prepared.circuit)
         with self._lock:
             kept: Sequence[Quantity] = definition.keep if keep is None else [q for name in keep for q in selected_quantities(prepared.circuit, name)]
-            record = plan_recording(prepared.circuit.graph, kept or default_quantities(prepared.circuit), definition.requirements)
-        return StudyPlan(definition, prepared.circuit, prepared.network, record, sampling or definition.sampling)
+            kept = kept or default_quantities(prepared.circuit)
+            record = plan_recording(prepared.circuit.graph, kept, definition.requirements, ripple_period_s=period_s)
+            plan = StudyPlan(definition, prepared.circuit, prepared.network, record, sampling or definition.sampling)
+            return plan if stretch is None else with_stress(plan)
 
     def carry_out(
         self,
@@ -559,7 +595,21 @@ class System:
             NoOperatingPoint, StartFailure: there was nothing to begin from.
         """
         wishes = RunWishes(tolerance, progress, at, should_stop)
+        if plan.study.magnifies is not None:
+            return self._magnified(plan, sink, wishes).facts
         return carry_out(plan, sink, wishes, self._inputs, self._lock, self._before(plan.study, wishes))[0]
+
+    def _magnified(self, plan: StudyPlan, sink: Sink, wishes: RunWishes) -> WindowRun:
+        """Carry out a study that magnifies another one."""
+        from polewise.analysis.edge_window import WindowTask, carry_out_window
+        from polewise.analysis.magnified import check_window
+
+        stretch = plan.study.magnifies
+        assert stretch is not None
+        check_window(stretch.begin_s, stretch.end_s, plan.circuit.studies[stretch.study].run_for_s, stretch.study, stretch.span)
+        task = WindowTask(plan, stretch.study, stretch.begin_s, stretch.end_s)
+        until, cold = self._averaged_until(task, wishes)
+        return carry_out_window(task, sink, wishes, self._lock, until, cold=cold)
 
     def _before(self, study: StudyDef, wishes: RunWishes) -> Snapshot | None:
         """Where the study that this one starts from stands at its time. Reading has made sure that no study starts from itself."""

@@ -100,6 +100,8 @@ def _line(statement: s.Statement | s.Order) -> str:
             return _require(statement)
         case s.Analysis():
             return _analysis(statement)
+        case s.Magnify():
+            return f"magnify {statement.study} over {_expression(statement.low, _SUM)} .. {_expression(statement.high, _SUM)}"
         case _:
             return _declaration(statement)
 

@@ -515,7 +515,8 @@ def unknown_order(span: Span, word: str, nearest: str | None) -> Diagnostic:
     """`frobnicate` inside a study."""
     hint = (
         _nearest(nearest)
-        or "A study holds start, run for, keep, require, at, every, whenever, given, tolerance, sampling, modes, loop, response and impedance."
+        or "A study holds start, run for, keep, require, at, every, whenever, given, tolerance, sampling, modes, loop, response, impedance "
+        "and magnify."
     )
     return _error("unknown-order", f"`{word}` is no order of a study", span, hint=hint, mended=nearest)
 

@@ -603,6 +603,17 @@ class Analysis:
 
 
 @dataclass(frozen=True, slots=True)
+class Magnify:
+    """`magnify STUDY over T1 .. T2`: that stretch of a study with every switching edge."""
+
+    span: Span
+    study: str
+    study_span: Span
+    low: Expression
+    high: Expression
+
+
+@dataclass(frozen=True, slots=True)
 class Study:
     """`study name { … }`. Orders also hold At, Every, Whenever and Given."""
 
@@ -613,7 +624,7 @@ class Study:
     orders: tuple[Order, ...]
 
 
-Order: TypeAlias = Start | RunFor | Keep | StudyTolerance | Sampling | Require | At | Every | Whenever | Given | Analysis
+Order: TypeAlias = Start | RunFor | Keep | StudyTolerance | Sampling | Require | At | Every | Whenever | Given | Analysis | Magnify
 
 Statement: TypeAlias = (
     Title

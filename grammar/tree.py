@@ -455,7 +455,7 @@ class Builder:
     def study(self, start: int, end: int, name: Token, document: Token | None, *orders: s.Order) -> s.Study:
         seen: dict[type, Span] = {}
         for order in orders:
-            if isinstance(order, s.Start | s.RunFor | s.StudyTolerance | s.Sampling):
+            if isinstance(order, s.Start | s.RunFor | s.StudyTolerance | s.Sampling | s.Magnify):
                 if type(order) in seen:
                     self.diagnostics.append(messages.order_twice(order.span, order.span.text.split()[0], seen[type(order)]))
                 seen[type(order)] = order.span
@@ -536,6 +536,9 @@ class Builder:
         place: s.Place | None,
     ) -> s.Analysis:
         return s.Analysis(self._span(start, end), "impedance", (d, q), None, low, high, source or (), load or (), place)
+
+    def magnify(self, start: int, end: int, study: Token, low: s.Expression, high: s.Expression) -> s.Magnify:
+        return s.Magnify(self._span(start, end), study.text, self._of(study), low, high)
 
     def source_side(self, start: int, end: int, items: tuple[s.Reference, ...]) -> tuple[s.Reference, ...]:
         return items

@@ -14,10 +14,10 @@ OPENERS = frozenset(
 # Words of expressions; never names, because an expression can begin or go on with them.
 EXPRESSION_WORDS = {"and": "AND", "or": "OR", "not": "NOT", "true": "TRUE", "false": "FALSE", "if": "IF", "otherwise": "OTHERWISE"}
 # Words that open an order, a step or an action; a name wherever those can't stand.
-ORDER_WORDS = ("start", "run", "keep", "tolerance", "sampling", "require", "modes", "loop", "response", "impedance")
+ORDER_WORDS = ("start", "run", "keep", "tolerance", "sampling", "require", "modes", "loop", "response", "impedance", "magnify")
 ACTION_WORDS = ("set", "open", "close")
 # Orders that may come later; a study that asks for one is told so.
-LATER_ORDERS = frozenset({"magnify", "vary"})
+LATER_ORDERS = frozenset({"vary"})
 STATEMENT_WORDS = frozenset((*ORDER_WORDS, *ACTION_WORDS, "step"))
 # Words inside statements, with their terminals; a name wherever they can't stand.
 SOFT_WORDS = {

@@ -189,33 +189,3 @@ def cycle_average(
         fits = np.isfinite(mean)
         return at[fits], mean[fits]
     return at, mean
-
-
-def cut_at(curve: Curve, times: FloatArray) -> Curve:
-    """The same curve with its pieces divided at some instants, so that each piece lies in one interval between them."""
-    start, stop = curve.start, curve.start + curve.length
-    cuts = times[(times > curve.begin_s) & (times < curve.end_s)]
-    k = np.clip(np.searchsorted(start, cuts, side="right") - 1, 0, start.size - 1)
-    inside = (cuts - start[k] > 1e-12 * curve.length[k]) & (stop[k] - cuts > 1e-12 * curve.length[k])
-    cuts, k = cuts[inside], k[inside]
-    if not cuts.size:
-        return curve
-    new_start = np.concatenate([start, cuts])
-    owner = np.concatenate([np.arange(start.size), k])
-    order = np.lexsort((new_start, owner))
-    new_start, owner = new_start[order], owner[order]
-    new_stop = np.append(new_start[1:], stop[-1])
-    ends_here = np.append(owner[1:] != owner[:-1], True)
-    new_stop = np.where(ends_here, stop[owner], new_stop)
-    length = new_stop - new_start
-    low, width = (new_start - start[owner]) / curve.length[owner], length / curve.length[owner]
-    c0, c1, c2, c3 = curve.coefficient[owner].T
-    coefficient = np.column_stack(
-        [
-            c0 + low * (c1 + low * (c2 + low * c3)),
-            width * (c1 + low * (2.0 * c2 + low * 3.0 * c3)),
-            width * width * (c2 + 3.0 * low * c3),
-            width**3 * c3,
-        ]
-    )
-    return Curve(new_start, length, coefficient)

@@ -59,9 +59,9 @@ class WaveformRefused(PolewiseError):
     exit_code = EXIT_NETLIST_WRONG
 
 
-def waveform_refused(headline: str, hint: str | None = None, code: str = "waveform") -> WaveformRefused:
+def waveform_refused(headline: str, hint: str | None = None) -> WaveformRefused:
     """A WaveformRefused with one diagnostic."""
-    return WaveformRefused([Diagnostic(code, Severity.ERROR, headline, no_span(), hint=hint)])
+    return WaveformRefused([Diagnostic("waveform", Severity.ERROR, headline, no_span(), hint=hint)])
 
 
 class EdgesRefused(PolewiseError):
@@ -70,6 +70,6 @@ class EdgesRefused(PolewiseError):
     exit_code = EXIT_NETLIST_WRONG
 
 
-def edges_refused(headline: str, hint: str | None = None, code: str = "no-edges") -> EdgesRefused:
+def edges_refused(headline: str, hint: str | None = None, span: Span | None = None) -> EdgesRefused:
     """An EdgesRefused with one diagnostic."""
-    return EdgesRefused([Diagnostic(code, Severity.ERROR, headline, no_span(), hint=hint)])
+    return EdgesRefused([Diagnostic("no-edges", Severity.ERROR, headline, span or no_span(), hint=hint)])

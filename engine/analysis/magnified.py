@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import threading
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from contextlib import AbstractContextManager
 from dataclasses import replace
 from typing import TYPE_CHECKING
@@ -12,7 +12,7 @@ import numpy as np
 
 from polewise.analysis.carriers import Carriers, carriers_of
 from polewise.analysis.cycle_average import Window, average_curve
-from polewise.analysis.edge_window import Stretch, WindowFacts, WindowRun, WindowTask, carry_out_window
+from polewise.analysis.edge_window import Stretch, WindowFacts, WindowRun
 from polewise.analysis.failures import edges_refused
 from polewise.analysis.overlay import Overlay, overlay
 from polewise.analysis.periodic import find_periodic, resting_snapshot
@@ -20,16 +20,16 @@ from polewise.analysis.point import ComplexArray
 from polewise.analysis.stress import StressTable, stress_columns, stress_quantities, stress_table
 from polewise.circuit.model import Circuit, Quantity
 from polewise.equations.assemble import assemble
+from polewise.grammar.source import Span
 from polewise.grammar.units import TIME, format_value
 from polewise.network.graph import Network
 from polewise.results.curve import Curve
 from polewise.results.plan import RecordPlan
 from polewise.results.recording import Column, MemorySink, Recording, recorded_curve
 from polewise.results.result import Record, Result, RunFacts
-from polewise.results.study_run import COUNTERS_TOLD, RunWishes, StudyPlan
+from polewise.results.study_run import COUNTERS_TOLD, StudyPlan
 from polewise.results.verdict import Verdict, judge
 from polewise.solve import transient
-from polewise.solve.initial import Snapshot
 from polewise.solve.operating_point import find_operating_point
 from polewise.solve.problem import build_problem
 
@@ -139,7 +139,7 @@ def with_stress(plan: StudyPlan) -> StudyPlan:
     return replace(plan, record=RecordPlan((*record.outputs, *more), (*record.columns, *columns), record.judged))
 
 
-def check_window(begin_s: float, end_s: float, length_s: float | None, study: str) -> None:
+def check_window(begin_s: float, end_s: float, length_s: float | None, study: str, span: Span | None = None) -> None:
     """Refuse a window that is none or lies outside its study.
 
     Raises:
@@ -148,26 +148,27 @@ def check_window(begin_s: float, end_s: float, length_s: float | None, study: st
     if not 0.0 <= begin_s < end_s:
         raise edges_refused(f"a window from {format_value(begin_s, TIME)} to {format_value(end_s, TIME)} is empty")
     if length_s is not None and end_s > length_s * (1.0 + 1e-9):
-        raise edges_refused(f"the window ends at {format_value(end_s, TIME)}, after the end of `{study}` at {format_value(length_s, TIME)}")
+        raise edges_refused(
+            f"the window ends at {format_value(end_s, TIME)}, after the end of `{study}` at {format_value(length_s, TIME)}", span=span
+        )
 
 
-def magnify(
-    task: WindowTask,
-    wishes: RunWishes,
-    guard: AbstractContextManager[object],
-    averaged_until: Callable[[float], Snapshot | None],
-    *,
-    cold: bool,
-) -> EdgeWindow:
-    """Run a window and put its result together; arguments as for carry_out_window."""
-    task = replace(task, plan=with_stress(task.plan))
-    sink = MemorySink(task.plan.record.columns)
-    run: WindowRun = carry_out_window(task, sink, wishes, guard, averaged_until, cold=cold)
-    if run.facts.trouble is not None:
-        raise run.facts.trouble
-    recording = sink.finish()
-    verdict = judge(task.plan.study.name, task.plan.record.judged, recording, planned_end_s=run.facts.planned_s, reached_s=run.facts.reached_s)
-    return EdgeWindow(recording, verdict, run.facts, run.window, run.averaged, task.plan.circuit)
+def ripple_period_s(circuit: Circuit) -> float:
+    """The period that a requirement's ripple is looked for in: of the slowest pole.
+
+    Raises:
+        EdgesRefused: nothing switches.
+    """
+    carriers = carriers_of(circuit)
+    if carriers is None:
+        raise edges_refused("the circuit has no pole, so nothing in it switches", "an ordinary run shows all there is")
+    return carriers.longest_s
+
+
+def edge_window(plan: StudyPlan, run: WindowRun, recording: Recording) -> EdgeWindow:
+    """Put a window's result together and judge its requirements."""
+    verdict = judge(plan.study.name, plan.record.judged, recording, planned_end_s=run.facts.planned_s, reached_s=run.facts.reached_s)
+    return EdgeWindow(recording, verdict, run.facts, run.window, run.averaged, plan.circuit)
 
 
 def magnify_settled(

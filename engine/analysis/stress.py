@@ -14,11 +14,10 @@ from typing import Final
 import numpy as np
 
 from polewise.analysis.carriers import Carriers
-from polewise.analysis.cycle_average import cut_at
 from polewise.circuit.model import Circuit, Domain, Law, Quantity
 from polewise.devices.kind import PartValue
 from polewise.grammar import units
-from polewise.results.curve import AFTER, Curve, FloatArray
+from polewise.results.curve import AFTER, Curve
 from polewise.results.recording import Column, Recording, recorded_curve
 
 PASSIVE: Final[Mapping[Law, str]] = {Law.RESISTANCE: "resistor", Law.CONDUCTANCE: "resistor", Law.CHARGE: "capacitor", Law.FLUX: "inductor"}
@@ -218,26 +217,7 @@ class _Maker:
         (high, high_s), (low, low_s) = curve.highest(), curve.lowest()
         duration = max(curve.duration_s(), 1e-300)
         rms = float(np.sqrt(max(0.0, curve.square_integral() / duration)))
-        return Waveform(ripple_of(curve, period_s), high, high_s, low, low_s, curve.integral() / duration, rms)
-
-
-def ripple_of(curve: Curve, period_s: float) -> float:
-    """Largest peak-to-peak value within one of the periods that the curve is divided into from its begin; a last part period counts only where
-    it is the only one."""
-    begin, end = curve.begin_s, curve.end_s
-    whole = int(np.floor((end - begin) / period_s * (1.0 + 1e-9)))
-    if whole < 1:
-        return curve.highest()[0] - curve.lowest()[0]
-    cuts: FloatArray = begin + period_s * np.arange(1, whole + 1, dtype=np.float64)
-    parts = cut_at(curve, cuts)
-    low, high = parts.piece_ranges()
-    number = np.floor((parts.start + 0.5 * parts.length - begin) / period_s).astype(np.int64)
-    inside = (number >= 0) & (number < whole)
-    lows, highs = np.full(whole, np.inf), np.full(whole, -np.inf)
-    np.minimum.at(lows, number[inside], low[inside])
-    np.maximum.at(highs, number[inside], high[inside])
-    swing: FloatArray = highs - lows
-    return float(np.max(swing[np.isfinite(swing)], initial=0.0))
+        return Waveform(curve.ripple(period_s)[0], high, high_s, low, low_s, curve.integral() / duration, rms)
 
 
 def product_integral(a: Curve, b: Curve) -> float:

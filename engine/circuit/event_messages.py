@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 from polewise.circuit.dimensions import Quality, describe
 from polewise.circuit.message_form import article, at, declared_at, error, meant, number_text, warning
-from polewise.grammar.diagnostics import Diagnostic
+from polewise.grammar.diagnostics import Diagnostic, Label
 from polewise.grammar.source import Span
 
 # ---------------------------------------------------------------- events
@@ -98,6 +98,19 @@ def requirement_without_bound(span: Span, subject: Span) -> Diagnostic:
     """require bus.v."""
     hint = f"Write `{subject.text} within … .. …`, `above …` or `below …`."
     return error("requirement-bound", "a requirement on a number needs its bound", span, hint=hint)
+
+
+def magnify_with(span: Span, order: Span, study: str) -> Diagnostic:
+    """`run for` beside `magnify`."""
+    hint = f"Start, length, events and givens are those of `{study}`."
+    return error(
+        "magnify-with", "a study that magnifies another one runs nothing of its own", span, labels=[Label(order, "it magnifies here")], hint=hint
+    )
+
+
+def magnify_twice(span: Span, study: str) -> Diagnostic:
+    """magnify a study that itself magnifies."""
+    return error("magnify-twice", f"`{study}` is itself a magnified stretch", span, hint="Name the study that it magnifies.")
 
 
 def requirement_subject(span: Span, measure: str, takes: str) -> Diagnostic:

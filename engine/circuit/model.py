@@ -389,6 +389,16 @@ class AnalysisOrder:
 
 
 @dataclass(frozen=True, slots=True)
+class MagnifiedStretch:
+    """`magnify STUDY over T1 .. T2`: a stretch of another study, s of its time, to be run with every switching edge."""
+
+    study: str
+    begin_s: float
+    end_s: float
+    span: Span
+
+
+@dataclass(frozen=True, slots=True)
 class StudyDef:
     """A study as read; its own givens are applied by expanding the circuit for it."""
 
@@ -409,6 +419,7 @@ class StudyDef:
     span: Span
     analyses: tuple[AnalysisOrder, ...] = ()
     analysis_requirements: tuple[Requirement, ...] = ()  # on small-signal answers; measure: a name of circuit.analyses
+    magnifies: MagnifiedStretch | None = None  # then it runs nothing of its own
 
     @property
     def asks_analysis(self) -> bool:

@@ -14,7 +14,7 @@ from polewise.circuit.dimensions import CONDITION, PLAIN, POISON, TIME, Quality,
 from polewise.circuit.events import finish_event
 from polewise.circuit.expansion import Expansion
 from polewise.circuit.functions import BUILT_IN
-from polewise.circuit.model import AnalysisOrder, ClockEvent, ConditionEvent, Quantity, Requirement, StudyDef, TimeEvent
+from polewise.circuit.model import AnalysisOrder, ClockEvent, ConditionEvent, MagnifiedStretch, Quantity, Requirement, StudyDef, TimeEvent
 from polewise.circuit.naming import find_thing, has_star, selected
 from polewise.circuit.near import nearest
 from polewise.circuit.scope import Env
@@ -27,6 +27,8 @@ from polewise.grammar.source import Span
 TOLERANCE_LOOSEST: Final = 0.1
 TOLERANCE_TIGHTEST: Final = 1e-13
 STARTS: Final = ("settled", "cold", "from")
+# Orders of a study that runs; one that magnifies another has none of them.
+_OF_A_RUN: Final = (syntax.Start, syntax.RunFor, syntax.At, syntax.Every, syntax.Whenever, syntax.Given, syntax.Sampling, syntax.Analysis)
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,6 +51,7 @@ MEASURES: Final[Mapping[str, MeasureRule]] = {
         MeasureRule("overshoot", (), lambda q: PLAIN, "how far x goes beyond its final value, as a share of its whole change"),
         MeasureRule("peak", (), lambda q: q, "the largest value"),
         MeasureRule("lowest", (), lambda q: q, "the smallest value"),
+        MeasureRule("ripple", (), lambda q: q, "the largest peak-to-peak value within a switching period; of a study that magnifies"),
         MeasureRule("swing", (), lambda q: q, "largest minus smallest value"),
         MeasureRule("mean", (), lambda q: q, "the average over time"),
         MeasureRule("rms", (), lambda q: q, "the root of the average square over time"),
@@ -114,6 +117,7 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
     keep: list[Quantity] = []
     requirements: list[Requirement] = []
     analyses: list[AnalysisOrder] = []
+    magnifies: MagnifiedStretch | None = None
     analysis_requirements: list[Requirement] = []
     times: list[TimeEvent] = []
     clocks: list[ClockEvent] = []
@@ -142,11 +146,14 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
             asked = finish_analysis(x, order, env)
             if asked is not None:
                 analyses.append(asked)
+        elif isinstance(order, syntax.Magnify):
+            magnifies = _stretch(x, written, order, env) or magnifies
         elif isinstance(order, syntax.At | syntax.Every | syntax.Whenever):
             finish_event(x, order, env, (times, clocks, conditions))
         elif not isinstance(order, syntax.Given):
             x.report.add(file_messages.not_yet(order.span, f"`{order.span.text.split()[0]}`"))
-    _check_times(x, written, run_for, times, requirements)
+    if not any(isinstance(order, syntax.Magnify) for order in written.orders):
+        _check_times(x, written, run_for, times, requirements)
     return StudyDef(
         written.name,
         written.document,
@@ -165,7 +172,29 @@ def finish_study(x: Expansion, thing: StudyThing) -> StudyDef:
         thing.span,
         tuple(analyses),
         tuple(analysis_requirements),
+        magnifies,
     )
+
+
+def _stretch(x: Expansion, study: syntax.Study, order: syntax.Magnify, env: Env) -> MagnifiedStretch | None:
+    """A stretch to be magnified. The study that asks for it runs nothing of its own."""
+    own = next((o for o in study.orders if isinstance(o, _OF_A_RUN)), None)
+    target = x.studies_by_name.get(order.study)
+    if own is not None:
+        x.report.add(event_messages.magnify_with(own.span, order.span, order.study))
+    if target is None:
+        x.report.add(event_messages.unknown_study(order.study_span, order.study, nearest(order.study, x.studies_by_name)))
+        return None
+    if any(isinstance(o, syntax.Magnify) for o in target.written.orders):
+        x.report.add(event_messages.magnify_twice(order.study_span, order.study))
+        return None
+    begin, end = positive_time(x, order.low, env, "`over`", zero=True), positive_time(x, order.high, env, "`over`", zero=False)
+    if begin is None or end is None:
+        return None
+    if begin >= end:
+        x.report.add(value_messages.bounds_swapped(order.low.span.to(order.high.span), "over"))
+        return None
+    return MagnifiedStretch(order.study, begin, end, order.span)
 
 
 def _start_time(x: Expansion, study: syntax.Study, order: syntax.Start, env: Env) -> float | None:
@@ -174,6 +203,8 @@ def _start_time(x: Expansion, study: syntax.Study, order: syntax.Start, env: Env
         x.report.add(event_messages.study_from_itself(order.span, study.name))
     elif order.study not in x.studies_by_name:
         x.report.add(event_messages.unknown_study(order.span, order.study, nearest(order.study, x.studies_by_name)))
+    elif any(isinstance(o, syntax.Magnify) for o in x.studies_by_name[order.study].written.orders):
+        x.report.add(event_messages.magnify_twice(order.span, order.study))
     elif _study_circle(x, study.name):
         x.report.add(event_messages.study_from_itself(order.span, study.name))
     return None if order.time is None else positive_time(x, order.time, env, "`at`", zero=True)

@@ -143,6 +143,46 @@ class Curve:
         kept = length > 0.0
         return Curve(start[kept], length[kept], coefficient[kept])
 
+    def cut_at(self, times: FloatArray) -> Curve:
+        """The same curve with its pieces divided at some instants, so that each piece lies in one interval between them."""
+        stop = self.start + self.length
+        cuts = times[(times > self.begin_s) & (times < self.end_s)]
+        k = np.clip(np.searchsorted(self.start, cuts, side="right") - 1, 0, self.start.size - 1)
+        inside = (cuts - self.start[k] > 1e-12 * self.length[k]) & (stop[k] - cuts > 1e-12 * self.length[k])
+        cuts, k = cuts[inside], k[inside]
+        if not cuts.size:
+            return self
+        start, owner = np.concatenate([self.start, cuts]), np.concatenate([np.arange(self.start.size), k])
+        order = np.lexsort((start, owner))
+        start, owner = start[order], owner[order]
+        ends_here = np.append(owner[1:] != owner[:-1], True)
+        length = np.where(ends_here, stop[owner], np.append(start[1:], stop[-1])) - start
+        low, width = (start - self.start[owner]) / self.length[owner], length / self.length[owner]
+        return Curve(start, length, _reparametrised(self.coefficient[owner].T, low, width).T.copy())
+
+    def ripple(self, period_s: float) -> tuple[float, float]:
+        """Largest peak-to-peak value within one of the periods that the curve is divided into from its begin, and when that period's peak is.
+
+        A last part of a period counts only where it is the only one.
+        """
+        begin, end = self.begin_s, self.end_s
+        whole = int(np.floor((end - begin) / period_s * (1.0 + 1e-9)))
+        if whole < 1:
+            top, when = self.highest()
+            return top - self.lowest()[0], when
+        cuts: FloatArray = begin + period_s * np.arange(1, whole + 1, dtype=np.float64)
+        parts = self.cut_at(cuts)
+        low, high = parts.piece_ranges()
+        number = np.floor((parts.start + 0.5 * parts.length - begin) / period_s).astype(np.int64)
+        inside = (number >= 0) & (number < whole)
+        lows, highs = np.full(whole, np.inf), np.full(whole, -np.inf)
+        np.minimum.at(lows, number[inside], low[inside])
+        np.maximum.at(highs, number[inside], high[inside])
+        swing = np.where(np.isfinite(lows) & np.isfinite(highs), highs - lows, -np.inf)
+        k = int(np.argmax(swing))
+        part = self.window(begin + k * period_s, begin + (k + 1) * period_s)
+        return float(max(swing[k], 0.0)), part.highest()[1]
+
     def at(self, times: FloatArray) -> FloatArray:
         """Values at times, shape as given; at a jump the value just after it; NaN outside the curve."""
         times = np.asarray(times, dtype=np.float64)
@@ -283,8 +323,8 @@ def _horner(c: FloatArray, u: FloatArray) -> FloatArray:
     return result
 
 
-def _reparametrised(c: FloatArray, low: float, width: float) -> FloatArray:
-    """Coefficients of p(low + width * v) in powers of v."""
+def _reparametrised(c: FloatArray, low: float | FloatArray, width: float | FloatArray) -> FloatArray:
+    """Coefficients of p(low + width * v) in powers of v; c: shape (4,), or (4, k) with low, width of shape (k,)."""
     c0, c1, c2, c3 = c
     return np.array(
         [

@@ -90,6 +90,13 @@ def _swing(given: MeasureInput) -> Measured:
     return Measured(high - low, max(high_s, low_s))
 
 
+def _ripple(given: MeasureInput) -> Measured:
+    """Largest minus smallest value within a switching period, the largest of all periods."""
+    (period_s,) = given.parameters
+    value, when = given.curve.ripple(period_s)
+    return Measured(value, when)
+
+
 def _mean(given: MeasureInput) -> Measured:
     """The average over time."""
     return Measured(given.curve.integral() / given.curve.duration_s())
@@ -121,6 +128,7 @@ MEASURES: Mapping[str, Measure] = {
         _measure("overshoot", _overshoot),
         _measure("peak", _peak),
         _measure("lowest", _lowest),
+        _measure("ripple", _ripple),
         _measure("swing", _swing),
         _measure("mean", _mean),
         _measure("rms", _rms),

@@ -3,23 +3,29 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from polewise.circuit.model import Quantity, Requirement
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.results.recording import Column
+
+# Readings of a pole's devices: what they are within a period, their averages do not tell.
+DEVICE_READINGS = ("upper_i", "lower_i", "upper_v", "lower_v")
+_STRESS_MEASURES = ("value", "peak", "lowest", "swing", "rms")
+_ASK_EDGES = "ask it in a study with `magnify STUDY over T1 .. T2`, which runs every switching edge"
 
 Limit = float | str | None  # a constant in SI, the column of a limit that varies, or no limit
 
 
 @dataclass(frozen=True, slots=True)
 class Judged:
-    """A requirement with the columns it reads."""
+    """A requirement with the columns it reads; unknowable: why an averaged run can't answer it, "" where it can."""
 
     requirement: Requirement
     subject: str
     low: Limit
     high: Limit
+    unknowable: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,13 +37,16 @@ class RecordPlan:
     judged: tuple[Judged, ...]
 
 
-def plan_recording(graph: ExpressionGraph, keep: Sequence[Quantity], requirements: Sequence[Requirement]) -> RecordPlan:
+def plan_recording(
+    graph: ExpressionGraph, keep: Sequence[Quantity], requirements: Sequence[Requirement], *, ripple_period_s: float | None = None
+) -> RecordPlan:
     """Choose the columns.
 
     Args:
         graph: of the circuit, for constant limits.
         keep: what was asked for.
         requirements: of the study.
+        ripple_period_s: of a run with every switching edge: the period that a ripple is looked for in; None for an averaged run.
     """
     builder = _Builder()
     for quantity in keep:
@@ -47,8 +56,25 @@ def plan_recording(graph: ExpressionGraph, keep: Sequence[Quantity], requirement
         subject = builder.add(requirement.subject, "judged")
         low = builder.limit(graph, requirement, requirement.low, "lower limit")
         high = builder.limit(graph, requirement, requirement.high, "upper limit")
-        judged.append(Judged(requirement, subject, low, high))
+        why = ""
+        if ripple_period_s is None:
+            why = _unknowable(graph, requirement)
+        elif requirement.measure == "ripple":
+            requirement = replace(requirement, parameters=(ripple_period_s,))
+        judged.append(Judged(requirement, subject, low, high, why))
     return RecordPlan(tuple(builder.outputs), tuple(builder.columns), tuple(judged))
+
+
+def _unknowable(graph: ExpressionGraph, requirement: Requirement) -> str:
+    """Why an average can't answer a requirement: it asks for ripple, or for the peak stress of a pole's device."""
+    if requirement.measure == "ripple":
+        return f"an average has no ripple; {_ASK_EDGES}"
+    if requirement.measure not in _STRESS_MEASURES:
+        return ""
+    read = (graph.symbols[s] for s in graph.symbols_under([requirement.subject.expression]))
+    if any(kind == "reading" and name.rpartition(".")[2] in DEVICE_READINGS for kind, name in read):
+        return f"the stress of a device is no average; {_ASK_EDGES}"
+    return ""
 
 
 class _Builder:

@@ -62,6 +62,8 @@ class StudyPlan:
         Raises:
             NetlistError: the study does not say.
         """
+        if self.study.magnifies is not None:
+            return self.study.magnifies.end_s
         if self.study.run_for_s is None and self.study.asks_analysis:
             return 0.0  # nothing to run: small-signal answers at the operating point
         if self.study.run_for_s is None:

@@ -157,7 +157,9 @@ def _judge_one(one: Judged, recording: Recording, planned_end_s: float, reached_
     wanted_end_s = planned_end_s if requirement.window_s[1] is None else requirement.window_s[1]
     seen_s = min(wanted_end_s, reached_s)
     whole = reached_s >= wanted_end_s * (1.0 - 1e-12)
-    if begin_s > wanted_end_s or begin_s > planned_end_s:
+    if one.unknowable:
+        finding = _unseen(one.unknowable)
+    elif begin_s > wanted_end_s or begin_s > planned_end_s:
         finding = _unseen(f"its window opens at {_time(begin_s)}, after the study's end at {_time(planned_end_s)}")
     elif begin_s > seen_s or (begin_s == seen_s and not whole):
         finding = _unseen(f"the study stopped at {_time(reached_s)}, before the window opened at {_time(begin_s)}")
