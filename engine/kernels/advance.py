@@ -5,9 +5,12 @@ One turn of the loop: fire clocks that are due, choose the step's size, attempt 
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.clocks import fire_clocks_c, next_rank_c, next_tick_c
 from polewise.kernels.history import (
     BREAK_LEVEL_TICK,
@@ -43,18 +46,19 @@ from polewise.kernels.layout import (
     SIZE_RECORD,
     SIZE_S,
 )
-from polewise.kernels.locate import LOCATED_AT_START, find_candidates_c, flip_at_event_c, locate_c
+from polewise.kernels.locate import LOCATED, LOCATED_AT_START, find_candidates_c, flip_at_event_c, locate_c
 from polewise.kernels.opcodes import Status
 from polewise.kernels.program import Program
 from polewise.kernels.record import record_point_c, record_step_c
 from polewise.kernels.restart import restart_c
 from polewise.kernels.stamp import STAMP
-from polewise.kernels.step import attempt_step_c
+from polewise.kernels.step import START_NOT_FINITE, attempt_step_c
 from polewise.kernels.tape import WHOLE, segment_three_c
 from polewise.kernels.workspace import (
     FLAG_AFTER,
     FLAG_BEFORE,
     FLAG_STEP,
+    N_AFTER_TICK,
     N_BREAKS,
     N_FIRST,
     N_HAVE_STAGES,
@@ -78,6 +82,7 @@ from polewise.kernels.workspace import (
     S_H_LAST,
     S_H_MAX,
     S_H_MIN,
+    S_H_TICK,
     S_NEWTON_ITERATIONS,
     S_RECORD_EVERY,
     S_RECORD_T,
@@ -93,6 +98,8 @@ HISTORY_FULL = int(Status.HISTORY_FULL)
 FACTORS_FULL = int(Status.FACTORS_FULL)
 STEP_TOO_SMALL = int(Status.STEP_TOO_SMALL)
 NO_CONVERGENCE = int(Status.NO_CONVERGENCE)
+SINGULAR = int(Status.SINGULAR)
+NOT_FINITE = int(Status.NOT_FINITE)
 STEP_LIMIT = int(Status.STEP_LIMIT)
 STOPPED = int(Status.STOPPED)
 
@@ -103,6 +110,8 @@ SHRINK_MIN = 0.2
 NEWTON_NOMINAL = 7  # slow convergence lowers the safety factor: (2 N + 1) / (2 N + iterations)
 KEEP_STEP_BELOW = 1.2  # a wish to grow by less keeps the step and its factors
 KEEP_JACOBIAN_RATE = 1e-3  # slower convergence than this renews the Jacobian for the next step
+EQUAL_STEPS = 8.0  # what is left to a fixed instant is cut into equal steps when it takes at most so many: they share their factors
+STRETCH = 1.08  # and may be this much longer than wished for: less than the safety factor leaves free
 NEWTON_SHRINK = 0.25  # after a failed Newton iteration
 FIRST_REJECTED_SHRINK = 0.1  # a step just after a jump is a guess: reject boldly
 FIRST_REJECTED_ERROR = 1e4  # when its error is beyond this
@@ -114,8 +123,8 @@ SMALL_JUMP = 1e-2  # a sample instant that moves no unknown by more, against |x|
 DELAY_JUMP = 1e-12  # a relative change of a delayed parameter that counts as a jump
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(inline="always")
     def next_size(F, W, h):
         """Step size after an attempt of size h with error norm S_ERROR."""
         _ = stamp
@@ -127,7 +136,7 @@ def _build(stamp: int):
             factor = min(factor, 1.0 / max(predicted, 1.0 / GROWTH_MAX))
         return h * min(GROWTH_MAX, max(SHRINK_MIN, factor))
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def movement(F, W, change, stride):
         """Largest of |F[change + stride i]| / (|x_i| + scale_i)."""
         _ = stamp
@@ -137,7 +146,7 @@ def _build(stamp: int):
             largest = max(largest, abs(F[change + stride * i]) / (abs(F[x + i]) + F[scale + i]))
         return largest
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def accept(F, W, K, h, t_new, flag):
         """Make the attempted step the present one and record its end with `flag`."""
         _ = stamp
@@ -174,7 +183,7 @@ def _build(stamp: int):
         if F[S_NEWTON_ITERATIONS] > 1 and F[S_THETA] > KEEP_JACOBIAN_RATE:
             W[N_JACOBIAN_AGE] = 0
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def one_step(F, W, C, K, t_target, target_flag):
         """Attempt steps until one is accepted that ends at t_target or before it, or on a located flip of a switch.
 
@@ -191,19 +200,23 @@ def _build(stamp: int):
         if not (h > 0.0):  # the very first step: a size in which nothing moves by more than about FIRST_CHANGE of its size
             h = 1e-3 * remaining
             searching = FIRST_LIMIT
+        status = DONE
         for _attempt in range(ATTEMPT_LIMIT):
             h = min(h, h_limit)
             free = h
-            reaches = h * (1.0 + 1e-9) >= remaining
+            reaches = STRETCH * h >= remaining
             if reaches:
                 h = remaining
-            elif 2.0 * h > remaining:
-                h = 0.5 * remaining
+            elif h * EQUAL_STEPS > remaining:
+                h = remaining / np.ceil(remaining / (STRETCH * h))
+            reaches = reaches or h >= remaining
             if not reaches and (h < F[S_H_MIN] or t + h <= t):
-                return STEP_TOO_SMALL
+                return SINGULAR if status == SINGULAR else STEP_TOO_SMALL
             status = attempt_step_c(F, W, C, K, h)
             if status == FACTORS_FULL:
                 return status
+            if status == START_NOT_FINITE:
+                return NOT_FINITE
             if searching > 0:
                 searching -= 1
                 change = movement_c(F, W, W[AT_STAGE] + 2, WHOLE(3)) if status == DONE else np.inf
@@ -228,32 +241,37 @@ def _build(stamp: int):
                 wish = min(wish, h)
             if h < 0.999 * free:  # cut to a target: the controller's own size was larger
                 wish = max(wish, min(free, h * SAFETY / max(error, 1e-30) ** 0.25))
-            if W[SIZE_S] > 0 and find_candidates_c(F, W):
-                found, h_event = locate_c(F, W, C, K, h)
+            size, t_new, flag = h, (t_target if reaches else t + h), (target_flag if reaches else FLAG_STEP)
+            flips = W[SIZE_S] > 0 and find_candidates_c(F, W)
+            found, reg, lanes = LOCATED, W[AT_REG3] + 2, WHOLE(3)
+            if flips:
+                found, size = locate_c(F, W, C, K, h)
                 if found == FACTORS_FULL:
                     return found
                 if found == NO_CONVERGENCE:
                     W[N_NEWTON_FAILED] += 1
                     h *= NEWTON_SHRINK
                     continue
-                F[S_H] = max(wish, free)
-                reg, lanes = W[AT_REG], WHOLE(1)
-                if found != LOCATED_AT_START:
-                    accept_c(F, W, K, h_event, t + h_event, FLAG_BEFORE)
-                    reg, lanes = W[AT_REG3] + 2, WHOLE(3)
-                W[N_FIRST] = 1
-                return flip_at_event_c(F, W, reg, lanes)
-            F[S_H_ACCEPTED] = h
-            F[S_ERROR_ACCEPTED] = max(1e-2, error)
-            if 1.0 <= wish / h <= KEEP_STEP_BELOW:
-                wish = h
-            accept_c(F, W, K, h, t_target if reaches else t + h, target_flag if reaches else FLAG_STEP)
-            W[N_FIRST] = 0
+                if found == LOCATED_AT_START:
+                    reg, lanes = W[AT_REG], WHOLE(1)
+                t_new, flag = t + size, FLAG_BEFORE
+                wish = max(wish, free)
+            else:
+                F[S_H_ACCEPTED] = h
+                F[S_ERROR_ACCEPTED] = max(1e-2, error)
+                if 1.0 <= wish / h <= KEEP_STEP_BELOW:
+                    wish = h
+            if found == LOCATED:
+                accept_c(F, W, K, size, t_new, flag)
+                if W[N_AFTER_TICK] == 1:
+                    W[N_AFTER_TICK] = 0
+                    F[S_H_TICK] = wish
             F[S_H] = wish
-            return DONE
-        return STEP_TOO_SMALL
+            W[N_FIRST] = 1 if flips else 0
+            return flip_at_event_c(F, W, reg, lanes) if flips else DONE
+        return SINGULAR if status == SINGULAR else STEP_TOO_SMALL
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def restart_here(F, W, K, level):
         """Restart; level >= 0: leave breaking points of that level; record the point after the jump. Returns DONE, EVENT or a failure.
 
@@ -280,6 +298,10 @@ def _build(stamp: int):
         if small and flips == 0 and movement_c(F, W, x_old, WHOLE(1)) <= SMALL_JUMP:
             W[N_FIRST], W[N_MADE_JUMP] = first, jumped
             W[N_JACOBIAN_AGE] = min(W[N_JACOBIAN_AGE], 1)
+            W[N_AFTER_TICK] = 1
+            F[S_H_ACCEPTED] = 0.0  # errors before and after the instant have nothing to do with each other: no prediction
+            if F[S_H_TICK] > 0.0:
+                F[S_H] = min(F[S_H], F[S_H_TICK])
         else:
             W[N_JACOBIAN_AGE] = 0
         push_breaks_c(F, W, F[S_T], level)
@@ -287,7 +309,7 @@ def _build(stamp: int):
             record_point_c(F, W, K, FLAG_AFTER)
         return EVENT if watched else DONE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def fire_due(F, W, K):
         """Fire every clock that is due at the present time, rank by rank. Returns how many parameters changed."""
         _ = stamp
@@ -299,7 +321,7 @@ def _build(stamp: int):
             rank = next_rank_c(F, W, rank)
         return changed
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def advance(F, W, C, K, t_stop, step_budget):
         """See advance."""
         _ = stamp

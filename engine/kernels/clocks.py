@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import KERNEL
 from polewise.kernels.history import merge_distance_c
 from polewise.kernels.layout import (
     AT_CLOCK_COUNT,
@@ -26,14 +29,14 @@ from polewise.kernels.tape import WHOLE, residual_at_c, segment_c
 from polewise.kernels.workspace import N_REG_AT_START, N_START_READY, S_T, Workspace
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(inline="always")
     def tick_time(F, W, k):
         """Instant of the next firing of clock k."""
         _ = stamp
         return F[W[AT_CLOCK_OFFSET] + k] + W[W[AT_CLOCK_COUNT] + k] * F[W[AT_CLOCK_PERIOD] + k]
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def next_tick(F, W):
         """The earliest instant at which a clock fires, inf without clocks."""
         _ = stamp
@@ -42,7 +45,7 @@ def _build(stamp: int):
             earliest = min(earliest, tick_time_c(F, W, k))
         return earliest
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def next_rank(F, W, above):
         """The smallest rank greater than `above` among the clocks due at the present time, -1 if there is none."""
         _ = stamp
@@ -54,7 +57,7 @@ def _build(stamp: int):
                 best = rank
         return best
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def fire_clocks(F, W, K, rank):
         """Fire the due clocks of one rank; see fire_clocks."""
         _ = stamp

@@ -6,8 +6,11 @@ Source: Bellen & Zennaro, Numerical Methods for Delay Differential Equations, 20
 
 from __future__ import annotations
 
+from typing import Any
+
 from numba import njit
 
+from polewise.kernels.build import KERNEL
 from polewise.kernels.layout import (
     AT_BREAK_LEVEL,
     AT_BREAK_T,
@@ -37,14 +40,14 @@ BREAK_LEVEL_MAX = 6  # a jump is followed through this many delays: then it is s
 BREAK_LEVEL_TICK = 5  # level that a sample instant's jump starts with: followed through one delay
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy")
+def _build(stamp: int) -> Any:
+    @njit(cache=True, **KERNEL)
     def merge_distance(t):
         """Instants closer than this are one."""
         _ = stamp
         return max(MERGE_S, MERGE_ULP * abs(t))
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def cubic(s, v0, v1, v2, v3):
         """Value at s of the cubic through (0, v0), (c1, v1), (c2, v2), (1, v3)."""
         _ = stamp
@@ -56,7 +59,7 @@ def _build(stamp: int):
             + v3 * s * a * b / ((1.0 - C1) * (1.0 - C2))
         )
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def delayed_value(F, W, d, t, right):
         """Delayed expression d at time t minus its delay; at a jump the value before it, or after it if right is 1."""
         _ = stamp
@@ -79,7 +82,7 @@ def _build(stamp: int):
         s = (t_past - F[history_t + piece]) / F[W[AT_HISTORY_H] + piece]
         return cubic_c(s, F[v], F[v + 1], F[v + 2], F[v + 3])
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def load_delayed(F, W, right):
         """Set the delayed parameters for the present time. Returns the largest change relative to the values' size."""
         _ = stamp
@@ -93,7 +96,7 @@ def _build(stamp: int):
             F[j] = value
         return change
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def history_room(F, W):
         """Forget pieces that no delay reaches any more; whether there is room for another."""
         _ = stamp
@@ -107,7 +110,7 @@ def _build(stamp: int):
             W[N_HISTORY_COUNT] -= 1
         return W[N_HISTORY_COUNT] < capacity
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def push_history(F, W, t, h):
         """Keep the step from t of size h. DELAY must have been run on the three stages; history_start becomes the value at its end."""
         _ = stamp
@@ -122,7 +125,7 @@ def _build(stamp: int):
             F[v], F[v + 1], F[v + 2], F[v + 3] = F[start], F[r], F[r + 1], F[r + 2]
             F[start] = F[r + 2]
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def push_breaks(F, W, t, level):
         """Queue the instants at which a jump at t comes back. A full queue drops the latest: the error test still sees them."""
         _ = stamp
@@ -147,7 +150,7 @@ def _build(stamp: int):
                 F[times + k], W[levels + k] = t_break, level + 1
                 W[N_BREAKS] = count + 1
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(inline="always")
     def pop_breaks(F, W):
         """Take breaking points up to the present time off the queue and queue their successors. Returns how many there were."""
         _ = stamp

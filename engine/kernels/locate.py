@@ -6,9 +6,12 @@ with its end on the root (secant steps inside the bracket). Only switches that e
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER
 from polewise.kernels.layout import (
     AT_CANDIDATE,
     AT_MODE,
@@ -56,8 +59,8 @@ INWARD = 1e-3  # a switch inside its band at the start is looked at again this f
 SLOPE_DISTANCE = 1e-3  # of the step: for the slope at the root
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(inline="always")
     def find_candidates(F, W):
         """Mark the switches that are beyond their band at a stage of the attempted step; switch_now: by how much at most. Whether there are any."""
         _ = stamp
@@ -79,7 +82,7 @@ def _build(stamp: int):
                 found = True
         return found
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def worst_of(F, W, reg, lanes):
         """Largest violation of the candidates, each against its largest in the step, from the registers at F[reg:], `lanes` apart."""
         _ = stamp
@@ -90,14 +93,14 @@ def _build(stamp: int):
                 worst = max(worst, violation_c(F, W, s, F[reg + lanes * W[switch_reg + s]]) / F[switch_now + s])
         return worst
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def inside(F, W, K, h, s):
         """worst_of_c on the dense output at the part s of the step."""
         _ = stamp
         run_inside_c(F, W, K, h, s)
         return worst_of_c(F, W, W[AT_REG], WHOLE(1))
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def bracket_first(F, W, K, h):
         """Part of the step at which the first candidate crosses, on the dense output, and the slope there per second; (0, 0): across at the start."""
         _ = stamp
@@ -140,7 +143,7 @@ def _build(stamp: int):
         slope = inside_c(F, W, K, h, after) - inside_c(F, W, K, h, before)
         return s, slope / ((after - before) * h)
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def locate(F, W, C, K, h):
         """Shorten the attempted step to the first flip in it. Returns (kind, size).
 
@@ -178,7 +181,7 @@ def _build(stamp: int):
             size = new
         return LOCATED, size
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def flip_at_event(F, W, reg, lanes):
         """Flip the candidates that are at their boundary at the located point, whose registers are at F[reg:]; sets NEEDS_RESTART.
 

@@ -11,9 +11,12 @@ Source: Gilbert & Peierls, SIAM J. Sci. Stat. Comput. 9(5), 1988; Davis, Direct 
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import KERNEL
 from polewise.kernels.layout import (
     AT_COL_PTR,
     AT_ROW_IDX,
@@ -49,8 +52,8 @@ SINGULAR_LIMIT = 1e-280  # rows are scaled to size 1 before: a pivot below this 
 U = np.uint64  # an unsigned index
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(inline="always")
     def reach(W, f, start, top):
         """Depth-first search from row `start` through the columns of L done so far; rows are put before stack[top] in topological order.
 
@@ -86,7 +89,7 @@ def _build(stamp: int):
                 W[stack + top] = row
         return top
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def lu_search(W, V, f, values):
         """Factorise the matrix V[values:] with a new search for pivots. Returns LU_DONE, LU_SINGULAR (W[f + LU_COLUMN]: where) or LU_FULL."""
         _ = stamp
@@ -164,7 +167,7 @@ def _build(stamp: int):
         W[f + LU_KNOWN] = 1
         return LU_DONE
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def lu_again(W, V, f, values):
         """Factorise the matrix V[values:] on the known pattern with the known pivots. Returns LU_DONE or LU_BAD_PIVOT."""
         _ = stamp
@@ -203,7 +206,7 @@ def _build(stamp: int):
                 good = False
         return LU_DONE if good else LU_BAD_PIVOT
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def lu_factor(W, V, f, values):
         """Factorise: on the known pattern if there is one and it is still good, else with a new search. Returns LU_DONE, LU_SINGULAR or LU_FULL."""
         _ = stamp
@@ -211,7 +214,7 @@ def _build(stamp: int):
             return LU_DONE
         return lu_search_c(W, V, f, values)
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def lu_solve(W, V, f, b):
         """Overwrite the right side V[b:b + n] with the solution of A x = b."""
         _ = stamp

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.layout import AT_OUT_REG, AT_RECORD, AT_REG, AT_REG3, AT_X, SIZE_OUT, SIZE_RECORD
 from polewise.kernels.program import Program
 from polewise.kernels.radau import C1, C2
@@ -22,8 +25,8 @@ from polewise.kernels.workspace import (
 )
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(cache=True, **INNER)
     def write_row(F, W, t, flag, reg, lanes):
         """Append a row from the registers at F[reg:], `lanes` apart. Without room the row is dropped: callers keep some."""
         _ = stamp
@@ -38,7 +41,7 @@ def _build(stamp: int):
             F[row + 2 + k] = F[reg + lanes * W[out_reg + k]]
         F[S_RECORD_T] = t
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def record_point(F, W, K, flag):
         """Append a row at the present point (runs RESIDUAL, OUTPUT)."""
         _ = stamp
@@ -47,7 +50,7 @@ def _build(stamp: int):
         segment_c(F, W, K, WHOLE(2))
         write_row_c(F, W, F[S_T], flag, W[AT_REG], WHOLE(1))
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(inline="always")
     def record_step(F, W, K, h, t_new, flag):
         """Append the attempted step's end, and its inner stage points if asked for, from reg3 (runs OUTPUT)."""
         _ = stamp

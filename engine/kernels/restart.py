@@ -6,9 +6,12 @@ Source: Deuflhard, Newton Methods for Nonlinear Problems, 2004, section 2.1 (aff
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.history import load_delayed_c
 from polewise.kernels.layout import (
     AT_COL_PTR,
@@ -81,8 +84,8 @@ STALLED = 1e-9  # a correction this small that no longer shrinks is rounding
 RATE_REUSE = 0.1  # factors serve on while each correction is at most this part of the one before
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(cache=True, **INNER)
     def mismatch(F, W, K):
         """RESIDUAL at x; dx = dx_try = kept charges minus charges, or minus f. Returns whether all are finite."""
         _ = stamp
@@ -96,7 +99,7 @@ def _build(stamp: int):
             total += value
         return np.isfinite(total)
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def size(F, W, v):
         """Largest entry of F[v:] against |x_try| + scale, inf if one is not finite."""
         _ = stamp
@@ -111,7 +114,7 @@ def _build(stamp: int):
                     return np.inf
         return norm
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def correction(F, W):
         """dx_try becomes the Newton correction it is the right side of. Returns its size."""
         _ = stamp
@@ -121,7 +124,7 @@ def _build(stamp: int):
         lu_solve_c(W, F, WHOLE(RESTART), dx_try)
         return size_c(F, W, dx_try)
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def restart_factorise(F, W, K):
         """Jacobian of the restart equations at x (RESIDUAL has been run there) and its factors."""
         _ = stamp
@@ -149,7 +152,7 @@ def _build(stamp: int):
             return FACTORS_FULL if result == LU_FULL else SINGULAR
         return DONE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def solve_frozen(F, W, K):
         """Newton with the switches as they are. On DONE, reg holds RESIDUAL at the solution or one negligible correction before it."""
         _ = stamp
@@ -212,7 +215,7 @@ def _build(stamp: int):
             mismatch_c(F, W, K)
         return NO_CONVERGENCE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def start_from_registers(F, W, K):
         """The next step starts here: f_start from reg, the charges exactly those that were kept."""
         _ = stamp
@@ -228,7 +231,7 @@ def _build(stamp: int):
         W[N_START_READY] = 1
         W[N_REG_AT_START] = 1
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def restart(F, W, K):
         """See restart."""
         _ = stamp

@@ -10,9 +10,12 @@ Source: Hairer & Wanner, Solving Ordinary Differential Equations II, 2nd ed., IV
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.history import cubic_c, delayed_value_c
 from polewise.kernels.layout import (
     AT_COL_PTR,
@@ -129,6 +132,8 @@ NO_CONVERGENCE = int(Status.NO_CONVERGENCE)
 SINGULAR = int(Status.SINGULAR)
 NOT_FINITE = int(Status.NOT_FINITE)
 
+START_NOT_FINITE = -3  # of attempt_step: the point the step starts from is no good, whatever its size
+
 NEWTON_LIMIT = 8  # iterations per attempt
 STEP_RATIO_SAME = 1e-7  # factors serve a step size this close to theirs as if it were the same (clock periods differ by rounding)
 ROUND_OFF = 40 * 2.220446049250313e-16  # corrections this small against |x| + scale are rounding
@@ -136,8 +141,8 @@ DIVERGED = 0.99  # convergence rate from which Newton has failed
 STALLED = 0.01  # a correction this small in error weights that no longer shrinks is rounding (sums of large numbers), and good enough
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(inline="always")
     def prepare_start(F, W, K):
         """f_start, q_start and history_start at the present point. Returns DONE or NOT_FINITE."""
         _ = stamp
@@ -156,7 +161,7 @@ def _build(stamp: int):
         W[N_REG_AT_START] = 1
         return DONE if np.isfinite(total) else NOT_FINITE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def factorise(F, W, C, h):
         """Both iteration matrices for step size h, rows scaled to size 1 in units of the unknowns' scales."""
         _ = stamp
@@ -193,7 +198,7 @@ def _build(stamp: int):
         W[N_FACTORS_READY] = 1
         return DONE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def predict(F, W, h):
         """Start values of the stages: the last collocation polynomial continued, or zero after a jump."""
         _ = stamp
@@ -209,7 +214,7 @@ def _build(stamp: int):
             for k in range(0, 3 * n, 3):
                 F[z + k + stage] = a1 * F[old + k] + a2 * F[old + k + 1] + a3 * F[old + k + 2]
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def load_stage_parameters(F, W, h):
         """Times and parameters of the three stages; delayed parameters differ from stage to stage."""
         _ = stamp
@@ -225,7 +230,7 @@ def _build(stamp: int):
             for s in range(3):
                 F[base + 3 * W[W[AT_DELAY_P] + d] + s] = delayed_value_c(F, W, d, F[times + s], WHOLE(0))
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def run_stages(F, W, K):
         """RESIDUAL at the three stages."""
         _ = stamp
@@ -237,7 +242,7 @@ def _build(stamp: int):
         segment_three_c(F, W, K, WHOLE(0))
         W[N_RESIDUALS] += 3
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def correct_stages(F, W, C, K, h):
         """One Newton iteration: residual of the stages, two solutions, new stages. Returns the correction's size in error weights."""
         _ = stamp
@@ -278,7 +283,7 @@ def _build(stamp: int):
                     return np.inf
         return norm
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def solve_stages(F, W, C, K, h):
         """Newton iterations until the stages' estimated error is below S_NEWTON_TOL. Returns DONE, NO_CONVERGENCE or NOT_FINITE.
 
@@ -316,7 +321,7 @@ def _build(stamp: int):
                 return DONE
         return NO_CONVERGENCE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def estimate_error(F, W, K, h):
         """Size of the filtered embedded estimate in error weights; dx holds the estimate."""
         _ = stamp
@@ -347,12 +352,12 @@ def _build(stamp: int):
         F[S_ERROR] = norm
         return norm
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def attempt_step(F, W, C, K, h):
         """See attempt_step."""
         _ = stamp
         if W[N_START_READY] == 0 and prepare_start_c(F, W, K) != DONE:
-            return NOT_FINITE
+            return START_NOT_FINITE
         weight, x, scale = W[AT_WEIGHT], W[AT_X], W[AT_SCALE]
         for i in range(W[SIZE_N]):
             F[weight + i] = 1.0 / (F[S_TOL] * (abs(F[x + i]) + F[scale + i]))
@@ -381,7 +386,7 @@ def _build(stamp: int):
         run_stages_c(F, W, K)
         return DONE if np.isfinite(estimate_error_c(F, W, K, h)) else NOT_FINITE
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(inline="always")
     def run_inside(F, W, K, h, s):
         """RESIDUAL on the dense output of the last attempt at the part s of its step → reg."""
         _ = stamp
@@ -430,6 +435,6 @@ def attempt_step(program: Program, work: Workspace, h: float) -> int:
     Afterwards work.stage holds the stages, reg3 RESIDUAL at them, state[S_ERROR] the error norm.
 
     Returns:
-        DONE (whatever the error), NO_CONVERGENCE, NOT_FINITE, SINGULAR or FACTORS_FULL.
+        DONE (whatever the error), NO_CONVERGENCE, NOT_FINITE, START_NOT_FINITE, SINGULAR or FACTORS_FULL.
     """
     return int(attempt_step_c(work.F, work.W, work.C, work.K, h))

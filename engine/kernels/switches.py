@@ -6,9 +6,12 @@ above band = switch_scale * S_BAND counts, so that a value at rest on a boundary
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.layout import (
     AT_FLIPPED,
     AT_MODE,
@@ -33,8 +36,8 @@ DONE = int(Status.DONE)
 OUTSIDE_TABLE = int(Status.OUTSIDE_TABLE)
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy")
+def _build(stamp: int) -> Any:
+    @njit(cache=True, **KERNEL)
     def violation(F, W, s, value):
         """Signed distance of the watched value beyond the boundary of the mode of switch s."""
         _ = stamp
@@ -53,7 +56,7 @@ def _build(stamp: int):
             beyond = max(beyond, value - F[knots + m])
         return beyond
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def next_mode(F, W, s, value):
         """The mode on the other side of the boundary that the value is at or just beyond."""
         _ = stamp
@@ -69,7 +72,7 @@ def _build(stamp: int):
         above = value - F[knots + m] if m < last - first else -np.inf
         return m + 1 if above > below else m - 1
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def set_mode(F, W, s, m):
         """Flip switch s to mode m. Returns DONE or OUTSIDE_TABLE."""
         _ = stamp

@@ -8,10 +8,12 @@ functions for Python take (program, work). Register r of stage s lies at 3 r + s
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 from numba import njit
 
+from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.layout import (
     AT_JAC_F,
     AT_JAC_Q,
@@ -76,8 +78,8 @@ WHOLE = np.int64  # a number written out in a call is a type of its own to the c
 U = np.uint64  # an unsigned index needs no test for counting from the end
 
 
-def _build_parts(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build_parts(stamp: int) -> Any:
+    @njit(cache=True, **INNER)
     def table_segment(F, start, end, u):
         """Segment of the table with knots F[start:end] that u lies in; both end knots count as inside. Bisection."""
         _ = stamp
@@ -92,7 +94,7 @@ def _build_parts(stamp: int):
                 low = middle + 1
         return low - start
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def function_value(op, u, v):
         """The rarer operations."""
         _ = stamp
@@ -132,10 +134,10 @@ def _build_parts(stamp: int):
 table_segment_c, function_value_c = _build_parts(STAMP)
 
 
-def _build_tape(lanes: int, stamp: int):
+def _build_tape(lanes: int, stamp: int) -> Any:
     """The interpreter for a number of lanes, a constant of the compiled code."""
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def run(F, W, K, at_reg, first, last, live):
         """Operations [first, last) on the registers from F[at_reg] on. live 1: switches follow lane 0 and write the modes."""
         _ = stamp
@@ -201,8 +203,8 @@ run_one_c = _build_tape(1, STAMP)
 run_three_c = _build_tape(3, STAMP)
 
 
-def _build(stamp: int):
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+def _build(stamp: int) -> Any:
+    @njit(cache=True, **INNER)
     def load_point(F, W, at_x, t):
         """Put x = F[at_x:], t and the present p into the registers of a single evaluation."""
         _ = stamp
@@ -216,7 +218,7 @@ def _build(stamp: int):
         for j in range(W[SIZE_P]):
             F[at + j] = F[p + j]
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def live_mode(F, W, s, value):
         """The mode of switch s that belongs to a watched value."""
         _ = stamp
@@ -228,7 +230,7 @@ def _build(stamp: int):
         table = W[AT_TABLE_PTR] + W[W[AT_SWITCH_TABLE] + s]
         return table_segment_c(F, W[AT_TABLE_KNOTS] + W[table], W[AT_TABLE_KNOTS] + W[table + 1], value)
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def residual_at(F, W, K, at_x, live):
         """RESIDUAL at (F[at_x:], state[S_T], p) → reg; modes frozen, or live (1): following their values, which sets them."""
         _ = stamp
@@ -239,21 +241,21 @@ def _build(stamp: int):
             for s in range(W[SIZE_S]):
                 W[W[AT_MODE] + s] = live_mode_c(F, W, s, F[W[AT_REG] + W[W[AT_SWITCH_REG] + s]])
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def segment(F, W, K, k):
         """Operations of segment k on reg as it stands."""
         _ = stamp
         at = W[AT_SEGMENT_END] + k
         run_one_c(F, W, K, W[AT_REG], W[at - 1], W[at], WHOLE(0))
 
-    @njit(cache=True, nogil=True, error_model="numpy", no_cpython_wrapper=True, no_cfunc_wrapper=True)
+    @njit(cache=True, **INNER)
     def segment_three(F, W, K, k):
         """Operations of segment k on reg3, the three stages, as it stands."""
         _ = stamp
         at = W[AT_SEGMENT_END] + k
         run_three_c(F, W, K, W[AT_REG3], W[at - 1] if k > 0 else 0, W[at], WHOLE(0))
 
-    @njit(cache=True, nogil=True, error_model="numpy")
+    @njit(cache=True, **KERNEL)
     def jacobian(F, W, K):
         """JACOBIAN on reg (run a residual first) → jac_f, jac_q."""
         _ = stamp

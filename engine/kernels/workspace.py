@@ -39,6 +39,7 @@ S_CHATTER_T: Final = 17  # start of the present stretch
 S_HISTORY_T0: Final = 18  # in: time before which delayed expressions follow value0 + slope0 * (t - t0)
 S_H_FREE: Final = 19  # step the controller wanted before a stop, a tick or an event cut it
 S_NEWTON_ITERATIONS: Final = 20  # iterations of the last attempt
+S_H_TICK: Final = 22  # size wished for after the first step of the last sample interval, 0 unknown
 S_BAND: Final = 21  # factor on switch_scale: a mode is violated only beyond switch_scale * S_BAND
 S_COUNT: Final = 32
 
@@ -77,6 +78,7 @@ N_FLIPS: Final = 34  # unused
 N_CHATTER_LIMIT: Final = 35  # in
 N_REG_AT_START: Final = 36  # 1 while work.reg holds RESIDUAL at the step's start
 N_RESTART_FACTORS: Final = 37  # 1 while the factors of `restart` may be used again
+N_AFTER_TICK: Final = 40  # 1 until the first step after a sample instant is accepted
 N_LOCATED: Final = 39  # located instants of flips in the present stretch
 N_FULL_FACTORS: Final = 38  # which factors were full: 0 real, 1 complex, 2 restart
 N_COUNT: Final = 48
@@ -87,6 +89,10 @@ FLAG_STEP: Final = 1.0  # end of a step
 FLAG_BEFORE: Final = 2.0  # just before a jump
 FLAG_AFTER: Final = 3.0  # just after a jump
 
+ERROR_FACTOR: Final = 0.3  # measured so that runs end with errors of about rtol, docs/numerics.md
+NEWTON_PART: Final = 0.01  # of rtol: error that Newton may leave in a step
+NEWTON_LOOSEST: Final = 0.03  # of the error weights, whatever rtol
+NEWTON_FLOOR: Final = 10 * 2.2e-16  # rounding
 BAND_RELATIVE: Final = 1e-12  # what Program.switch_scale is of a watched value's size; S_BAND widens it to the error Newton leaves
 HISTORY_CAPACITY: Final = 1024
 BREAK_CAPACITY: Final = 2048
@@ -153,16 +159,14 @@ def kernel_program(program: Program) -> Program:
 
 
 def error_tolerance(rtol: float) -> float:
-    """Tolerance of the error test: the estimate is of order 3, the solution of order 5, so a looser test delivers errors of about rtol.
-
-    Source: Hairer & Wanner, Solving Ordinary Differential Equations II, 2nd ed., IV.8 (code's notes); the constant measured here, docs/numerics.md.
-    """
-    return 0.1 * float(rtol) ** (2.0 / 3.0)
+    """Tolerance of the error test. The estimate falls as h^4, the error of a run as h^5: its tolerance^(5/4) is proportional to rtol."""
+    return ERROR_FACTOR * float(rtol) ** 0.8
 
 
-def newton_tolerance(tolerance: float) -> float:
-    """When Newton stops, in units of the error weights. Source: Hairer & Wanner II, IV.8, (8.11) and the text below it."""
-    return float(max(10 * 2.2e-16 / tolerance, min(0.03, tolerance**0.5)))
+def newton_tolerance(rtol: float) -> float:
+    """When Newton stops, in units of the error weights: what is left must be a small part of rtol, not of the looser error test."""
+    tolerance = error_tolerance(rtol)
+    return max(NEWTON_FLOOR / tolerance, min(NEWTON_LOOSEST, NEWTON_PART * float(rtol) / tolerance))
 
 
 class _Sizes(NamedTuple):
@@ -216,7 +220,7 @@ def set_tolerance(work: Workspace, rtol: float) -> None:
     tolerance = error_tolerance(rtol)
     work.state[S_RTOL] = rtol
     work.state[S_TOL] = tolerance
-    work.state[S_NEWTON_TOL] = newton_tolerance(tolerance)
+    work.state[S_NEWTON_TOL] = newton_tolerance(rtol)
     work.state[S_BAND] = max(1.0, tolerance * work.state[S_NEWTON_TOL] / BAND_RELATIVE)
 
 

@@ -102,7 +102,7 @@ def test_values_that_are_not_numbers_only_shorten_the_step():
     case.work.state[1] = 5.0
     assert case.advance(1.9) == Status.DONE
     assert case.work.x[0] == pytest.approx(0.05**2, rel=1e-5)
-    assert case.advance(3.0) == Status.STEP_TOO_SMALL
+    assert case.advance(3.0) in (Status.STEP_TOO_SMALL, Status.SINGULAR)
     assert case.work.state[0] == pytest.approx(2.0, abs=1e-3)
 
 
