@@ -117,7 +117,8 @@ def test_dependent_states_keep_the_order() -> None:
     p = drive * w / tau / (1 / tau**2 + w * w)
     q = drive * w * w / (1 / tau**2 + w * w)
     errors, steps = [], []
-    for tolerance in (1e-5, 1e-7, 1e-9, 1e-11):
+    tolerances = np.array([1e-4, 1e-5, 1e-6, 1e-7])
+    for tolerance in tolerances:
         result = polewise.from_text(text).run("go", tolerance=tolerance)
         t = result.time
         v = p * np.cos(w * t) + q * np.sin(w * t) - p * np.exp(-t / tau)
@@ -126,5 +127,5 @@ def test_dependent_states_keep_the_order() -> None:
         steps.append(result.counters["steps"])
         np.testing.assert_allclose(result["low.i"], 1e-6 * slope, rtol=0, atol=1e-6 * 5 * w * max(30 * tolerance, 1e-11))
         np.testing.assert_allclose(result["shunt.i"], 2e-6 * 10 * w * np.cos(w * t), rtol=0, atol=1e-12)
-    assert np.all(np.array(errors) < 30 * np.array([1e-5, 1e-7, 1e-9, 1e-11])), errors
+    assert np.all(np.array(errors) < 30 * tolerances), errors
     assert -np.polyfit(np.log(steps), np.log(errors), 1)[0] > 4.0, (steps, errors)
