@@ -27,6 +27,9 @@ from polewise.grammar import units
 
 # The estimate of ripple conduction loss fades out over the last part of the discontinuous range, so that nothing jumps at the boundary.
 RIPPLE_LOSS_FADE = 0.05
+# It never draws more than this part of the diode's current: before the diode conducts there is no triangle yet, and a loss drawn then would push
+# the output of an inverting stage the wrong way. A real stage's loss is far below.
+RIPPLE_LOSS_OF_DIODE = 0.5
 # Below this rail voltage the loss drawn from the rails is set to zero: its current would be a quotient of two small numbers.
 RAIL_VOLTAGE_MIN_V = 1e-3
 # A duty below this reads as none: an exact zero would sit on the edge of its own switch. For the reading `mode` only.
@@ -253,11 +256,14 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         raising = g.subtract(rail, far) if lower_diode else far
         lowering = g.add(far, drop) if lower_diode else g.subtract(g.add(rail, drop), far)
         usual = g.mark_usual
-        driven = g.invert(usual(g.positive(lowering), 1))  # the diode is driven on
+        # The diode is driven on where b < 0. b = 0 (an ideal diode into an empty output) is still ordinary: there the two would disagree on
+        # the diode's current, and a start from rest would hang between them.
+        driven = usual(g.positive(g.negate(lowering)), 0)
         can_rise = usual(g.positive(raising), 1)
         ordinary = g.both(can_rise, g.invert(driven))
-        stopped = g.both(g.invert(usual(g.positive(j), 1)), g.invert(driven))  # no current, and no diode that takes one
-        blocked = g.both(stopped, g.invert(can_rise))
+        # Where the transistor can raise the current, the pole is never open; the sign of j does not matter there and must not flip for nothing.
+        flows = usual(g.positive(g.mux(can_rise, one, j)), 1)
+        blocked = g.both(g.invert(flows), g.both(g.invert(driven), g.invert(can_rise)))
         # delta = limit(j(2Lf/d + R + r)/a, d, 1). Written with charge = j(2Lf + (R + r)d) and reach = a d it holds at d = 0 too: 1 while the
         # diode conducts, d at no current. Every choice below is continuous, so that no two of them can undo each other.
         slope = g.add(g.multiply(g.multiply(two, choke.inductance), pole.rate), g.multiply(g.add(r_on, choke.resistance), d))
@@ -266,12 +272,15 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
         continuous = usual(g.greater(charge, reach), 1)
         starting = usual(g.greater(g.multiply(reach, d), charge), 0)
         peak_half = g.divide(reach, slope)  # j/delta in discontinuous conduction: half the peak current
-        part = g.divide(charge, g.maximum(reach, g.constant(REACH_MIN_V)))
-        delta = g.mux(ordinary, g.mux(continuous, one, g.mux(starting, d, part)), one)
-        i_on = g.mux(ordinary, g.mux(continuous, g.multiply(j, d), g.mux(starting, j, g.multiply(peak_half, d))), g.multiply(j, d))
+        least = g.constant(REACH_MIN_V)
+        part = g.divide(charge, g.maximum(reach, least))
+        triangle = g.mux(continuous, one, g.mux(starting, d, part))
+        delta = g.mux(ordinary, triangle, one)
+        i_triangle = g.mux(continuous, g.multiply(j, d), g.mux(starting, j, g.multiply(peak_half, d)))
+        i_on = g.mux(ordinary, i_triangle, g.multiply(j, d))
         i_on = g.mux(blocked, zero, i_on)
         i_diode = g.mux(blocked, zero, g.subtract(j, i_on))
-        idle = g.either(blocked, g.both(stopped, g.greater(g.constant(DUTY_MIN), d)))
+        idle = g.either(blocked, g.both(g.both(ordinary, g.invert(continuous)), g.greater(g.constant(DUTY_MIN), d)))
     d2 = g.subtract(delta, d)
     # Potential of mid against bottom.
     drops = g.add(g.multiply(r_on, i_on), g.multiply(r_diode, i_diode))
@@ -282,13 +291,13 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
     if far is not None:
         mid = g.add(mid, g.multiply(g.subtract(one, delta), far))
         mid = g.mux(blocked, far, mid)
-    losses = g.add(_switching_current(pole, pole.mid_current), _ripple_loss_current(pole, ordinary, delta, peak_half, r_on, r_diode))
+    losses = g.add(_switching_current(pole, pole.mid_current), _ripple_loss_current(pole, ordinary, delta, peak_half, i_diode, r_on, r_diode))
     through_top = i_on if lower_diode else g.negate(i_diode)
     mode = g.mux(idle, zero, g.mux(g.greater(one, delta), one, two))
     return _equations(pole, mid, g.add(through_top, losses), d, delta, mode)
 
 
-def _ripple_loss_current(pole: _Pole, ordinary: Node, delta: Node, peak_half: Node, r_on: Node, r_diode: Node) -> Node:
+def _ripple_loss_current(pole: _Pole, ordinary: Node, delta: Node, peak_half: Node, i_diode: Node, r_on: Node, r_diode: Node) -> Node:
     """What the average of a triangle leaves out of conduction loss, (R d + R_D d2)(j/delta)^2/3, drawn from the rails; an estimate."""
     g = pole.graph
     if g.value_of(ordinary) == 0.0 or (g.value_of(r_on) == 0.0 and g.value_of(r_diode) == 0.0):
@@ -296,9 +305,12 @@ def _ripple_loss_current(pole: _Pole, ordinary: Node, delta: Node, peak_half: No
     resistance = g.add(g.multiply(r_on, pole.duty), g.multiply(r_diode, g.subtract(delta, pole.duty)))
     square = g.multiply(peak_half, peak_half)
     power = g.divide(g.multiply(resistance, square), g.constant(3.0))
-    share = g.limit(g.divide(g.subtract(g.constant(1.0), delta), g.constant(RIPPLE_LOSS_FADE)), g.constant(0.0), g.constant(1.0))
+    zero, one = g.constant(0.0), g.constant(1.0)
+    share = g.limit(g.divide(g.subtract(one, delta), g.constant(RIPPLE_LOSS_FADE)), zero, one)
     there = g.both(ordinary, g.greater(pole.rail, g.constant(RAIL_VOLTAGE_MIN_V)))
-    return g.mux(there, g.divide(g.multiply(power, share), pole.rail), g.constant(0.0))
+    most = g.multiply(g.constant(RIPPLE_LOSS_OF_DIODE), i_diode)
+    drawn = g.divide(g.multiply(power, share), pole.rail)
+    return g.mux(there, g.mux(g.mark_usual(g.greater(drawn, most), 0), most, drawn), zero)
 
 
 # ---------------------------------------------------------------- common end
