@@ -310,7 +310,7 @@ class _Assembler:
             rest=rest,
             initial=row.initial,
             fixed_start=row.fixed_start,
-            scale=1.0,
+            scale=row.scale,
             dimension=row.dimension,
             held=row.held,
             integrator=integrator,

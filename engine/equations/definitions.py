@@ -34,6 +34,7 @@ class RowSketch:
     held: bool = False
     bounds: tuple[Node, Node] | None = None
     rest: Node | None = None  # where it is not the residual
+    scale: float = 1.0  # natural size, SI
     integrator: bool | None = None  # where the text says more than the reduced row, see Unknown.integrator
 
 

@@ -17,6 +17,11 @@ from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
 
+# Natural sizes of what only follows from derivatives: rounding in a voltage of 1e-8 V is 1e-5 A/s in a choke of 1 mH, and no iteration gets
+# below that. A rate counts in changes of its state within a microsecond.
+RATE_SCALE = 1e6
+DERIVED_SCALE = 100.0
+
 
 class DerivedRates:
     """Works on rows whose expressions are already reduced to unknowns, parameters, time and derivative symbols."""
@@ -94,7 +99,7 @@ class DerivedRates:
         charge = self.charge_of[symbol]
         leaf = g.symbol("x", f"{dependent.name}.derived")
         self.leaf_of[symbol] = leaf
-        own_row = RowSketch(f"{dependent.name}.derived", leaf, None, leaf, dependent.dimension, dependent.owner, dependent.span)
+        own_row = RowSketch(f"{dependent.name}.derived", leaf, None, leaf, dependent.dimension, dependent.owner, dependent.span, scale=DERIVED_SCALE)
         algebraic = [s for s in self._unknowns_under(charge) if s not in self.row_of]
         if algebraic:
             # The charge reads an unknown without a rate of its own: then this row is what gives it one (`left = right` with d/dt in it).
@@ -138,5 +143,7 @@ class DerivedRates:
         self.rate_of[state] = leaf
         assert row.charge is not None
         residual = g.add(self._rate_of_expression(row.charge), row.residual)
-        self.added.append(RowSketch(f"{name}.rate", leaf, None, residual, row.dimension / units.TIME, row.owner, row.span))
+        self.added.append(
+            RowSketch(f"{name}.rate", leaf, None, residual, row.dimension / units.TIME, row.owner, row.span, scale=RATE_SCALE * row.scale)
+        )
         return leaf

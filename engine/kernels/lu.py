@@ -192,7 +192,9 @@ def _build(stamp: int) -> Any:
                         V[U(dense + W[U(l_row + m)])] -= V[U(l_val + m)] * y
             pivot = V[U(dense + k)]
             V[U(dense + k)] = 0.0
-            inverse = 1.0 / pivot
+            inverse = pivot
+            if pivot != 0.0:  # a complex zero would raise, whatever the error model; it is found bad below
+                inverse = 1.0 / pivot
             V[U(pivot_inverse + k)] = inverse
             largest = 0.0
             for e in range(W[U(l_ptr + k)], W[U(l_ptr + k + 1)]):
