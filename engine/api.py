@@ -32,6 +32,7 @@ if TYPE_CHECKING:
     from polewise.analysis.modes import Modes
     from polewise.analysis.point import ComplexArray
     from polewise.analysis.standpoint import Standpoint
+    from polewise.analysis.trust import TrustLimits, TrustReport
     from polewise.analysis.tune import Shape, Tuned
     from polewise.equations.system import EquationSystem
     from polewise.expression.graph import Node
@@ -383,6 +384,38 @@ class System:
         with self._lock:
             kept = [q for name in keep for q in selected_quantities(prepared.circuit, name)] if keep else default_quantities(prepared.circuit)
         return magnify_settled(prepared.circuit, prepared.network, kept, self._inputs, periods=periods, tolerance=tolerance, guard=self._lock)
+
+    def trust(self, study: str | None = None, *, limits: TrustLimits | None = None, tolerance: float | None = None) -> TrustReport:
+        """Where the averages may be believed: for every pole, kept quantity and requirement, with the number that decided it.
+
+        Args:
+            study: run for the report; None: the operating point alone. limits: thresholds; None: the documented ones.
+            tolerance: relative, of the run.
+        Raises:
+            UnknownName: no such study. SolverError: the study could not be run.
+        """
+        from polewise.analysis.trust_of import trust_of, watching
+        from polewise.results.recording import MemorySink
+
+        if study is None:
+            prepared = self._prepared[""]
+            return trust_of(prepared.circuit, prepared.network, self._inputs, self._lock, limits=limits)
+        plan = watching(self.plan(study))
+        sink = MemorySink(plan.record.columns)
+        facts = self.carry_out(plan, sink, tolerance=tolerance)
+        if facts.trouble is not None:
+            raise facts.trouble
+        return self.trust_in(plan, finished(plan, facts, sink.finish()), limits=limits)
+
+    def trust_in(self, plan: StudyPlan, result: Result, *, limits: TrustLimits | None = None) -> TrustReport:
+        """The trust report of a study that has been run; see `trust`.
+
+        Args:
+            plan: as `analysis.trust_of.watching` makes it. result: of it.
+        """
+        from polewise.analysis.trust_of import trust_of
+
+        return trust_of(plan.circuit, plan.network, self._inputs, self._lock, plan=plan, result=result, end=result.facts.stand, limits=limits)
 
     def _averaged_until(self, task: WindowTask, wishes: RunWishes) -> tuple[Callable[[float], Snapshot | None], bool]:
         """How the magnified study gets to a time, and whether it starts from stated values."""

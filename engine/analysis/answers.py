@@ -9,6 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from polewise.analysis.impedance import Impedance, find_impedance
+from polewise.analysis.large_modes import Region, modes_in_region
 from polewise.analysis.loop import Loop, open_loops
 from polewise.analysis.margins import Margins
 from polewise.analysis.modes import Modes, find_modes
@@ -24,6 +25,9 @@ from polewise.results.wording import preferred_unit
 
 POINTS_PER_DECADE = 60  # of curves that a study asks for
 POINTS_MIN = 61
+LARGE_BRANCHES = 1500  # a circuit with more is asked for its least damped modes in this region only
+LARGE_REGION = Region(1.0, 1e5, 0.5)
+LARGE_COUNT = 20
 DEFAULT_RANGE_HZ = (0.1, 1e6)  # of a requirement whose loop or impedance no order of its study gives a range
 
 Place = tuple[str, float]
@@ -71,6 +75,8 @@ def answer_study(study: StudyDef, stand_at: Callable[[Place | None], Standpoint]
 
 def _answer(order: AnalysisOrder, stand: Standpoint) -> Modes | ResponseCurve | Impedance | tuple[Loop, ...]:
     if order.kind == "modes":
+        if len(stand.circuit.branches) > LARGE_BRANCHES:
+            return modes_in_region(stand, LARGE_REGION, LARGE_COUNT)
         return find_modes(stand)
     f = frequencies_of(order.low_hz, order.high_hz)
     if order.kind == "loop":

@@ -103,7 +103,7 @@ def pencil(linear: LinearSystem, s: complex) -> SparseArray:
 
 
 def _sparse(linear: LinearSystem, s: ComplexArray) -> ComplexArray:
-    from scipy.sparse.linalg import splu
+    from polewise.analysis.sparse_factors import SparseFactors
 
     _, _, c_w, _, _, g_u = bordered(linear)
     b, e_u, c, d = (m.toarray() for m in (linear.b, linear.e_u, linear.c, linear.d))
@@ -113,6 +113,6 @@ def _sparse(linear: LinearSystem, s: ComplexArray) -> ComplexArray:
     for k, value in enumerate(s):
         matrix = pencil(linear, complex(value))
         right = np.concatenate([b - value * e_u, h[k][:, None] * g_u]).astype(complex)
-        x = splu(matrix).solve(right)
+        x = SparseFactors(matrix).solve(right)
         result[k] = c @ x[: linear.n] + c_w @ x[linear.n :] + d
     return result
