@@ -80,7 +80,7 @@ ITERATION_LIMIT = 60  # Newton iterations per round
 DAMPING_MIN = 1e-4  # smallest damping factor
 TOLERANCE_MAX = 1e-10  # of the last correction against |x| + scale; at most this, at best
 TOLERANCE_MIN = 1e-14
-STALLED = 1e-9  # a correction this small that no longer shrinks is rounding
+STALLED = 1e-7  # a correction this small that no longer shrinks is rounding (a node that only leakage holds is known to no more digits)
 RATE_REUSE = 0.1  # factors serve on while each correction is at most this part of the one before
 
 
