@@ -50,7 +50,7 @@ from polewise.kernels.locate import LOCATED, LOCATED_AT_START, find_candidates_c
 from polewise.kernels.opcodes import Status
 from polewise.kernels.program import Program
 from polewise.kernels.record import record_point_c, record_step_c
-from polewise.kernels.restart import restart_c
+from polewise.kernels.restart import note_sizes_c, restart_c
 from polewise.kernels.stamp import STAMP
 from polewise.kernels.step import START_NOT_FINITE, attempt_step_c
 from polewise.kernels.tape import WHOLE, segment_three_c
@@ -170,6 +170,7 @@ def _build(stamp: int) -> Any:
             F[q_keep + i] = q
         for k in range(3 * n):
             F[z_old + k] = F[z + k]
+        note_sizes_c(F, W)
         F[S_T] = t_new
         F[S_H_LAST] = h
         W[N_STEPS] += 1

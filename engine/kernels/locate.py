@@ -84,13 +84,18 @@ def _build(stamp: int) -> Any:
 
     @njit(cache=True, **INNER)
     def worst_of(F, W, reg, lanes):
-        """Largest violation of the candidates, each against its largest in the step, from the registers at F[reg:], `lanes` apart."""
+        """Largest violation of the candidates, each against its largest in the step, from the registers at F[reg:], `lanes` apart.
+
+        Violations count from switch_scale on: a flip is put just beyond its boundary, so that rounding cannot leave it on the near side, where a law
+        of very different slopes (a diode's) would at once flip back.
+        """
         _ = stamp
-        switch_reg, candidate, switch_now = W[AT_SWITCH_REG], W[AT_CANDIDATE], W[AT_SWITCH_NOW]
+        switch_reg, candidate, switch_now, switch_scale = W[AT_SWITCH_REG], W[AT_CANDIDATE], W[AT_SWITCH_NOW], W[AT_SWITCH_SCALE]
         worst = -np.inf
         for s in range(W[SIZE_S]):
             if W[candidate + s] == 1:
-                worst = max(worst, violation_c(F, W, s, F[reg + lanes * W[switch_reg + s]]) / F[switch_now + s])
+                beyond = violation_c(F, W, s, F[reg + lanes * W[switch_reg + s]]) - F[switch_scale + s]
+                worst = max(worst, beyond / F[switch_now + s])
         return worst
 
     @njit(cache=True, **INNER)
@@ -201,7 +206,7 @@ def _build(stamp: int) -> Any:
             if W[candidate + s] == 1:
                 value = F[reg + lanes * W[switch_reg + s]]
                 beyond = violation_c(F, W, s, value)
-                if beyond / F[switch_now + s] >= nearest or beyond >= -band * F[switch_scale + s]:
+                if (beyond - F[switch_scale + s]) / F[switch_now + s] >= nearest or beyond >= -band * F[switch_scale + s]:
                     status = set_mode_c(F, W, s, next_mode_c(F, W, s, value))
                     if W[N_LOCATED] > W[N_CHATTER_LIMIT]:
                         W[N_WORST_SWITCH] = s

@@ -192,9 +192,11 @@ def _build(stamp: int) -> Any:
                         V[U(dense + W[U(l_row + m)])] -= V[U(l_val + m)] * y
             pivot = V[U(dense + k)]
             V[U(dense + k)] = 0.0
-            inverse = pivot
-            if pivot != 0.0:  # a complex zero would raise, whatever the error model; it is found bad below
-                inverse = 1.0 / pivot
+            pivot_size = abs(pivot.real) + abs(pivot.imag)
+            if not (SINGULAR_LIMIT < pivot_size < np.inf):
+                good = False
+                pivot = 1.0 + 0.0 * V[U(l_val)]  # any number of the right type: a complex division by zero would raise
+            inverse = 1.0 / pivot
             V[U(pivot_inverse + k)] = inverse
             largest = 0.0
             for e in range(W[U(l_ptr + k)], W[U(l_ptr + k + 1)]):
@@ -203,8 +205,7 @@ def _build(stamp: int) -> Any:
                 V[at] = 0.0
                 largest = max(largest, abs(y.real) + abs(y.imag))
                 V[U(l_val + e)] = y * inverse
-            pivot_size = abs(pivot.real) + abs(pivot.imag)
-            if not (pivot_size >= GROWTH_LIMIT * largest and SINGULAR_LIMIT < pivot_size < np.inf):
+            if not (pivot_size >= GROWTH_LIMIT * largest):
                 good = False
         return LU_DONE if good else LU_BAD_PIVOT
 

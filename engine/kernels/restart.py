@@ -14,6 +14,7 @@ from numba import njit
 from polewise.kernels.build import INNER, KERNEL
 from polewise.kernels.history import load_delayed_c
 from polewise.kernels.layout import (
+    AT_ALGEBRAIC,
     AT_COL_PTR,
     AT_DELAY_IN_REG,
     AT_DX,
@@ -80,7 +81,8 @@ ITERATION_LIMIT = 60  # Newton iterations per round
 DAMPING_MIN = 1e-4  # smallest damping factor
 TOLERANCE_MAX = 1e-10  # of the last correction against |x| + scale; at most this, at best
 TOLERANCE_MIN = 1e-14
-STALLED = 1e-7  # a correction this small that no longer shrinks is rounding (a node that only leakage holds is known to no more digits)
+STALLED = 1e-7  # a correction this small that no longer shrinks, Jacobian fresh, is rounding: small currents from sums of large ones times megohms
+SIZE_PART = 0.1  # an algebraic unknown's scale is at least this part of the largest value it has had: it follows from states, which have their own
 RATE_REUSE = 0.1  # factors serve on while each correction is at most this part of the one before
 
 
@@ -186,9 +188,9 @@ def _build(stamp: int) -> Any:
                         need = True
                         continue
                     fresh = False
-                elif base <= STALLED:
-                    return DONE
                 elif fresh:
+                    if base <= STALLED:
+                        return DONE
                     damping *= 0.5
                     if damping < DAMPING_MIN:
                         for i in range(n):
@@ -215,6 +217,15 @@ def _build(stamp: int) -> Any:
             mismatch_c(F, W, K)
         return NO_CONVERGENCE
 
+    @njit(cache=True, **INNER)
+    def note_sizes(F, W):
+        """Raise the scales of algebraic unknowns that turn out larger."""
+        _ = stamp
+        x, scale, algebraic = W[AT_X], W[AT_SCALE], W[AT_ALGEBRAIC]
+        for i in range(W[SIZE_N]):
+            if W[algebraic + i] == 1:
+                F[scale + i] = max(F[scale + i], SIZE_PART * abs(F[x + i]))
+
     @njit(inline="always")
     def start_from_registers(F, W, K):
         """The next step starts here: f_start from reg, the charges exactly those that were kept."""
@@ -227,6 +238,7 @@ def _build(stamp: int) -> Any:
             segment_c(F, W, K, WHOLE(3))
             for d in range(W[SIZE_DELAY]):
                 F[W[AT_HISTORY_START] + d] = F[reg + W[W[AT_DELAY_IN_REG] + d]]
+        note_sizes_c(F, W)
         W[N_NEEDS_RESTART] = 0
         W[N_START_READY] = 1
         W[N_REG_AT_START] = 1
@@ -265,10 +277,10 @@ def _build(stamp: int) -> Any:
                 return status
         return CHATTER
 
-    return mismatch, size, correction, restart_factorise, solve_frozen, start_from_registers, restart
+    return mismatch, size, correction, restart_factorise, solve_frozen, note_sizes, start_from_registers, restart
 
 
-(mismatch_c, size_c, correction_c, restart_factorise_c, solve_frozen_c, start_from_registers_c, restart_c) = _build(STAMP)
+(mismatch_c, size_c, correction_c, restart_factorise_c, solve_frozen_c, note_sizes_c, start_from_registers_c, restart_c) = _build(STAMP)
 
 
 def restart(program: Program, work: Workspace) -> int:

@@ -138,7 +138,7 @@ NEWTON_LIMIT = 8  # iterations per attempt
 STEP_RATIO_SAME = 1e-7  # factors serve a step size this close to theirs as if it were the same (clock periods differ by rounding)
 ROUND_OFF = 40 * 2.220446049250313e-16  # corrections this small against |x| + scale are rounding
 DIVERGED = 0.99  # convergence rate from which Newton has failed
-STALLED = 0.01  # a correction this small in error weights that no longer shrinks is rounding (sums of large numbers), and good enough
+STALLED = 0.1  # Newton may give up its own tolerance when what is left is this small in error weights: rounding of sums of large numbers
 
 
 def _build(stamp: int) -> Any:
@@ -314,7 +314,7 @@ def _build(stamp: int) -> Any:
                     return NO_CONVERGENCE
                 eta = theta / (1.0 - theta)
                 if eta * norm * theta ** (NEWTON_LIMIT - 1 - iteration) > tolerance:
-                    return NO_CONVERGENCE
+                    return DONE if eta * norm <= STALLED else NO_CONVERGENCE
             norm_old = norm
             F[S_ETA] = eta
             if eta * norm <= tolerance:

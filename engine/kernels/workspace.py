@@ -160,7 +160,7 @@ def kernel_program(program: Program) -> Program:
 
 def error_tolerance(rtol: float) -> float:
     """Tolerance of the error test. The estimate falls as h^4, the error of a run as h^5: its tolerance^(5/4) is proportional to rtol."""
-    return ERROR_FACTOR * float(rtol) ** 0.8
+    return float(ERROR_FACTOR * rtol**0.8)
 
 
 def newton_tolerance(rtol: float) -> float:
@@ -248,6 +248,8 @@ def grow(program: Program, work: Workspace, status: int) -> Workspace:
     new.counter[N_HISTORY_FIRST] = 0
     at_level = (head[layout.AT_BREAK_LEVEL], new.W[layout.AT_BREAK_LEVEL])
     new.W[at_level[1] : at_level[1] + BREAK_CAPACITY] = work.W[at_level[0] : at_level[0] + BREAK_CAPACITY]
+    at_scale = (head[layout.AT_SCALE], new.W[layout.AT_SCALE])
+    new.F[at_scale[1] : at_scale[1] + program.n] = work.F[at_scale[0] : at_scale[0] + program.n]
     new.counter[N_FACTORS_READY] = 0
     new.counter[N_RESTART_FACTORS] = 0
     new.counter[N_JACOBIAN_AGE] = 0
@@ -279,6 +281,7 @@ def _allocate(program: Program, sizes: _Sizes, order: IntArray) -> Workspace:
         layout.AT_CLOCK_P: program.clock_p,
         layout.AT_CLOCK_REG: program.clock_reg,
         layout.AT_CLOCK_RANK: program.clock_rank,
+        layout.AT_ALGEBRAIC: _algebraic(program),
         layout.AT_MODE: n_s,
         layout.AT_FLIPPED: n_s,
         layout.AT_CANDIDATE: n_s,
@@ -396,6 +399,17 @@ def _allocate(program: Program, sizes: _Sizes, order: IntArray) -> Workspace:
         break_t=f(layout.AT_BREAK_T, BREAK_CAPACITY),
         record=f(layout.AT_RECORD, sizes.record, 2 + n_out),
     )
+
+
+def _algebraic(program: Program) -> IntArray:
+    """1 for each unknown that no charge depends on."""
+    zero = program.constants == 0.0
+    is_zero = np.zeros(program.n_reg, dtype=bool)
+    is_zero[: program.n_const] = zero
+    moves = ~is_zero[program.jq_reg] & (program.q_reg[program.row_idx] >= 0)
+    column = np.repeat(np.arange(program.n), np.diff(program.col_ptr))
+    algebraic: IntArray = (np.bincount(column[moves], minlength=program.n) == 0).astype(np.int64)
+    return algebraic
 
 
 _FLOAT_VECTORS: Final = (

@@ -190,3 +190,20 @@ def test_algebraic_unknowns_jump_and_are_recorded_on_both_sides():
     assert before[0, 0] == after[0, 0] == pytest.approx(0.5)
     assert before[0, 3] == pytest.approx(-1.0)
     assert after[0, 3] == pytest.approx(3.0)
+
+
+@pytest.mark.parametrize("blocking_ohm", [1e3, 1e6, 1e8])
+def test_a_law_with_very_different_slopes_turns_over_cleanly(blocking_ohm):
+    """A diode of 1 mohm and many ohm behind 1 mH and 1 ohm on a 50 Hz sine: its switch watches its own voltage, whose slopes differ 1e11-fold."""
+    case = make(
+        2,
+        lambda t, x, p: [x[1] + x[0] - 100.0 * sin(100.0 * math.pi * t), x[1] - x[1].positive().choose(1e-3 * x[0], blocking_ohm * x[0])],
+        lambda t, x, p: [1e-3 * x[0], None],
+        rtol=1e-7,
+        scales=[10.0, 10.0],
+    ).start([0.0, 0.0])
+    assert case.advance(0.1) == Status.DONE
+    rows = case.rows[case.rows[:, 1] > 0]
+    assert rows[:, 2].min() > -110.0 / blocking_ohm
+    assert rows[:, 2].max() == pytest.approx(95.9, rel=1e-2)
+    assert case.work.counter[N_EVENTS] <= 24
