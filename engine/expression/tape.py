@@ -11,7 +11,7 @@ from polewise.expression.collection import no_collection
 from polewise.expression.derivative import Differentiator
 from polewise.expression.graph import CONSTANT, OPERATION_NAMES, SYMBOL, ExpressionGraph, Node
 from polewise.kernels import opcodes as op
-from polewise.kernels.program import Program
+from polewise.kernels.program import IntArray, Program
 
 # A switch's watched value counts as zero within this part of its scale: far above rounding, far below any tolerance in use.
 SWITCH_BAND_RELATIVE = 1e-12
@@ -209,7 +209,9 @@ class _Writer:
 
         watched_switches = {k for k in graph.reachable(watched) if k in switch_of}
         kinds = {op.POSITIVE: op.SWITCH_POSITIVE, op.FLOOR: op.SWITCH_FLOOR, op.TABLE: op.SWITCH_TABLE}
-        knots, coefficients, table_ptr = [], [], [0]
+        knots: list[float] = []
+        coefficients: list[tuple[float, float, float, float]] = []
+        table_ptr = [0]
         for table in graph.tables:
             knots.extend(table.knots)
             coefficients.extend(table.coefficients)
@@ -224,7 +226,7 @@ class _Writer:
             x_reg=x_reg,
             p_reg=p_reg,
             n_p=len(self.parameters),
-            constants=np.array([graph.values[k] for k in list(register)[:n_const]], dtype=float),
+            constants=np.array([graph.values[k] for k in list(register)[:n_const]], dtype=np.float64),
             op=ops[0].copy(),
             dst=ops[1].copy(),
             a=ops[2].copy(),
@@ -240,22 +242,22 @@ class _Writer:
             switch_kind=_ints([kinds[graph.operation[k]] for k in switch_nodes]),
             switch_reg=_ints([register[graph.a[k]] for k in switch_nodes]),
             switch_table=_ints([graph.c[k] if graph.operation[k] == op.TABLE else -1 for k in switch_nodes]),
-            switch_scale=np.array([self._band(k, size_of) for k in switch_nodes], dtype=float),
+            switch_scale=np.array([self._band(k, size_of) for k in switch_nodes], dtype=np.float64),
             switch_watched=_ints([1 if k in watched_switches else 0 for k in switch_nodes]),
             table_ptr=_ints(table_ptr),
-            table_knots=np.array(knots, dtype=float),
-            table_coef=np.array(coefficients, dtype=float).reshape(-1, 4),
+            table_knots=np.array(knots, dtype=np.float64),
+            table_coef=np.array(coefficients, dtype=np.float64).reshape(-1, 4),
             table_closed=_ints([1 if t.closed else 0 for t in graph.tables]),
             out_reg=_ints([register[k] for k in outputs]),
             delay_in_reg=_ints([register[d.expression] for d in delays]),
             delay_p=_ints([d.parameter for d in delays]),
-            delay_s=np.array([d.delay_s for d in delays], dtype=float),
-            clock_period=np.array([c.period_s for c in clocks], dtype=float),
+            delay_s=np.array([d.delay_s for d in delays], dtype=np.float64),
+            clock_period=np.array([c.period_s for c in clocks], dtype=np.float64),
             clock_ptr=_ints(clock_ptr),
             clock_p=_ints([j for c in clocks for j, _ in c.updates]),
             clock_reg=_ints([register[node] for c in clocks for _, node in c.updates]),
             clock_rank=_ints([c.rank for c in clocks]),
-            scale=np.array(scales, dtype=float),
+            scale=np.array(scales, dtype=np.float64),
             is_algebraic=_ints([1 if q is None else 0 for q in charges]),
         )
         return CompiledProgram(program, tuple(switch_nodes), register)
@@ -281,7 +283,7 @@ class _Writer:
         return SWITCH_BAND_RELATIVE * (size if size > 0.0 else 1.0)
 
 
-def _ints(values: object) -> np.ndarray:  # type: ignore[type-arg]
+def _ints(values: object) -> IntArray:
     return np.asarray(values, dtype=np.int64).reshape(-1)
 
 

@@ -11,6 +11,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
 import networkx as nx
+
 from polewise.circuit.model import Branch, Circuit, Law
 from polewise.devices.kind import KINDS, SlotForm
 

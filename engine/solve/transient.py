@@ -326,7 +326,8 @@ def _wave_step(period_s: float, tolerance: float) -> float:
 
     Source: remainder of cubic interpolation, here with the constant of Hermite's; e.g. Stoer & Bulirsch, Introduction to Numerical Analysis, 2.1.
     """
-    return period_s / max(STEPS_PER_PERIOD_LEAST, 2.0 * math.pi / (384.0 * tolerance) ** 0.25)
+    steps = max(STEPS_PER_PERIOD_LEAST, 2.0 * math.pi / math.sqrt(math.sqrt(384.0 * tolerance)))
+    return period_s / steps
 
 
 def _load_past(work: Workspace, start: StartState) -> None:
