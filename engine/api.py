@@ -30,6 +30,7 @@ if TYPE_CHECKING:
     from polewise.analysis.loop import Loop
     from polewise.analysis.magnified import EdgeWindow
     from polewise.analysis.modes import Modes
+    from polewise.analysis.orbit import Orbit
     from polewise.analysis.point import ComplexArray
     from polewise.analysis.standpoint import Standpoint
     from polewise.analysis.trust import TrustLimits, TrustReport
@@ -551,6 +552,17 @@ class System:
 
         with self._lock:
             return stability_limit(self._stand(None), name, low, high)
+
+    def orbit(self, period: float) -> Orbit:
+        """The periodic state of a circuit in phase quantities, and its Floquet multipliers: stable if all lie inside the unit circle.
+
+        Args:
+            period: common period of everything that drives the circuit, s.
+        """
+        from polewise.analysis.orbit import find_orbit
+
+        with self._lock:
+            return find_orbit(self._stand(None), period)
 
     def answered(self, plan: StudyPlan, result: Result) -> Result:
         """A run's result with answers to the study's small-signal orders and the verdict on requirements that rest on them."""
