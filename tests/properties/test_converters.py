@@ -80,6 +80,19 @@ q0: x0 --[l: 2.0 uH]-- gnd
 c0: o0 --[100 uF]-- gnd
 load0: o0 --[r: 2 ohm]-- gnd"""
 
+# The neighbour's inrush pulls the rail below a stage's output, which it was charging in discontinuous conduction.
+SINKING_RAIL = """reference gnd
+supply: src --[48 V]-- gnd
+line: src --[r: 5 mohm]-- bus
+leg0: pole(bus, gnd, x0, duty = 0.45, rate = 20000.0 Hz, upper = transistor(0.0 ohm), lower = diode(0.0 V, 0.0 ohm))
+q0: x0 --[l: 2.0 uH]-- o0
+c0: o0 --[100 uF]-- gnd
+load0: o0 --[r: 20 ohm]-- gnd
+leg1: pole(o1, gnd, x1, lower_duty = 0.2, rate = 20000.0 Hz, upper = transistor(0.0 ohm), lower = transistor(0.0 ohm))
+q1: bus --[l: 2.0 uH]-- x1
+c1: o1 --[100 uF]-- gnd
+load1: o1 --[r: 2 ohm]-- gnd"""
+
 
 @settings(max_examples=60, **SETTINGS)
 @given(drawn=systems())
@@ -112,6 +125,7 @@ def test_power_balances_at_rest(drawn: tuple[str, int]) -> None:
 @given(drawn=systems(), load=st.sampled_from([0.5, 3.0]))
 @example(drawn=(OVERSHOOT, 1), load=0.5)
 @example(drawn=(FROM_NOTHING, 1), load=0.5)
+@example(drawn=(SINKING_RAIL, 2), load=0.5)
 def test_tellegen_in_transients(drawn: tuple[str, int], load: float) -> None:
     # The sum of v i over everything, poles by their terminals, is zero at every instant, whatever the mode of conduction.
     text, number = drawn
