@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Final, TypeAlias
 
@@ -501,7 +501,7 @@ def _power(x: float, y: float) -> float:
     return result if isinstance(result, float) else math.nan
 
 
-UNARY: Final = {
+UNARY: Final[dict[int, Callable[[float], float]]] = {
     op.SQRT: math.sqrt,
     op.EXP: math.exp,
     op.LOG: math.log,
@@ -515,7 +515,7 @@ UNARY: Final = {
     op.COSH: math.cosh,
     op.TANH: math.tanh,
 }
-BINARY: Final = {
+BINARY: Final[dict[int, Callable[[float, float], float]]] = {
     op.ADD: lambda x, y: x + y,
     op.SUB: lambda x, y: x - y,
     op.MUL: lambda x, y: x * y,
