@@ -10,10 +10,12 @@ from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
 from types import FrameType
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
+from polewise.analysis.answers import Answer
+from polewise.analysis.figure import answer_figure
 from polewise.api import System
 from polewise.errors import EXIT_HOLDS, EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, EXIT_REQUIREMENT_FAILS, PolewiseError
 from polewise.results.failures import OutputFailed
@@ -27,6 +29,9 @@ from polewise.terminal.json_form import diagnostics_content
 from polewise.terminal.main import print_json, print_lines, read_or_tell, tell
 from polewise.terminal.progress import StudyProgress, say_first_compile
 from polewise.terminal.verdict_text import result_lines
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
 
 
 @dataclass(frozen=True, slots=True)
@@ -169,16 +174,21 @@ class _Files:
     def conclude(self, result: Result) -> None:
         """Write the figures and the final summary."""
         if self._options.figure:
-            figure = result.figure()
-            for ending in ("png", "svg"):
-                path = self._folder / f"{self._name}.{ending}"
-                try:
-                    figure.savefig(path)
-                except OSError as error:
-                    raise OutputFailed(str(path), error.strerror or str(error)) from error
+            self._save(result.figure(), self._name)
+            for number, answer in enumerate(result.answers, start=1):
+                if isinstance(answer, Answer):
+                    self._save(answer_figure(answer), f"{self._name}.{answer.order.kind}{number}")
         facts = result.facts
         reason = None if facts.complete else facts.trouble.diagnostic.headline if facts.trouble else "stopped from outside"
         write_summary(self._summary, self._about(reason, result))
+
+    def _save(self, figure: Figure, name: str) -> None:
+        for ending in ("png", "svg"):
+            path = self._folder / f"{name}.{ending}"
+            try:
+                figure.savefig(path)
+            except OSError as error:
+                raise OutputFailed(str(path), error.strerror or str(error)) from error
 
     def abandon(self, error: PolewiseError | None) -> None:
         """Let go of the files after a failure; the summary says why, where it can still be written."""

@@ -83,3 +83,14 @@ def test_wrong_orders_are_refused_when_read(order: str, words: str) -> None:
     text = TANK.format(mask="4", damping="0.1").replace("    modes\n", f"    {order}\n", 1)
     with pytest.raises(polewise.NetlistError, match=words):
         polewise.from_text(text)
+
+
+def test_every_answer_has_a_figure(tmp_path: Path) -> None:
+    pytest.importorskip("matplotlib")
+    from polewise.analysis.figure import answer_figure
+
+    for k, answer in enumerate(polewise.load(REGULATOR).run("margins").answers):
+        assert isinstance(answer, Answer)
+        path = tmp_path / f"{k}.svg"
+        answer_figure(answer).savefig(path)
+        assert path.stat().st_size > 5000
