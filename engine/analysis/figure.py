@@ -53,7 +53,7 @@ def loops_figure(loops: tuple[Loop, ...], title: str) -> Figure:
             )
         plane.plot(loop.gain.real, loop.gain.imag, color=colour, linewidth=1.3)
     _frame(plane)
-    plane.plot([-1.0], [0.0], "x", color=_FAILS if any(not loop.stable for loop in loops) else _HOLDS, markersize=8)
+    plane.plot([-1.0], [0.0], "x", color=_FAILS if any(loop.stable is False for loop in loops) else _HOLDS, markersize=8)
     angle = np.linspace(0.0, 2.0 * math.pi, 181)
     plane.plot(np.cos(angle), np.sin(angle), color=_FAINT, linewidth=0.8)
     plane.set_xlim(-_VIEW, _VIEW)

@@ -15,7 +15,6 @@ from polewise.analysis.standpoint import Standpoint
 from polewise.grammar import units
 from polewise.grammar.units import unit_text
 from polewise.kernels.program import FloatArray
-from polewise.results.failures import MissingExtra
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -85,12 +84,12 @@ class StateSpace:
         """A state-space object of the optional package `control`, with names.
 
         Raises:
-            MissingExtra: it is not installed.
+            AnalysisRefused: it is not installed.
         """
         try:
             import control  # type: ignore[import-not-found,unused-ignore]
         except ImportError:
-            raise MissingExtra("control", "full", "handing a state space over") from None
+            raise failures.refused("no-control-package", "the package `control` is not installed", "install it, or take `to_scipy()`") from None
         x = self.explicit()
         return control.ss(x.a, x.b, x.c, x.d, inputs=list(x.inputs), outputs=list(x.outputs), states=list(x.states))
 

@@ -58,8 +58,8 @@ class Split:
         return float(np.max(self.coupling, initial=0.0))
 
     @property
-    def stable(self) -> bool:
-        """Whether both sides together are stable: the real verdict, coupling included."""
+    def stable(self) -> bool | None:
+        """Whether both sides together are stable: the real verdict, coupling included; None where it could not be found."""
         return self.nyquist.stable
 
 
@@ -175,12 +175,23 @@ def _split(stand: Standpoint, places: Sequence[Port], frequencies: FloatArray, s
     linear = copy.linear(probing, inputs, ordered)
     hybrid = _hybrid(response(linear, frequencies), k)
     poles = spectrum(constrained(linear, range(2 * k, 4 * k))).values if linear.n <= DENSE_MODES_LIMIT and not linear.held else None
-    closed = spectrum(linear).values if linear.n <= DENSE_MODES_LIMIT and not linear.held else None
+    closed = _closed_modes(linear)
 
     def ratio(f: FloatArray) -> ComplexArray:
         return _hybrid(response(linear, f), k).ratio
 
     return _verdicts(frequencies, hybrid, ratio, poles, closed)
+
+
+def _closed_modes(linear: LinearSystem) -> ComplexArray | None:
+    """All modes of both sides together; None where there are too many unknowns."""
+    if linear.n > DENSE_MODES_LIMIT:
+        return None
+    if linear.held:
+        from polewise.analysis.sampled import sampled_spectrum
+
+        return sampled_spectrum(linear)[0].values
+    return spectrum(linear).values
 
 
 def _at(stand: Standpoint, place: Port, names: Sequence[str]) -> list[str]:

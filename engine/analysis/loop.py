@@ -41,8 +41,8 @@ class Loop:
         return self.gain
 
     @property
-    def stable(self) -> bool:
-        """Whether the closed loop is stable."""
+    def stable(self) -> bool | None:
+        """Whether the closed loop is stable; None where nothing decides it (a system too large to find all its modes)."""
         return self.nyquist.stable
 
     def at(self, frequencies_hz: Sequence[float] | FloatArray) -> ComplexArray:

@@ -36,11 +36,13 @@ class NyquistCount:
     encirclements: float | None
 
     @property
-    def stable(self) -> bool:
-        """Whether the closed loop is stable: by its eigenvalues, or by the count where they were not found."""
+    def stable(self) -> bool | None:
+        """Whether the closed loop is stable: by its eigenvalues, or by the count where they were not found; None where neither decides."""
         if self.closed_unstable is not None:
             return self.closed_unstable == 0
-        return self.open_unstable is not None and self.encirclements is not None and round(self.encirclements) + self.open_unstable == 0
+        if self.open_unstable is None or self.encirclements is None:
+            return None
+        return round(self.encirclements) + self.open_unstable == 0
 
     @property
     def agrees(self) -> bool | None:

@@ -95,11 +95,17 @@ def _loop(loop: Loop, style: Style) -> list[str]:
         parts.append(f"{round(count.encirclements)} encirclements of -1")
     if count.closed_unstable is not None:
         parts.append(f"{count.closed_unstable} unstable modes of the closed loop")
-    verdict = style.paint("stable", "good") if loop.stable else style.paint("UNSTABLE", "bad")
+    verdict = _verdict(loop.stable, style)
     lines.append(f"  {', '.join(parts)}: {verdict}")
     if count.agrees is False:
         lines.append("  the curve and the modes disagree: the range or the model needs a look")
     return lines
+
+
+def _verdict(stable: bool | None, style: Style) -> str:
+    if stable is None:
+        return "not decided"
+    return style.paint("stable", "good") if stable else style.paint("UNSTABLE", "bad")
 
 
 def _response(curve: ResponseCurve, style: Style) -> list[str]:
@@ -156,9 +162,10 @@ def _impedance(found: Impedance, style: Style) -> list[str]:
         )
         lines += table(headings, rows, style, kinds=["good" if c.holds else "bad" for c in split.criteria])
     count = split.nyquist
-    verdict = style.paint("stable", "good") if split.stable else style.paint("UNSTABLE", "bad")
+    verdict = _verdict(split.stable, style)
     turns = "not decided" if count.encirclements is None else f"{round(count.encirclements)}"
-    lines.append(f"  both sides together: {verdict} (unstable poles of the sides {count.open_unstable}, encirclements {turns})")
+    poles = "not found" if count.open_unstable is None else str(count.open_unstable)
+    lines.append(f"  both sides together: {verdict} (unstable poles of the sides {poles}, encirclements {turns})")
     if split.coupling_largest > 1e-6:
         lines.append(
             f"  the sides are coupled past the node: 1 + ratio shifts by up to {split.coupling_largest:.2g}; only the count above holds then"

@@ -214,7 +214,7 @@ def test_duty_read_once_a_period_lags_by_its_pulse() -> None:
 def test_response_equals_a_small_sine_put_into_the_averaged_run() -> None:
     # A part in 10^4 on the duty of a lossy step-up, the last of several periods taken apart by a Fourier sum.
     stage = CONTINUOUS["step-up"]
-    f, size, periods = 2e3, 1e-4, 24
+    f, size = 2e3, 1e-4
     text = TOPOLOGIES["step-up"](stage).replace(
         "duty = 0.5", f"duty = 0.5 + {size} * sin(2*pi * {f} Hz * (time - begin) if time > begin otherwise 0)"
     )
@@ -228,4 +228,3 @@ def test_response_equals_a_small_sine_put_into_the_averaged_run() -> None:
     measured = 2 * np.mean(values * np.exp(-2j * np.pi * f * times)) / (size * np.exp(-0.5j * np.pi))
     expected = polewise.from_text(TOPOLOGIES["step-up"](stage)).response("v_out", "leg.duty", [f])[0]
     assert measured == pytest.approx(expected, rel=2e-5)
-    assert periods > 0
