@@ -206,3 +206,28 @@ def test_commensurate_clocks_are_lifted_and_others_refused() -> None:
     assert sorted(got, key=lambda k: (k.real, k.imag)) == pytest.approx(sorted(z, key=lambda k: (k.real, k.imag)), abs=1e-12)
     with pytest.raises(polewise.PolewiseError, match="common period"):
         two("141.421356237 us").modes()
+
+
+def test_sampled_response_equals_a_sine_put_into_the_run() -> None:
+    # 1.3 kHz into the reference of a loop clocked at 10 kHz; the part of the choke's current at that frequency over 10 ms, both clocks' period.
+    def loop(more: str, study: str = "") -> polewise.System:
+        return polewise.from_text(f"""
+            reference gnd
+            latch drive = 0 V
+            latch next = 0 V
+            signal ask = 5 A{more}
+            signal err = ask - choke.i
+            feed: x --[drive]-- gnd
+            choke: x --[r: 0.3 ohm]--[l: 1 mH]-- gnd
+            every 100 us {{ set drive = next; set next = 3 V/A * err }}
+            {study}
+        """)
+
+    f = 1300.0
+    expected = loop("").response("choke.i", "ask", [f])[0]
+    times = np.linspace(50e-3, 60e-3, 4000, endpoint=False)
+    study = "study wave {\n start cold\n run for 60 ms\n keep choke.i\n }"
+    result = loop(" + 1 A * sin(2*pi * 1300 Hz * time)", study).run("wave", tolerance=1e-9, at=[float(t) for t in times])
+    values = np.interp(times, result.time, result["choke.i"])
+    measured = 2j * np.mean(values * np.exp(-2j * np.pi * f * times))
+    assert measured == pytest.approx(expected, rel=1e-4)
