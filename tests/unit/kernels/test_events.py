@@ -207,3 +207,24 @@ def test_a_law_with_very_different_slopes_turns_over_cleanly(blocking_ohm):
     assert rows[:, 2].min() > -110.0 / blocking_ohm
     assert rows[:, 2].max() == pytest.approx(95.9, rel=1e-2)
     assert case.work.counter[N_EVENTS] <= 24
+
+
+@pytest.mark.parametrize("duty", [0.3, 0.5, 0.999])
+def test_edges_of_a_carrier_are_hit_one_by_one(duty):
+    """x' = (s - x), s = 1 while the saw-tooth t f - floor(t f) is below the duty: exact recurrence over 200 periods; edges at k/f and (k + d)/f."""
+    rate = 50.0
+    case = make(
+        1,
+        lambda t, x, p: [x[0] - (duty - (rate * t - (rate * t).floor())).positive().choose(1.0, 0.0)],
+        lambda t, x, p: [x[0]],
+        rtol=1e-9,
+    ).start([0.0])
+    periods = 200
+    assert case.advance(periods / rate) == Status.DONE
+    x, on, off = 0.0, math.exp(-duty / rate), math.exp(-(1.0 - duty) / rate)
+    for _ in range(periods):
+        x = (1.0 - (1.0 - x) * on) * off
+    assert case.work.x[0] == pytest.approx(x, rel=1e-8)
+    edges = np.unique(case.rows[case.rows[:, 1] == FLAG_BEFORE, 0]) * rate
+    expected = np.sort(np.concatenate([np.arange(1.0, periods), np.arange(periods) + duty]))
+    np.testing.assert_allclose(edges, expected, rtol=0, atol=1e-8)

@@ -183,3 +183,43 @@ def test_exponential_element():
     law = 1e-12 * np.expm1(rows[:, 2] / 0.025)
     assert np.max(np.abs(rows[:, 3] - law)) < 1e-7
     assert 0.4 < rows[:, 2].max() < 0.6
+
+
+def test_factors_grow_when_asked_and_the_run_goes_on():
+    """A hub eliminated first fills its factors: far more room than guessed. The run continues where it was."""
+    n = 90
+
+    def build(ordered):
+        return make(
+            n,
+            lambda t, x, p: [
+                sum((x[0] - x[k] for k in range(1, n)), start=0.0 * t) + x[0] - sin(t),
+                *[x[k] - x[0] + 0.01 * k * x[k] for k in range(1, n)],
+            ],
+            lambda t, x, p: [1.0 * v for v in x],
+            rtol=1e-8,
+            ordered=ordered,
+        ).start([0.0] * n)
+
+    full, sparse = build(False), build(True)
+    assert entry.advance(full.program, full.work, 1.0, 10**5) == Status.FACTORS_FULL
+    assert full.advance(1.0) == Status.DONE
+    assert sparse.advance(1.0) == Status.DONE
+    np.testing.assert_allclose(full.work.x, sparse.work.x, rtol=1e-9)
+    assert len(full.work.F) > len(sparse.work.F)
+
+
+def test_runs_side_by_side_do_not_disturb_each_other():
+    """The kernels release the interpreter's lock: two threads, two workspaces, the same numbers as one after the other."""
+    from concurrent.futures import ThreadPoolExecutor
+
+    def run(seed):
+        case = _pendulum(1e-9)
+        case.work.x[0] = case.work.q_keep[0] = 0.1 * seed
+        assert case.advance(5.0) == Status.DONE
+        return case.work.x.copy()
+
+    alone = [run(k) for k in range(4)]
+    with ThreadPoolExecutor(2) as pool:
+        together = list(pool.map(run, range(4)))
+    np.testing.assert_array_equal(np.array(alone), np.array(together))
