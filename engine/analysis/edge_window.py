@@ -21,13 +21,14 @@ from polewise.analysis.carriers import Carriers, carriers_of
 from polewise.analysis.failures import edges_refused
 from polewise.circuit.model import Circuit, Quantity
 from polewise.equations.assemble import assemble
+from polewise.equations.modulators import HIDDEN
 from polewise.equations.system import EquationSystem, Output, Timed
-from polewise.errors import SolverError
+from polewise.errors import Chatter, SolverError
 from polewise.grammar.source import no_span
 from polewise.grammar.units import TIME, format_value
 from polewise.kernels.program import FloatArray
 from polewise.network.graph import Network
-from polewise.results.recording import Column, MemorySink, Recording, Sink, recorded_curve
+from polewise.results.recording import Column, MemorySink, Recording, Sink, recorded_curve, row_blocks
 from polewise.results.result import EventEntry, RunFacts
 from polewise.results.study_run import COUNTERS_TOLD, TOLERANCE, Progress, RunWishes, StudyPlan, event_text
 from polewise.solve import initial, transient
@@ -38,11 +39,8 @@ from polewise.solve.problem import DaeProblem, build_problem
 PREROLL_PERIODS = 3  # of the slowest pole, run before the window begins
 MATCH_ROUNDS = 12  # of moving the start until the means agree
 MATCH_RELATIVE = 1e-5  # of a state's swing: closer agreement of the means is not looked for
-COMMON_PERIOD_MOST = 64  # periods of the slowest clock that a common period may take
-COMMON_RELATIVE = 1e-9
 NO_COMMON_PERIODS = 20  # periods of the slowest pole over which means are compared where there is no common period
 TOLERANCE_EDGES = 1e-7  # relative, where neither the study nor the caller states one
-_ASKED = "<asked for>"
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +74,7 @@ class WindowRun:
     averaged: Recording
 
 
-def edge_system(circuit: Circuit, network: Network, study: str | None, outputs: Sequence[Quantity]) -> EquationSystem:
+def edge_system(circuit: Circuit, network: Network, study: str | None, outputs: Sequence[Quantity], *, latched: bool = False) -> EquationSystem:
     """The equations with every edge.
 
     Raises:
@@ -84,7 +82,7 @@ def edge_system(circuit: Circuit, network: Network, study: str | None, outputs: 
     """
     if carriers_of(circuit) is None:
         raise edges_refused("the circuit has no pole, so nothing in it switches", "an ordinary run shows all there is")
-    return assemble(circuit, network, study=study, outputs=outputs, picture="edges")
+    return assemble(circuit, network, study=study, outputs=outputs, picture="latched edges" if latched else "edges")
 
 
 class _After:
@@ -112,7 +110,6 @@ class WindowTask:
         plan: what to record; its circuit is the one the magnified study's givens make.
         study: the magnified study's name; begin_s, end_s: the window.
         preroll_periods: of the slowest pole before the window.
-        averaged_from_start: whether the study's own start is cold: then a window that reaches back to it needs no matching.
     """
 
     plan: StudyPlan
@@ -150,31 +147,39 @@ def carry_out_window(
     if snapshot is None:
         raise edges_refused(f"the averaged run of `{task.study}` was stopped before the window", None)
     stretch = Stretch(circuit, task.plan.network, task.study, carriers, tolerance, guard)
+    common, span_s = stretch.common_period_s, stretch.span_s
+    length_s = circuit.studies[task.study].run_for_s
+    averaged_end = max(task.end_s, t0 + span_s) + 0.5 * span_s
+    averaged_end = averaged_end if length_s is None else max(task.end_s, min(averaged_end, length_s))
+    averaged = stretch.averaged(snapshot, task.plan.record.outputs, task.plan.record.columns, averaged_end)
     from_start = cold and t0 == 0.0
-    common = stretch.common_period_s
-    span_s = common if common is not None else NO_COMMON_PERIODS * carriers.longest_s
-    averaged = stretch.averaged(snapshot, task.plan.record.outputs, task.plan.record.columns, max(task.end_s, t0 + span_s) + 0.5 * span_s)
-    problem = stretch.edges(task.plan.record.outputs, hit=(task.begin_s, *wishes.at))
-    start, mismatch = stretch.start(problem, snapshot), 0.0
-    if not from_start:
-        start, mismatch = stretch.matched(problem, start, averaged.means(t0, t0 + span_s), span_s)
-    trouble: SolverError | None = None
-    tell = wishes.progress
-    try:
-        summary = transient.run(
-            problem,
-            start=start,
-            stop_s=task.end_s,
-            tolerance=tolerance,
-            sink=_After(sink, task.begin_s),
-            progress=None if tell is None else lambda t, end: tell(Progress(t, end)),
-            should_stop=wishes.should_stop,
-        )
-    except SolverError as error:
-        if not isinstance(error.partial, transient.RunSummary):
-            raise
-        trouble, summary = error, error.partial
-    window = WindowFacts(task.begin_s, task.end_s, t0, common, False, mismatch, _note(task, t0, carriers, common, from_start, mismatch))
+
+    def attempt(into: Sink) -> tuple[transient.RunSummary, SolverError | None, float]:
+        problem = stretch.edges(task.plan.record.outputs, hit=(task.begin_s, *wishes.at))
+        start, mismatch = stretch.start(problem, snapshot), 0.0
+        if not from_start:
+            wanted = averaged.means(t0, min(t0 + span_s, averaged_end))
+            start, mismatch = stretch.matched(problem, start, wanted, span_s)
+        tell = wishes.progress
+        try:
+            summary = transient.run(
+                problem,
+                start=start,
+                stop_s=task.end_s,
+                tolerance=tolerance,
+                sink=_After(into, task.begin_s),
+                progress=None if tell is None else lambda t, end: tell(Progress(t, end)),
+                should_stop=wishes.should_stop,
+            )
+        except SolverError as error:
+            if not isinstance(error.partial, transient.RunSummary):
+                raise
+            return error.partial, error, mismatch
+        return summary, None, mismatch
+
+    summary, trouble, mismatch = _latched_if_needed(stretch, task.plan.record.columns, sink, attempt)
+    note = _note(task, t0, stretch, from_start, mismatch)
+    window = WindowFacts(task.begin_s, task.end_s, t0, common, False, mismatch, note)
     counters = {name.replace("_", " "): getattr(summary.counters, name) for name in COUNTERS_TOLD}
     facts = RunFacts(
         title=circuit.title,
@@ -183,24 +188,46 @@ def carry_out_window(
         reached_s=summary.end_s,
         complete=summary.complete,
         trouble=trouble,
-        events=tuple(EventEntry(e.time_s, event_text(circuit, e.text, e.changes)) for e in summary.events if e.span.source.name != _ASKED),
+        events=tuple(EventEntry(e.time_s, event_text(circuit, e.text, e.changes)) for e in summary.events if e.span.source.name != HIDDEN),
         counters=counters,
         elapsed_s=clock.perf_counter() - began,
         warnings=summary.warnings,
+        remarks=(note,),
     )
     return WindowRun(facts, window, averaged.recording)
 
 
-def _note(task: WindowTask, t0: float, carriers: Carriers, common: float | None, from_start: bool, mismatch: float) -> str:
+def _latched_if_needed(
+    stretch: Stretch, columns: Sequence[Column], sink: Sink, attempt: Callable[[Sink], tuple[transient.RunSummary, SolverError | None, float]]
+) -> tuple[transient.RunSummary, SolverError | None, float]:
+    """Run with plain comparators; where they switch to and fro without end, with modulators that let each edge pass once a period."""
+    buffer = MemorySink(tuple(columns))
+    try:
+        outcome = attempt(buffer)
+        chattered = isinstance(outcome[1], Chatter)
+    except Chatter:
+        chattered = True
+    if chattered:
+        stretch.latched = True
+        buffer = MemorySink(tuple(columns))
+        outcome = attempt(buffer)
+    recording = buffer.finish()
+    for rows in row_blocks(recording, recording.columns):
+        sink.write(rows)
+    return outcome
+
+
+def _note(task: WindowTask, t0: float, stretch: Stretch, from_start: bool, mismatch: float) -> str:
+    latched = "; a duty jumps back at its own edge, so modulators let each edge pass once a period" if stretch.latched else ""
     if from_start:
-        return "run from the study's cold start with every edge"
-    lead = round((task.begin_s - t0) / carriers.longest_s, 2)
+        return f"run from the study's cold start with every edge{latched}"
+    lead, common = round((task.begin_s - t0) / stretch.carriers.longest_s, 2), stretch.common_period_s
     over = f"{NO_COMMON_PERIODS} periods of the slowest pole (the poles' rates have no common period)"
     if common is not None:
         over = f"a common period of {format_value(common, TIME)}"
     return (
         f"begun {lead:g} periods before the window, the state moved until its mean over {over} "
-        f"equals the averaged run's (to {mismatch:.1g} of the swing)"
+        f"equals the averaged run's (to {mismatch:.1g} of the swing){latched}"
     )
 
 
@@ -232,6 +259,12 @@ class Stretch:
     ) -> None:
         self.circuit, self.network, self.study, self.carriers, self.tolerance, self.guard = circuit, network, study, carriers, tolerance, guard
         self.common_period_s = self.carriers.common_period_s(self._other_clocks())
+        self.latched = False  # whether modulators let each edge pass once a period only
+
+    @property
+    def span_s(self) -> float:
+        """The common period, or the stretch that stands for it where there is none."""
+        return self.common_period_s if self.common_period_s is not None else NO_COMMON_PERIODS * self.carriers.longest_s
 
     def _other_clocks(self) -> list[float]:
         periods = [s.period_s for s in self.circuit.samplers]
@@ -241,8 +274,8 @@ class Stretch:
     def edges(self, outputs: Sequence[Quantity], *, hit: Sequence[float] = ()) -> DaeProblem:
         """The problem with every edge; outputs are those asked for, then every state."""
         with self.guard:
-            system = edge_system(self.circuit, self.network, self.study, outputs)
-            timed = tuple(Timed(float(t), (), no_span(_ASKED)) for t in hit)
+            system = edge_system(self.circuit, self.network, self.study, outputs, latched=self.latched)
+            timed = tuple(Timed(float(t), (), no_span(HIDDEN)) for t in hit)
             return build_problem(replace(system, timed=(*system.timed, *timed)))
 
     def with_states(self, problem: DaeProblem) -> DaeProblem:

@@ -20,6 +20,7 @@ from polewise.analysis.point import ComplexArray
 from polewise.analysis.stress import StressTable, stress_columns, stress_quantities, stress_table
 from polewise.circuit.model import Circuit, Quantity
 from polewise.equations.assemble import assemble
+from polewise.errors import Chatter
 from polewise.grammar.source import Span
 from polewise.grammar.units import TIME, format_value
 from polewise.network.graph import Network
@@ -199,10 +200,15 @@ def magnify_settled(
     more = stress_quantities(circuit)
     columns = (*(Column(q.name, q.dimension, q.is_condition, "kept") for q in kept), *stress_columns(circuit))
     edges = stretch.edges((*kept, *more))
-    found = find_periodic(stretch, edges, snapshot)
+    try:
+        found = find_periodic(stretch, edges, snapshot)
+    except Chatter:
+        stretch.latched = True
+        edges = stretch.edges((*kept, *more))
+        found = find_periodic(stretch, edges, snapshot)
     sink = MemorySink(columns)
     begin = found.start.time_s
-    end = begin + periods * (stretch.common_period_s or 20.0 * carriers.longest_s)
+    end = begin + periods * stretch.span_s
     summary = transient.run(edges, start=found.start, stop_s=end, tolerance=tolerance, sink=sink)
     counters = {name.replace("_", " "): getattr(summary.counters, name) for name in COUNTERS_TOLD}
     facts = RunFacts(circuit.title, "settled", end, summary.end_s, summary.complete, None, (), counters, summary.counters.wall_s)

@@ -17,7 +17,7 @@ import numpy as np
 from polewise.analysis.edge_window import Stretch, moved_states
 from polewise.analysis.point import ComplexArray
 from polewise.equations.system import EquationSystem
-from polewise.errors import SolverError
+from polewise.errors import Chatter, SolverError
 from polewise.kernels.program import FloatArray
 from polewise.results.study_run import Nothing
 from polewise.solve import transient
@@ -69,8 +69,7 @@ def find_periodic(stretch: Stretch, problem: DaeProblem, snapshot: Snapshot) -> 
     """
     start = stretch.start(problem, snapshot)
     period = stretch.common_period_s
-    span = period if period is not None else 20 * stretch.carriers.longest_s
-    start, _ = stretch.matched(problem, start, snapshot.unknowns, span)
+    start, _ = stretch.matched(problem, start, snapshot.unknowns, stretch.span_s)
     count = len(_Shooting(problem, 1.0, 1.0, snapshot.unknowns).states)
     if period is None:
         return _run_on(stretch, problem, start, "the poles' rates have no common period, so there is no periodic state")
@@ -81,6 +80,8 @@ def find_periodic(stretch: Stretch, problem: DaeProblem, snapshot: Snapshot) -> 
     shooting = _Shooting(problem, period, SHOOTING_TOLERANCE, snapshot.unknowns)
     try:
         return shooting.solve(start)
+    except Chatter:
+        raise
     except SolverError:
         return _run_on(stretch, problem, start, "shooting failed")
 

@@ -41,19 +41,21 @@ def assemble(
         study: whose events are in force beside the circuit's own; None: only the circuit's own.
         outputs: what will be recorded.
         sampling: "exact", or "mean" for the s-domain equivalents of sampled blocks.
-        picture: "averaged", or "edges" for poles with every switching edge (no operating point exists then).
+        picture: "averaged", or "edges" for poles with every switching edge (no operating point exists then); "latched edges" for modulators
+            that let each edge pass once a period.
     Raises:
         NetlistError: a loop of conditions, a derivative that cannot be determined, or an event that cannot be carried out.
     """
     with no_collection():
-        return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean", picture == "edges").assemble(outputs)
+        return _Assembler(circuit, network, circuit.studies[study] if study else None, sampling == "mean", picture).assemble(outputs)
 
 
 class _Assembler:
     """Collects sketches in circuit-level symbols, then resolves them all at once."""
 
-    def __init__(self, circuit: Circuit, network: Network, study: StudyDef | None, mean: bool, edges: bool) -> None:
-        self.circuit, self.network, self.study, self.edges = circuit, network, study, edges
+    def __init__(self, circuit: Circuit, network: Network, study: StudyDef | None, mean: bool, picture: str) -> None:
+        self.circuit, self.network, self.study = circuit, network, study
+        self.edges, self.latched = picture != "averaged", picture == "latched edges"
         self.graph: ExpressionGraph = circuit.graph
         self.sketch = SystemSketch(self.graph, mean)
 
@@ -65,7 +67,7 @@ class _Assembler:
         source = self.sketch.parameter("source_scale", "source_scale", 1.0, None, units.NONE)
         self._latches_and_clocks()
         duties = {} if self.edges else duties_in_force(circuit, self.sketch)
-        pole_gates = gates(circuit, self.sketch) if self.edges else {}
+        pole_gates = gates(circuit, self.sketch, latched=self.latched) if self.edges else {}
         definitions = Definitions(circuit, self.network, power, source, duties, pole_gates)
         definitions.define_all()
         definitions.defined.update(self.sketch.definitions)
@@ -197,7 +199,7 @@ class _Assembler:
         g, circuit = self.graph, self.circuit
         rows = [*definitions.rows, *self.sketch.rows]
         time_events = (*circuit.time_events, *(self.study.time_events if self.study else ()))
-        condition_events = (*circuit.condition_events, *(self.study.condition_events if self.study else ()))
+        condition_events = (*circuit.condition_events, *(self.study.condition_events if self.study else ()), *self.sketch.conditionals)
         flags = [
             (kind, name, condition, circuit.devices[name].span)
             for name, equations in definitions.equations.items()

@@ -9,12 +9,15 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 
-from polewise.circuit.model import Circuit, Device
+from polewise.circuit.model import Assignment, Circuit, ConditionEvent, Device
 from polewise.devices.kind import KINDS
 from polewise.equations.sketch import ClockSketch, SystemSketch
 from polewise.expression.graph import ExpressionGraph, Node
 from polewise.grammar import units
+from polewise.grammar.source import no_span
 
+# Source name of events that no log tells.
+HIDDEN = "<asked for>"
 DUTIES = ("duty", "upper_duty", "lower_duty")
 
 
@@ -30,9 +33,14 @@ def duties_in_force(circuit: Circuit, sketch: SystemSketch) -> dict[str, Node]:
     return duties
 
 
-def gates(circuit: Circuit, sketch: SystemSketch) -> dict[str, Mapping[str, Node]]:
-    """For every pole: "upper", "lower" and "driven" conditions."""
-    return {d.name: _gates(circuit.graph, d, sketch) for d in circuit.devices.values() if KINDS[d.kind].switching}
+def gates(circuit: Circuit, sketch: SystemSketch, *, latched: bool = False) -> dict[str, Mapping[str, Node]]:
+    """For every pole: "upper", "lower" and "driven" conditions.
+
+    Args:
+        latched: each edge that the duty makes passes once a period, whatever the duty does then. Without it a duty that jumps back at its own
+            edge (through a series resistance, say) switches to and fro without end, as a comparator without a latch does.
+    """
+    return {d.name: _gates(circuit.graph, d, sketch, latched) for d in circuit.devices.values() if KINDS[d.kind].switching}
 
 
 def _constant(graph: ExpressionGraph, device: Device, name: str) -> float:
@@ -55,7 +63,7 @@ def _duty(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Node:
     return duty
 
 
-def _gates(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Mapping[str, Node]:
+def _gates(g: ExpressionGraph, device: Device, sketch: SystemSketch, latched: bool) -> Mapping[str, Node]:
     rate_hz = _constant(g, device, "rate")
     period_s = 1.0 / rate_hz
     offset_s = period_s * _constant(g, device, "phase") / math.tau % period_s
@@ -64,10 +72,13 @@ def _gates(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Mapping[
     symbol = g.symbol("sampled", name)
     before = offset_s - period_s if offset_s > 0.0 else 0.0
     sketch.definitions[symbol] = sketch.parameter(name, "sampled", before, None, units.TIME, span=device.span)
-    sketch.clocks.append(ClockSketch(name, period_s, False, [(name, time)], offset_s))
+    clock = ClockSketch(name, period_s, False, [(name, time)], offset_s)
+    sketch.clocks.append(clock)
     into = g.multiply(g.subtract(time, symbol), g.constant(rate_hz))
     carrier = str(device.settings.get("carrier", "trailing"))
     due = g.positive(g.subtract(duty, carrier_at(g, carrier, into)))
+    if latched:
+        due = _latched(g, device, sketch, clock, carrier, due, into)
     dead_share = _constant(g, device, "dead_time") * rate_hz
     on = {"driven": due, "other": g.invert(due)}
     if dead_share > 0.0:
@@ -78,6 +89,30 @@ def _gates(g: ExpressionGraph, device: Device, sketch: SystemSketch) -> Mapping[
     upper_driven = _upper_is_driven(device)
     upper, lower = (on["driven"], on["other"]) if upper_driven else (on["other"], on["driven"])
     return {"upper": upper, "lower": lower, "driven": due}
+
+
+def _latched(g: ExpressionGraph, device: Device, sketch: SystemSketch, clock: ClockSketch, carrier: str, due: Node, into: Node) -> Node:
+    """Due with each of the carrier's edges passed once: what has risen stays, what has fallen stays, until the period ends.
+
+    Dead time looks back at the unlatched comparison; only the gate that is on is held.
+    """
+    half = g.positive(g.subtract(into, g.constant(0.5)))
+    for edge, phase in (("risen", "leading"), ("fallen", "trailing")):
+        if carrier not in (phase, "symmetric"):
+            continue
+        name = f"{device.name}.{edge}"
+        symbol = g.symbol("latch", name)
+        sketch.definitions[symbol] = sketch.parameter(name, "latch", 0.0, None, units.NONE, is_condition=True, span=device.span)
+        clock.updates.append((name, g.constant(0.0)))
+        there = g.constant(1.0) if carrier == phase else half if edge == "fallen" else g.invert(half)
+        passed = due if edge == "risen" else g.invert(due)
+        condition = g.both(there, g.both(passed, g.invert(symbol)))
+        span = no_span(HIDDEN)
+        assignment = Assignment("latch", name, g.constant(1.0), span)
+        sketch.conditionals.append(ConditionEvent(f"{name}.latch", condition, 0.0, False, (assignment,), span, name))
+        held = g.both(there, symbol)
+        due = g.either(due, held) if edge == "risen" else g.both(due, g.invert(held))
+    return due
 
 
 def _upper_is_driven(device: Device) -> bool:

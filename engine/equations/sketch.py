@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 
+from polewise.circuit.model import ConditionEvent
 from polewise.equations.definitions import RowSketch
 from polewise.equations.system import ParameterKind
 from polewise.expression.graph import ExpressionGraph, Node
@@ -57,6 +58,7 @@ class SystemSketch:
     clocks: list[ClockSketch] = field(default_factory=list)
     delays: list[DelaySketch] = field(default_factory=list)
     rows: list[RowSketch] = field(default_factory=list)
+    conditionals: list[ConditionEvent] = field(default_factory=list)
     definitions: dict[Node, Node] = field(default_factory=dict)
 
     def parameter(

@@ -58,14 +58,14 @@ def plan_recording(
         high = builder.limit(graph, requirement, requirement.high, "upper limit")
         why = ""
         if ripple_period_s is None:
-            why = _unknowable(graph, requirement)
+            why = unknowable(graph, requirement)
         elif requirement.measure == "ripple":
             requirement = replace(requirement, parameters=(ripple_period_s,))
         judged.append(Judged(requirement, subject, low, high, why))
     return RecordPlan(tuple(builder.outputs), tuple(builder.columns), tuple(judged))
 
 
-def _unknowable(graph: ExpressionGraph, requirement: Requirement) -> str:
+def unknowable(graph: ExpressionGraph, requirement: Requirement) -> str:
     """Why an average can't answer a requirement: it asks for ripple, or for the peak stress of a pole's device."""
     if requirement.measure == "ripple":
         return f"an average has no ripple; {_ASK_EDGES}"

@@ -21,6 +21,8 @@ from polewise.results.verdict import RequirementVerdict, Verdict
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from polewise.solve.initial import Snapshot
+
 
 @dataclass(frozen=True, slots=True)
 class EventEntry:
@@ -143,6 +145,7 @@ class RunFacts:
         sampling: "exact" or "mean".
         strategy: which search found the operating point it began from, None for a cold start.
         warnings: what a reader should know.
+        stand: where it ended, so that others may go on from there; None after a failure. remarks: how it came about, sentences.
     """
 
     title: str
@@ -157,6 +160,8 @@ class RunFacts:
     sampling: str = "exact"
     strategy: str | None = None
     warnings: tuple[Diagnostic, ...] = ()
+    stand: Snapshot | None = field(default=None, repr=False, compare=False)
+    remarks: tuple[str, ...] = ()
 
 
 class Result(Record):

@@ -153,6 +153,7 @@ def carry_out(
         sampling=plan.sampling or "exact",
         strategy=strategy,
         warnings=summary.warnings,
+        stand=summary.snapshot,
     )
     return facts, summary.snapshot
 
