@@ -32,10 +32,12 @@ RIPPLE_LOSS_FADE = 0.05
 RIPPLE_LOSS_OF_DIODE = 0.5
 # Below this rail voltage the loss drawn from the rails is set to zero: its current would be a quotient of two small numbers.
 RAIL_VOLTAGE_MIN_V = 1e-3
-# A duty below this reads as none: an exact zero would sit on the edge of its own switch. For the reading `mode` only.
-DUTY_MIN = 1e-9
-# Keeps a quotient finite where it is multiplied by nothing.
-REACH_MIN_V = 1e-30
+# A choke current that no tolerance resolves.
+CURRENT_FAINT_A = 1e-6
+# Below this part of it the pole reads as open.
+PART_IDLE = 0.5
+# Smallest slope with which conduction fades.
+SOFT_LEAST = 1e-4
 # Smallest width (A) of the current band in which dead time changes sign, where no output capacitance gives one.
 DEAD_TIME_BAND_MIN_A = 1e-3
 
@@ -247,50 +249,51 @@ def _with_diode(pole: _Pole, *, lower_diode: bool) -> DeviceEquations:
     j = pole.mid_current if lower_diode else g.negate(pole.mid_current)
     bottom = context.potential["bottom"]
     if context.choke is None:  # conduction = continuous, or nothing faces mid
-        delta, blocked, ordinary, idle, far = one, zero, zero, zero, None
-        i_on, i_diode = g.multiply(j, d), g.multiply(j, g.subtract(one, d))
-        peak_half = zero
+        d_on, d_diode, ordinary, idle, far = d, g.subtract(one, d), zero, zero, zero
+        i_on, peak_half = g.multiply(j, d), zero
     else:
-        choke = context.choke
+        choke, usual = context.choke, g.mark_usual
         far = g.subtract(choke.far_potential, bottom)
         raising = g.subtract(rail, far) if lower_diode else far
         lowering = g.add(far, drop) if lower_diode else g.subtract(g.add(rail, drop), far)
-        usual = g.mark_usual
         # The diode is driven on where b < 0. b = 0 (an ideal diode into an empty output) is still ordinary: there the two would disagree on
         # the diode's current, and a start from rest would hang between them.
         driven = usual(g.positive(g.negate(lowering)), 0)
-        can_rise = usual(g.positive(raising), 1)
-        ordinary = g.both(can_rise, g.invert(driven))
-        # Where the transistor can raise the current, the pole is never open; the sign of j does not matter there and must not flip for nothing.
-        flows = usual(g.positive(g.mux(can_rise, one, j)), 1)
-        blocked = g.both(g.invert(flows), g.both(g.invert(driven), g.invert(can_rise)))
-        # delta = limit(j(2Lf/d + R + r)/a, d, 1). Written with charge = j(2Lf + (R + r)d) and reach = a d it holds at d = 0 too: 1 while the
-        # diode conducts, d at no current. Every choice below is continuous, so that no two of them can undo each other.
+        ordinary = g.invert(driven)
+        # delta = limit(j(2Lf/d + R + r)/a, d, 1). Written with charge = j(2Lf + (R + r)d) and reach = a d nothing divides by d or a.
         slope = g.add(g.multiply(g.multiply(two, choke.inductance), pole.rate), g.multiply(g.add(r_on, choke.resistance), d))
         charge = g.multiply(j, slope)
-        reach = g.multiply(raising, d)
+        full, faint = g.multiply(raising, d), g.multiply(slope, g.constant(CURRENT_FAINT_A))
+        some = usual(g.greater(full, faint), 1)
+        reach = g.mux(some, full, faint)
         continuous = usual(g.greater(charge, reach), 1)
-        starting = usual(g.greater(g.multiply(reach, d), charge), 0)
+        reverse = usual(g.positive(g.negate(charge)), 0)
+        part = g.mux(continuous, one, g.mux(reverse, zero, g.divide(charge, reach)))
+        # Where a d drives less current than any tolerance resolves (a <= 0 or d = 0 above all) the pole conducts on until its current is gone and
+        # then is open: all it does fades with the last microampere. `driving` leads over, so that every choice here is continuous and no two of
+        # them can undo each other.
+        driving = g.mux(usual(g.greater(full, g.multiply(two, faint)), 1), one, g.mux(some, g.subtract(g.divide(full, faint), one), zero))
+        # Quadratic towards the end, so that mid floats to the far end itself; never quite flat, so that a pole at rest has a current of its own.
+        soft = g.multiply(part, g.maximum(part, g.constant(SOFT_LEAST)))
+        fading = g.multiply(g.subtract(one, driving), soft)
+        starting = usual(g.greater(d, part), 0)
+        beyond = g.mux(starting, zero, g.subtract(part, d))
+        d_on = g.mux(driven, d, g.multiply(d, g.add(driving, fading)))
+        d_diode = g.mux(driven, g.subtract(one, d), g.add(g.multiply(driving, beyond), g.multiply(fading, g.subtract(one, d))))
         peak_half = g.divide(reach, slope)  # j/delta in discontinuous conduction: half the peak current
-        least = g.constant(REACH_MIN_V)
-        part = g.divide(charge, g.maximum(reach, least))
-        triangle = g.mux(continuous, one, g.mux(starting, d, part))
-        delta = g.mux(ordinary, triangle, one)
-        i_triangle = g.mux(continuous, g.multiply(j, d), g.mux(starting, j, g.multiply(peak_half, d)))
-        i_on = g.mux(ordinary, i_triangle, g.multiply(j, d))
-        i_on = g.mux(blocked, zero, i_on)
-        i_diode = g.mux(blocked, zero, g.subtract(j, i_on))
-        idle = g.either(blocked, g.both(g.both(ordinary, g.invert(continuous)), g.greater(g.constant(DUTY_MIN), d)))
-    d2 = g.subtract(delta, d)
+        triangle = g.mux(continuous, g.multiply(j, d), g.mux(starting, j, g.multiply(peak_half, d)))
+        mixed = g.add(g.multiply(driving, triangle), g.multiply(g.subtract(one, driving), g.multiply(j, d)))
+        i_on = g.mux(driven, g.multiply(j, d), mixed)
+        idle = g.both(ordinary, g.both(g.invert(some), g.greater(g.constant(PART_IDLE), part)))
+    i_diode = g.subtract(j, i_on)
+    delta = g.add(d_on, d_diode)
     # Potential of mid against bottom.
     drops = g.add(g.multiply(r_on, i_on), g.multiply(r_diode, i_diode))
+    floating = g.multiply(g.subtract(one, delta), far)
     if lower_diode:
-        mid = g.subtract(g.subtract(g.multiply(d, rail), g.multiply(d2, drop)), drops)
+        mid = g.add(g.subtract(g.subtract(g.multiply(d_on, rail), g.multiply(d_diode, drop)), drops), floating)
     else:
-        mid = g.add(g.multiply(d2, g.add(rail, drop)), drops)
-    if far is not None:
-        mid = g.add(mid, g.multiply(g.subtract(one, delta), far))
-        mid = g.mux(blocked, far, mid)
+        mid = g.add(g.add(g.multiply(d_diode, g.add(rail, drop)), drops), floating)
     losses = g.add(_switching_current(pole, pole.mid_current), _ripple_loss_current(pole, ordinary, delta, peak_half, i_diode, r_on, r_diode))
     through_top = i_on if lower_diode else g.negate(i_diode)
     mode = g.mux(idle, zero, g.mux(g.greater(one, delta), one, two))

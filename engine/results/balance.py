@@ -20,7 +20,8 @@ class PowerItem:
     Args:
         name: its path.
         power_w: absorbed; negative where it delivers.
-        role: "loss" turns what it absorbs into heat; "storage" holds it; "exchange" is a source or a load.
+        role: "loss" turns what it absorbs into heat; "storage" holds it; "exchange" is a source or a load, a resistance that is a path of its own
+            from a top-level node to a reference included.
         owner: assembly path, "" at top level.
         domain: "electrical", "rotation" or "translation".
     """
@@ -140,9 +141,16 @@ def _items(circuit: Circuit, branches: Sequence[Branch], powers: Sequence[float]
     )
 
 
+def _is_load(circuit: Circuit, branch: Branch) -> bool:
+    """Whether a resistance stands for a load: at top level, alone on its path, from a node straight to a reference."""
+    path = circuit.paths.get(branch.name)
+    alone = path is not None and len(path.items) == 1 and len(path.items[0]) == 1
+    return alone and branch.owner == "" and (circuit.nodes[branch.left].is_reference or circuit.nodes[branch.right].is_reference)
+
+
 def _role(circuit: Circuit, branch: Branch) -> Role:
     if branch.law in (Law.RESISTANCE, Law.CONDUCTANCE):
-        return "loss"
+        return "exchange" if _is_load(circuit, branch) else "loss"
     if branch.law in (Law.CHARGE, Law.FLUX):
         return "storage"
     if branch.device is not None:
