@@ -136,21 +136,23 @@ def _items(circuit: Circuit, branches: Sequence[Branch], powers: Sequence[float]
         name = branch.device or branch.name
         sums[name] = sums.get(name, 0.0) + power
         first.setdefault(name, branch)
+    loads = _loads(circuit)
     return tuple(
-        PowerItem(name, power, _role(circuit, first[name]), first[name].owner, first[name].domain.name.lower()) for name, power in sums.items()
+        PowerItem(name, power, _role(circuit, first[name], loads), first[name].owner, first[name].domain.name.lower()) for name, power in sums.items()
     )
 
 
-def _is_load(circuit: Circuit, branch: Branch) -> bool:
-    """Whether a resistance stands for a load: at top level, alone on its path, from a node straight to a reference."""
-    path = circuit.paths.get(branch.name)
-    alone = path is not None and len(path.items) == 1 and len(path.items[0]) == 1
-    return alone and branch.owner == "" and (circuit.nodes[branch.left].is_reference or circuit.nodes[branch.right].is_reference)
+def _loads(circuit: Circuit) -> frozenset[str]:
+    """Resistances that stand for a load: electrical, at top level, alone on their path, from a node straight to a reference."""
+    alone = [path.items[0][0] for path in circuit.paths.values() if path.owner == "" and len(path.items) == 1 and len(path.items[0]) == 1]
+    branches = [circuit.branches[name] for name in alone if name in circuit.branches]
+    ends = [(b.name, b.domain, circuit.nodes[b.left].is_reference or circuit.nodes[b.right].is_reference) for b in branches]
+    return frozenset(name for name, domain, to_reference in ends if domain is Domain.ELECTRICAL and to_reference)
 
 
-def _role(circuit: Circuit, branch: Branch) -> Role:
+def _role(circuit: Circuit, branch: Branch, loads: frozenset[str]) -> Role:
     if branch.law in (Law.RESISTANCE, Law.CONDUCTANCE):
-        return "exchange" if _is_load(circuit, branch) else "loss"
+        return "exchange" if branch.name in loads else "loss"
     if branch.law in (Law.CHARGE, Law.FLUX):
         return "storage"
     if branch.device is not None:
