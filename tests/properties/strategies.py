@@ -220,12 +220,13 @@ def studies(draw: st.DrawFn) -> s.Study:
 # ---------------------------------------------------------------- whole files
 
 simple_statements = declarations | paths() | placements() | events | sequences()
-inner_statements = simple_statements | st.builds(
-    s.Each, span, words, expressions, expressions, st.lists(simple_statements, max_size=2).map(tuple)
+local_statements = simple_statements.filter(lambda statement: not isinstance(statement, s.Title | s.Use))
+inner_statements = local_statements | st.builds(
+    s.Each, span, words, expressions, expressions, st.lists(local_statements, max_size=2).map(tuple)
 )  # fmt: skip
 assemblies = st.builds(
     s.Assembly, span, words, span, distinct_words.map(lambda ports: tuple(s.NamePart(SPAN, (port,)) for port in ports)), documents,
-    st.lists(inner_statements.filter(lambda statement: not isinstance(statement, s.Title | s.Use)), max_size=3).map(tuple),
+    st.lists(inner_statements, max_size=3).map(tuple),
 )  # fmt: skip
 statements = simple_statements | studies() | assemblies
 netlists = st.lists(statements, max_size=4).map(lambda found: s.Netlist(SPAN.source, tuple(found)))
