@@ -23,7 +23,7 @@ from polewise.results.result import Result, RunFacts
 from polewise.results.study_run import Nothing, Progress, RunWishes, Sampling, StudyPlan, carry_out, equations_of, find_point, finished
 
 if TYPE_CHECKING:
-    from polewise.analysis.edge_window import WindowRun, WindowTask
+    from polewise.analysis.edge_window import WindowTask
     from polewise.analysis.handover import StateSpace
     from polewise.analysis.impedance import Impedance
     from polewise.analysis.limits import StabilityLimit
@@ -315,8 +315,8 @@ class System:
             from polewise.analysis.magnified import edge_window
 
             window = self._magnified(plan, sink, RunWishes(tolerance, progress, at, should_stop))
-            if window.facts.trouble is not None and on_failure == "raise":
-                raise window.facts.trouble
+            if window.trouble is not None and on_failure == "raise":
+                raise window.trouble
             return edge_window(plan, window, sink.finish())
         outcome = self.carry_out(plan, sink, tolerance=tolerance, progress=progress, at=at, should_stop=should_stop)
         if outcome.trouble is not None and on_failure == "raise":
@@ -367,8 +367,8 @@ class System:
         until, cold = self._averaged_until(task, wishes)
         sink = MemorySink(plan.record.columns)
         run = carry_out_window(task, sink, wishes, self._lock, until, cold=cold)
-        if run.facts.trouble is not None:
-            raise run.facts.trouble
+        if run.trouble is not None:
+            raise run.trouble
         return edge_window(plan, run, sink.finish())
 
     def magnify_settled(self, *, keep: Sequence[str] | None = None, periods: int = 1, tolerance: float = 1e-10) -> EdgeWindow:
@@ -641,10 +641,10 @@ class System:
         """
         wishes = RunWishes(tolerance, progress, at, should_stop)
         if plan.study.magnifies is not None:
-            return self._magnified(plan, sink, wishes).facts
+            return self._magnified(plan, sink, wishes)
         return carry_out(plan, sink, wishes, self._inputs, self._lock, self._before(plan.study, wishes))[0]
 
-    def _magnified(self, plan: StudyPlan, sink: Sink, wishes: RunWishes) -> WindowRun:
+    def _magnified(self, plan: StudyPlan, sink: Sink, wishes: RunWishes) -> RunFacts:
         """Carry out a study that magnifies another one."""
         from polewise.analysis.edge_window import WindowTask, carry_out_window
         from polewise.analysis.magnified import check_window

@@ -65,11 +65,9 @@ class WindowFacts:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class WindowRun:
-    """What carrying a window out gives: facts of the run, of the window, and the averaged run over the same stretch (with half a period of
-    margin on both sides where the study allows)."""
+class BesideWindow:
+    """What belongs to a window's run beside its rows: facts of the window, and the averaged run over the same stretch (and a little beyond it)."""
 
-    facts: RunFacts
     window: WindowFacts
     averaged: Recording
 
@@ -127,8 +125,8 @@ def carry_out_window(
     averaged_until: Callable[[float], Snapshot | None],
     *,
     cold: bool,
-) -> WindowRun:
-    """Run a window into a sink.
+) -> RunFacts:
+    """Run a window into a sink; the facts hold the window and the averaged run in `beside`.
 
     Args:
         task: which. sink: gets its rows. wishes: tolerance, progress, stop, instants.
@@ -181,7 +179,7 @@ def carry_out_window(
     note = _note(task, t0, stretch, from_start, mismatch)
     window = WindowFacts(task.begin_s, task.end_s, t0, common, False, mismatch, note)
     counters = {name.replace("_", " "): getattr(summary.counters, name) for name in COUNTERS_TOLD}
-    facts = RunFacts(
+    return RunFacts(
         title=circuit.title,
         study=task.plan.study.name,
         planned_s=task.end_s,
@@ -193,8 +191,8 @@ def carry_out_window(
         elapsed_s=clock.perf_counter() - began,
         warnings=summary.warnings,
         remarks=(note,),
+        beside=BesideWindow(window, averaged.recording),
     )
-    return WindowRun(facts, window, averaged.recording)
 
 
 def _latched_if_needed(

@@ -12,7 +12,7 @@ import numpy as np
 
 from polewise.analysis.carriers import Carriers, carriers_of
 from polewise.analysis.cycle_average import Window, average_curve
-from polewise.analysis.edge_window import Stretch, WindowFacts, WindowRun
+from polewise.analysis.edge_window import BesideWindow, Stretch, WindowFacts
 from polewise.analysis.failures import edges_refused
 from polewise.analysis.overlay import Overlay, overlay
 from polewise.analysis.periodic import find_periodic, resting_snapshot
@@ -83,6 +83,11 @@ class EdgeWindow(Result):
         if self._stress is None:
             self._stress = stress_table(self._circuit, self._carriers, self.recording)
         return self._stress
+
+    @property
+    def has_averaged(self) -> bool:
+        """Whether there is an averaged run beside it."""
+        return self._averaged is not None
 
     @property
     def averaged(self) -> Record:
@@ -166,10 +171,16 @@ def ripple_period_s(circuit: Circuit) -> float:
     return carriers.longest_s
 
 
-def edge_window(plan: StudyPlan, run: WindowRun, recording: Recording) -> EdgeWindow:
-    """Put a window's result together and judge its requirements."""
-    verdict = judge(plan.study.name, plan.record.judged, recording, planned_end_s=run.facts.planned_s, reached_s=run.facts.reached_s)
-    return EdgeWindow(recording, verdict, run.facts, run.window, run.averaged, plan.circuit)
+def edge_window(plan: StudyPlan, facts: RunFacts, recording: Recording) -> EdgeWindow:
+    """Put a window's result together and judge its requirements.
+
+    Args:
+        facts: of carry_out_window, with the window in `beside`.
+    """
+    beside = facts.beside
+    assert isinstance(beside, BesideWindow)
+    verdict = judge(plan.study.name, plan.record.judged, recording, planned_end_s=facts.planned_s, reached_s=facts.reached_s)
+    return EdgeWindow(recording, verdict, facts, beside.window, beside.averaged, plan.circuit)
 
 
 def magnify_settled(

@@ -146,6 +146,7 @@ class RunFacts:
         strategy: which search found the operating point it began from, None for a cold start.
         warnings: what a reader should know.
         stand: where it ended, so that others may go on from there; None after a failure. remarks: how it came about, sentences.
+        beside: what else was run for it (analysis.edge_window.BesideWindow of a magnified stretch).
     """
 
     title: str
@@ -162,6 +163,7 @@ class RunFacts:
     warnings: tuple[Diagnostic, ...] = ()
     stand: Snapshot | None = field(default=None, repr=False, compare=False)
     remarks: tuple[str, ...] = ()
+    beside: object | None = field(default=None, repr=False, compare=False)
 
 
 class Result(Record):

@@ -160,6 +160,7 @@ def settle(file: Path, given: dict[str, str], inner: bool, as_json: bool) -> int
     "--tolerance", type=click.FloatRange(1e-12, 1e-2), metavar="NUMBER", help="Relative tolerance of the solver, instead of the studies' own."
 )
 @click.option("--sampling", type=click.Choice(["exact", "mean"]), help="Sampled blocks: every instant, or their mean equivalents.")
+@click.option("--no-trust", is_flag=True, help="Leave the trust report out.")
 @_as_json
 def run(
     file: Path,
@@ -171,6 +172,7 @@ def run(
     junit: Path | None,
     tolerance: float | None,
     sampling: str | None,
+    no_trust: bool,
     as_json: bool,
 ) -> int:
     """Run the studies of FILE (all, or the STUDYs named) and judge their requirements.
@@ -181,8 +183,88 @@ def run(
 
     if csv and out is None:
         raise click.UsageError("--csv writes files: say where with --out FOLDER")
-    options = RunOptions(given, out, csv, not no_figure, junit, tolerance, "mean" if sampling == "mean" else "exact" if sampling else None, as_json)
+    options = RunOptions(
+        given, out, csv, not no_figure, junit, tolerance, "mean" if sampling == "mean" else "exact" if sampling else None, as_json, not no_trust
+    )
     return run_studies(file, studies, options)
+
+
+@commands.command(
+    epilog="Exit codes: 0 holds or doubtful; 1 something is not valid; 2 the netlist or the call is wrong; 3 not finished.",
+    short_help="Say where the averages of FILE may be believed.",
+)
+@_file
+@click.argument("studies", nargs=-1, metavar="[STUDY]...")
+@_givens
+@_as_json
+def trust(file: Path, studies: tuple[str, ...], given: dict[str, str], as_json: bool) -> int:
+    """Say for every pole, kept quantity and requirement whether a cycle average may be believed, and by which number.
+
+    Without a STUDY the operating point is looked at; each STUDY named is run for its report.
+    """
+    from polewise.terminal.trust_command import run_trust
+
+    return run_trust(file, studies, given, as_json)
+
+
+@commands.command(epilog=_CODES, short_help="Run a stretch of a study with every switching edge.")
+@_file
+@click.argument("study", required=False)
+@click.option("--from", "begin", metavar="T1", help="Where the window begins, such as 20ms.")
+@click.option("--to", "end", metavar="T2", help="Where it ends.")
+@click.option("--keep", multiple=True, metavar="NAME", help="What to record instead of the study's own; may be repeated.")
+@_givens
+@click.option("--figure", type=click.Path(path_type=Path, dir_okay=False), help="Draw edges, cycle average and averaged run into this file.")
+@_as_json
+def magnify(
+    file: Path,
+    study: str | None,
+    begin: str | None,
+    end: str | None,
+    keep: tuple[str, ...],
+    given: dict[str, str],
+    figure: Path | None,
+    as_json: bool,
+) -> int:
+    """Run a stretch of STUDY with every switching edge, from its averaged state; without STUDY the periodic state at the operating point.
+
+    Prints ripple, peaks, RMS and losses of every device and passive element, and how far the cycle average is from the averaged run.
+    """
+    from polewise.terminal.magnify_command import run_magnify
+
+    return run_magnify(file, study, begin, end, keep, given, figure, as_json)
+
+
+@commands.command(epilog=_CODES, short_help="Cycle average of a measured waveform, and how a study fits it.")
+@click.argument("waveform", type=click.Path(path_type=Path))
+@click.option("--rate", metavar="FREQUENCY", help="Switching frequency, such as 40kHz. Without it or a gate the period is found from the data.")
+@click.option("--gate", metavar="COLUMN", help="A gate signal in the file: every period begins at its rising edge.")
+@click.option("--channel", "channels", multiple=True, metavar="COLUMN", help="Average only this column; may be repeated.")
+@click.option("--offset", "offsets", multiple=True, callback=_given, metavar="COLUMN=VALUE", help="Take a probe's offset off, such as i=120mA.")
+@click.option("--delay", "delays", multiple=True, callback=_given, metavar="COLUMN=TIME", help="Take a probe's delay out, such as i=80ns.")
+@click.option("--against", nargs=2, metavar="FILE STUDY", help="Run STUDY of FILE, align its quantities in time, and report the fit.")
+@click.option("--match", "matches", multiple=True, callback=_given, metavar="COLUMN=QUANTITY", help='Which quantity a column is: "CH1=out.v".')
+@_givens
+@click.option("--out", metavar="FOLDER", type=click.Path(path_type=Path, file_okay=False), help="Folder for the averages as CSV and figures of fits.")
+@_as_json
+def average(
+    waveform: Path,
+    rate: str | None,
+    gate: str | None,
+    channels: tuple[str, ...],
+    offsets: dict[str, str],
+    delays: dict[str, str],
+    against: tuple[str, str] | None,
+    matches: dict[str, str],
+    given: dict[str, str],
+    out: Path | None,
+    as_json: bool,
+) -> int:
+    """Give the cycle average of WAVEFORM, a CSV file as oscilloscopes write it; with --against, fit a study of a netlist to it."""
+    from polewise.terminal.average_command import AverageOptions, run_average
+
+    model = None if against is None else (Path(against[0]), against[1])
+    return run_average(waveform, AverageOptions(rate, gate, channels, offsets, delays, model, matches, given, out, as_json))
 
 
 @commands.command(short_help="Explain a message by its code.")

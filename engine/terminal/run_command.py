@@ -15,7 +15,11 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from polewise.analysis.answers import Answer
+from polewise.analysis.carriers import carriers_of
 from polewise.analysis.figure import answer_figure
+from polewise.analysis.magnified import edge_window
+from polewise.analysis.trust import TrustReport
+from polewise.analysis.trust_of import watching
 from polewise.api import System
 from polewise.errors import EXIT_HOLDS, EXIT_NETLIST_WRONG, EXIT_NOT_FINISHED, EXIT_REQUIREMENT_FAILS, PolewiseError
 from polewise.results.failures import OutputFailed
@@ -28,6 +32,7 @@ from polewise.results.verdict import Verdict
 from polewise.terminal.json_form import diagnostics_content
 from polewise.terminal.main import print_json, print_lines, read_or_tell, tell
 from polewise.terminal.progress import StudyProgress, say_first_compile
+from polewise.terminal.trust_text import trust_block, trust_content
 from polewise.terminal.verdict_text import result_lines
 
 if TYPE_CHECKING:
@@ -46,6 +51,7 @@ class RunOptions:
     tolerance: float | None
     sampling: Sampling | None
     as_json: bool
+    trust: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +62,7 @@ class _Outcome:
     result: Result | None
     error: PolewiseError | None
     elapsed_s: float
+    trust: TrustReport | None = None
 
     @property
     def exit_code(self) -> int:
@@ -77,6 +84,8 @@ def run_studies(file: Path, names: Sequence[str], options: RunOptions) -> int:
     if not chosen:
         raise click.UsageError(f"{file} has no study; write one (`study name {{ … }}`), or use `polewise settle`")
     plans = [system.plan(name, sampling=options.sampling) for name in dict.fromkeys(chosen)]
+    if options.trust:
+        plans = [watching(plan) for plan in plans]
     _look_for_extras(options)
     if options.out is not None:
         _make_folder(options.out)
@@ -122,10 +131,15 @@ def _run_one(system: System, plan: StudyPlan, options: RunOptions, stop: threadi
         with StudyProgress(plan.study.name) as progress:
             store: _Files | _Memory = files or _Memory(plan)
             facts = system.carry_out(plan, store.sink, tolerance=options.tolerance, progress=progress, should_stop=stop.is_set)
-            result = system.answered(plan, finished(plan, facts, store.close(facts)))
+            recording = store.close(facts)
+            if plan.study.magnifies is not None:
+                result: Result = edge_window(plan, facts, recording)
+            else:
+                result = system.answered(plan, finished(plan, facts, recording))
+        report = _trust(system, plan, result) if options.trust else None
         if files is not None:
             files.conclude(result)
-        return _Outcome(plan.study.name, result, facts.trouble, facts.elapsed_s)
+        return _Outcome(plan.study.name, result, facts.trouble, facts.elapsed_s, report)
     except PolewiseError as error:
         if files is not None:
             files.abandon(error)
@@ -134,6 +148,16 @@ def _run_one(system: System, plan: StudyPlan, options: RunOptions, stop: threadi
         if files is not None:
             files.abandon(None)
         raise
+
+
+def _trust(system: System, plan: StudyPlan, result: Result) -> TrustReport | None:
+    """The trust report of a study that came to its end; none for edges, which are no averages, nor where nothing switches."""
+    if plan.study.magnifies is not None or not result.complete or plan.study.run_for_s is None or carriers_of(plan.circuit) is None:
+        return None
+    try:
+        return system.trust_in(plan, result)
+    except PolewiseError:
+        return None
 
 
 class _Memory:
@@ -276,7 +300,8 @@ def _stop_on_signal() -> Iterator[threading.Event]:
 def _say(outcome: _Outcome) -> None:
     result = outcome.result
     if result is not None:
-        print_lines(lambda style: [*result_lines(result, style), ""])
+        report = outcome.trust
+        print_lines(lambda style: [*result_lines(result, style), *(trust_block(report, style) if report is not None else []), ""])
         tell(result.facts.warnings)
     if outcome.error is not None:
         click.echo(f"study {outcome.study} could not be finished", err=True)
@@ -291,6 +316,8 @@ def _content(outcome: _Outcome) -> dict[str, Any]:
     }
     if outcome.result is not None:
         content |= run_content(outcome.result)
+        if outcome.trust is not None:
+            content["trust"] = trust_content(outcome.trust)
     if outcome.error is not None:
         content["diagnostics"] = diagnostics_content(outcome.error.diagnostics)
     return content

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from polewise.analysis.answers import Answer
+from polewise.analysis.magnified import EdgeWindow
 from polewise.grammar.units import TEMPERATURE, TIME, format_value
 from polewise.results.result import Result
 from polewise.results.verdict import RequirementVerdict, Verdict
 from polewise.terminal.answer_text import answer_lines
+from polewise.terminal.stress_text import window_lines
 from polewise.terminal.style import Style, harmless
 from polewise.terminal.tables import Heading, table, title_line
 
@@ -58,6 +60,8 @@ def result_lines(result: Result, style: Style) -> list[str]:
     facts = result.facts
     reached = format_value(facts.reached_s, TIME)
     planned = format_value(facts.planned_s, TIME)
+    if isinstance(result, EdgeWindow):
+        reached = f"{format_value(result.window.begin_s, TIME)} .. {reached} with every edge,"
     state = f"{reached} simulated in {_duration(facts.elapsed_s)}" if facts.complete else f"INCOMPLETE: stopped at {reached} of {planned}"
     if facts.planned_s == 0.0 and facts.complete:
         state = f"at the operating point, answered in {_duration(facts.elapsed_s)}"
@@ -67,6 +71,8 @@ def result_lines(result: Result, style: Style) -> list[str]:
         lines.append(style.paint(f"  {counters}", "faint"))
     if facts.sampling == "mean":
         lines.append("  sampled blocks as their mean s-domain equivalents")
+    if isinstance(result, EdgeWindow):
+        lines += window_lines(result, style)
     told = [line for answer in result.answers if isinstance(answer, Answer) for line in answer_lines(answer, style)]
     return [*lines, *_event_lines(result, style), *told, "", *verdict_lines(result.verdict, style), "  " + summary_line(result.verdict, style)]
 

@@ -194,7 +194,7 @@ def test_wrong_calls_end_with_2(arguments: list[str], say) -> None:
     assert say(*arguments)[0] == 2
 
 
-@pytest.mark.parametrize("command", ["check", "settle", "run", "explain", "format"])
+@pytest.mark.parametrize("command", ["check", "settle", "run", "trust", "magnify", "average", "explain", "format"])
 def test_help_reads_well(command: str, say) -> None:
     code, out, _ = say(command, "--help")
     assert code == 0
