@@ -59,7 +59,7 @@ class TrustLimits:
     slope_doubtful: float = 0.10
     slope_not_valid: float = 0.50
     beat_bandwidth: float = 1 / 10
-    pinned_periods: float = 1.0
+    pinned_periods: float = 3.0
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,8 +1,9 @@
 """The pier at Tern Point in service, written by hand as ordinary differential equations: nothing of the package is used.
 
 States in order: shore current, bus capacitor; for each berth cable current, filter current, input capacitor, choke, output capacitor, soft-start
-reference, two integrals, plug cable current, boat capacitor; for each of the two service stages the first seven of these without the bus cable;
-for each battery current, slow pair, two integrals, charge; for each solar string capacitor, choke, two integrals.
+reference, two integrals, filtered choke current, plug cable current, boat capacitor; for each of the two service stages the first eight of these
+without the bus cable; for each battery current, slow pair, two integrals, charge, filtered current; for each solar string capacitor, choke, two
+integrals, filtered current.
 Every diode pole is in continuous conduction and every controller off its limits, which `margins` checks.
 """
 
@@ -35,6 +36,7 @@ class Stage:
     kp_v: float = 5.5
     ki_v: float = 1700.0
     slew: float = 4000.0
+    filter_hz: float = 5000.0
 
 
 PLATES = (380.0, 400.0, 360.0, 380.0, 400.0, 380.0)
@@ -42,8 +44,8 @@ EVENING = (60e3, 20e3, 60e3, 45e3, 60e3, 30e3)
 BERTHS = tuple(Stage(v) for v in PLATES)
 LIGHTS = Stage(110.0, choke=150e-6, c_out=2.2e-3, kp_i=0.0037, ki_i=8.8, kp_v=4.2, ki_v=980.0)
 PUMPS = Stage(400.0, choke=400e-6, c_out=470e-6, kp_i=0.0099, ki_i=23.0, kp_v=0.89, ki_v=210.0)
-STATES = 2 + 6 * 10 + 2 * 7 + 2 * 5 + 3 * 4
-BATTERY_AT = 2 + 60 + 14
+STATES = 2 + 6 * 11 + 2 * 8 + 2 * 6 + 3 * 5
+BATTERY_AT = 2 + 66 + 16
 
 
 class Curve:
@@ -126,27 +128,28 @@ class Pier:
         total = i_shore + pre - i_bank - (v / 900.0) ** 25
         k = 2
         for stage, power in zip(BERTHS, self.demands, strict=True):
-            total -= self._berth(stage, power, y[k : k + 10], v, d[k : k + 10])
-            k += 10
+            total -= self._berth(stage, power, y[k : k + 11], v, d[k : k + 11])
+            k += 11
         for stage, power in ((LIGHTS, 8e3), (PUMPS, 12e3)):
-            total -= self._service(stage, power, y[k : k + 7], v, d[k : k + 7])
-            k += 7
+            total -= self._service(stage, power, y[k : k + 8], v, d[k : k + 8])
+            k += 8
         for _ in range(2):
-            total += self._battery(y[k : k + 5], v, d[k : k + 5])
-            k += 5
+            total += self._battery(y[k : k + 6], v, d[k : k + 6])
+            k += 6
         for _ in range(3):
-            total += self._roof(y[k : k + 4], v, d[k : k + 4])
-            k += 4
+            total += self._roof(y[k : k + 5], v, d[k : k + 5])
+            k += 5
         return float(total)
 
     @staticmethod
     def _converter(stage: Stage, y: Array, d: Array, out: float) -> float:
-        """Controllers; returns the duty. y: filter current, input capacitor, choke, output capacitor, reference, two integrals."""
+        """Controllers; returns the duty. y: filter current, input capacitor, choke, output capacitor, reference, two integrals, filtered current."""
         d[4] = min(max((stage.setpoint - y[4]) / 10e-3, -stage.slew), stage.slew)
         error_v = y[4] - out
-        error_i = stage.kp_v * error_v + y[5] - y[2]
+        error_i = stage.kp_v * error_v + y[5] - y[7]
         d[5] = stage.ki_v * error_v
         d[6] = stage.ki_i * error_i
+        d[7] = 2.0 * np.pi * stage.filter_hz * (y[2] - y[7])
         return float(stage.kp_i * error_i + y[6])
 
     @staticmethod
@@ -157,10 +160,10 @@ class Pier:
 
     def _berth(self, stage: Stage, power: float, y: Array, v: float, d: Array) -> float:
         i_tap, i_filter, v_in, i_choke, v_out = y[0], y[1], y[2], y[3], y[4]
-        i_plug, v_boat = y[8], y[9]
+        i_plug, v_boat = y[9], y[10]
         out = v_out + 0.002 * (i_choke - i_plug)
         plug = load_node(v_boat, 0.020, i_plug, power)
-        duty = self._converter(stage, y[1:8], d[1:8], out)
+        duty = self._converter(stage, y[1:9], d[1:9], out)
         feed = v
         for _ in range(4):  # the feeder's end leaks through the 1 Mohm of the fault that is not there
             arrives = i_tap - feed / 1e6
@@ -169,10 +172,10 @@ class Pier:
         d[0] = (v - (CLOSED + 0.004) * i_tap - feed) / 20e-6
         d[1] = (feed - front) / stage.l_filter
         d[2] = (front - v_in) / stage.esr_in / stage.c_in
-        self._power_stage(stage, duty, front, out, y[1:8], d[1:8])
+        self._power_stage(stage, duty, front, out, y[1:9], d[1:9])
         d[4] = (i_choke - i_plug) / stage.c_out
-        d[8] = (out - 0.012 * i_plug - plug) / 4e-6
-        d[9] = (plug - v_boat) / 0.020 / 1e-3
+        d[9] = (out - 0.012 * i_plug - plug) / 4e-6
+        d[10] = (plug - v_boat) / 0.020 / 1e-3
         return float(i_tap)
 
     def _service(self, stage: Stage, power: float, y: Array, v: float, d: Array) -> float:
@@ -187,9 +190,9 @@ class Pier:
         return float(i_filter + (v - front) / stage.r_damp)
 
     def _battery(self, y: Array, v: float, d: Array) -> float:
-        i, v_pair, q_v, q_i, charge = y
+        i, v_pair, q_v, q_i, charge, seen = y
         error_v = 760.0 - 0.05 * i - v
-        error_i = 6.0 * error_v + q_v - i
+        error_i = 6.0 * error_v + q_v - seen
         cells = CELLS.at(charge)[0]
         lower = 1.0 - cells / v + 0.0021 * error_i + q_i
         mid = (1.0 - lower) * (v + 0.003 * i) + lower * 0.003 * i
@@ -198,10 +201,11 @@ class Pier:
         d[2] = 300.0 * error_v
         d[3] = 2.7 * error_i
         d[4] = -i / (94.0 * 3600.0)
+        d[5] = 2.0 * np.pi * 2500.0 * (i - seen)
         return float((1.0 - lower) * i)
 
     def _roof(self, y: Array, v: float, d: Array) -> float:
-        v_cap, i, q_v, q_i = y
+        v_cap, i, q_v, q_i, seen = y
         pv = v_cap
         for _ in range(30):  # Newton on the node's current balance; the string lies behind its closed breaker
             current = (pv - v_cap) / 0.010 + i
@@ -211,13 +215,14 @@ class Pier:
             if abs(g) < 1e-11:
                 break
         error_v = pv - 400.0
-        error_i = 0.63 * error_v + q_v - i
+        error_i = 0.63 * error_v + q_v - seen
         duty = 0.005 * error_i + q_i
         mid = (1.0 - duty) * (v + 1.1 + 0.004 * i) + duty * 0.012 * i
         d[0] = (pv - v_cap) / 0.010 / 500e-6
         d[1] = (pv - 0.008 * i - mid) / 400e-6
         d[2] = 130.0 * error_v
         d[3] = 5.8 * error_i
+        d[4] = 2.0 * np.pi * 3750.0 * (i - seen)
         return float((1.0 - duty) * i)
 
 
@@ -226,17 +231,17 @@ def first_guess() -> Array:
     y = [370.0, 761.4]
     for stage, power in zip(BERTHS, EVENING, strict=True):
         v, i = stage.setpoint, power / stage.setpoint
-        y += [i * v / 750, i * v / 750, 758.0, i, v, v, i, v / 755, i, v - 1.0]
-    y += [11.0, 760.0, 73.0, 110.0, 110.0, 73.0, 0.147, 16.0, 760.0, 30.0, 400.0, 400.0, 30.0, 0.53]
-    y += [-25.0, -0.2, -25.0, 0.0, 0.6] * 2
-    y += [400.0, 41.0, 41.0, 0.475] * 3
+        y += [i * v / 750, i * v / 750, 758.0, i, v, v, i, v / 755, i, i, v - 1.0]
+    y += [11.0, 760.0, 73.0, 110.0, 110.0, 73.0, 0.147, 73.0, 16.0, 760.0, 30.0, 400.0, 400.0, 30.0, 0.53, 30.0]
+    y += [-25.0, -0.2, -25.0, 0.0, 0.6, -25.0] * 2
+    y += [400.0, 41.0, 41.0, 0.475, 41.0] * 3
     return np.array(y)
 
 
 def at_rest(pier: Pier) -> Array:
     """The state of rest with the batteries' charge held, by Newton with a difference quotient."""
     y = first_guess()
-    held = [BATTERY_AT + 4, BATTERY_AT + 9]
+    held = [BATTERY_AT + 4, BATTERY_AT + 10]
     free = [k for k in range(STATES) if k not in held]
     for _ in range(50):
         f = pier.rates(0.0, y)[free]

@@ -1,4 +1,4 @@
-"""The demo in service against the same pier written by hand: state of rest and a load step, 98 states, thirteen converters.
+"""The demo in service against the same pier written by hand: state of rest and a load step, 111 states, thirteen converters.
 
 Source of the equations: pier_by_hand.py, integrated by scipy's implicit Runge-Kutta method of order 5 at tight tolerance.
 """
@@ -17,7 +17,7 @@ from .pier_by_hand import BATTERY_AT, Pier, at_rest
 
 PIER = Path(__file__).resolve().parents[2] / "circuits" / "tern_point" / "pier.pole"
 STEP_S, END_S = 0.020, 0.045
-BERTH_2 = 12  # first state of berth 2
+BERTH_2 = 13  # first state of berth 2
 NAMES = {  # reading → state of the hand-written pier
     "entry.i": 0,
     "bank.c.v": 1,
@@ -25,9 +25,9 @@ NAMES = {  # reading → state of the hand-written pier
     "berth2.stage.store.c.v": BERTH_2 + 2,
     "berth2.stage.choke.i": BERTH_2 + 3,
     "berth2.stage.cap.c.v": BERTH_2 + 4,
-    "hold2.c.v": BERTH_2 + 9,
+    "hold2.c.v": BERTH_2 + 10,
     "battery1.choke.i": BATTERY_AT,
-    "roof1.choke.i": BATTERY_AT + 11,
+    "roof1.choke.i": BATTERY_AT + 13,
 }
 
 
