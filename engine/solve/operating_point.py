@@ -80,6 +80,8 @@ def find_operating_point(
 
 # Newton corrections with every switch in its usual mode: nearly linear equations need few.
 REGULAR_CORRECTIONS = 30
+# A rate (per second, in the integrator's own unit) below this is none.
+RATE_OF_REST = 1e-9
 # Shares of the constant powers at which the ramp may begin, in the order in which the slow strategies try them.
 POWER_RAMP_BEGINS = (0.01, 0.0, 0.1, 1.0)
 
@@ -116,7 +118,10 @@ class _Search:
         if not self.powered:
             return self._accept(*self._unpowered())
         base, strategy, begin = self._base()
-        self.dead = frozenset(self._collapsed(base.z)) if begin == 0.0 else frozenset()
+        if begin == 0.0:
+            square.p[system.power_scale] = 1.0  # a load without power never tells that its voltage is too low
+            self.dead = frozenset(self._collapsed(base.z))
+            square.p[system.power_scale] = 0.0
         result = ramp(square, base, system.power_scale, self._refused, begin=begin)
         self.iterations += result.iterations
         if result.limit == "none":
@@ -203,7 +208,9 @@ class _Search:
                     base = self._newton(self.start)
                     if not base.converged or (begin > 0.0 and self._refused(base.z)):
                         continue
-                self._refuse_singular(base)
+                # Without any power the output of a stage that is switched off may stand anywhere; only the end of the ramp must be the only one.
+                if not (thorough and begin == 0.0):
+                    self._refuse_singular(base)
             except PolewiseError as error:
                 failure = failure or error
                 continue
@@ -276,6 +283,8 @@ class _Search:
             if smallest > SINGULAR_RELATIVE * self.square.n:
                 return
         found = explain_singular(self.square, outcome.z)
+        if found is not None and found.kind == "integrator" and max(abs(rate) for rate in found.rates) <= RATE_OF_REST:
+            return  # an integrator that nothing moves (its stage is switched off) rests wherever it stands
         if found is not None:
             raise self._explained(found, "")
 
