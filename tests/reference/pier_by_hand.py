@@ -194,12 +194,12 @@ class Pier:
         error_v = 760.0 - 0.05 * i - v
         error_i = 6.0 * error_v + q_v - seen
         cells = CELLS.at(charge)[0]
-        lower = 1.0 - cells / v + 0.0021 * error_i + q_i
+        lower = 1.0 - cells / v + 0.0015 * error_i + q_i
         mid = (1.0 - lower) * (v + 0.003 * i) + lower * 0.003 * i
         d[0] = (cells - v_pair - (CLOSED + 0.018 + 0.002) * i - mid) / 150e-6
         d[1] = (i - v_pair / 0.008) / 2500.0
         d[2] = 300.0 * error_v
-        d[3] = 2.7 * error_i
+        d[3] = 1.4 * error_i
         d[4] = -i / (94.0 * 3600.0)
         d[5] = 2.0 * np.pi * 2500.0 * (i - seen)
         return float((1.0 - lower) * i)
