@@ -47,6 +47,7 @@ from polewise.circuit.things import (
     ValueThing,
 )
 from polewise.devices import catalogue
+from polewise.expression.collection import no_collection
 from polewise.grammar import syntax
 from polewise.grammar.diagnostics import Diagnostic
 from polewise.grammar.source import no_span
@@ -66,7 +67,12 @@ def expand(
     Returns:
         The circuit, None where there are errors (those of `sources` included), and what is wrong or doubtful, in the order of the text.
     """
-    x = Expansion(overrides or {})
+    with no_collection():
+        return _expand(sources, overrides or {}, study)
+
+
+def _expand(sources: Sources, overrides: Mapping[str, str | float], study: str | None) -> tuple[Circuit | None, tuple[Diagnostic, ...]]:
+    x = Expansion(overrides)
     _wire_up(x, sources)
     studies: dict[str, StudyDef] = {}
     try:
