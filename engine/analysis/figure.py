@@ -66,12 +66,12 @@ def loops_figure(loops: tuple[Loop, ...], title: str) -> Figure:
     return figure
 
 
-def curves_figure(frequencies: FloatArray, curves: dict[str, ComplexArray], title: str) -> Figure:
-    """Size and phase over frequency."""
+def curves_figure(frequencies: FloatArray, curves: dict[str, ComplexArray], title: str, *, above: str = "1") -> Figure:
+    """Size and phase over frequency; `above` is the unit that 0 dB stands for."""
     figure = _sheet(title, 5.5)
     size, phase = figure.subplots(2, 1, sharex=True, gridspec_kw={"left": 0.09, "right": 0.97, "top": 0.9, "bottom": 0.1, "hspace": 0.12})
     for k, (name, values) in enumerate(curves.items()):
-        _bode(size, phase, frequencies, values, _LINES[k % len(_LINES)], name)
+        _bode(size, phase, frequencies, values, _LINES[k % len(_LINES)], name, above=above)
     size.legend(frameon=False, loc="best")
     return figure
 
@@ -79,11 +79,11 @@ def curves_figure(frequencies: FloatArray, curves: dict[str, ComplexArray], titl
 def impedance_figure(found: Impedance, title: str) -> Figure:
     """Impedance, and its two sides where they were named; of a pair the diagonal."""
     if found.total.ndim > 1:
-        return curves_figure(found.frequencies, {name: found.total[:, k, k] for k, name in enumerate(found.ports)}, title)
+        return curves_figure(found.frequencies, {name: found.total[:, k, k] for k, name in enumerate(found.ports)}, title, above="ohm")
     curves = {"impedance": found.total}
     if found.split is not None:
         curves |= {"source side": found.split.source_impedance, "load side": found.split.load_impedance}
-    return curves_figure(found.frequencies, curves, title)
+    return curves_figure(found.frequencies, curves, title, above="ohm")
 
 
 def modes_figure(modes: Modes, title: str) -> Figure:
@@ -124,8 +124,8 @@ def _frame(ax: Axes) -> None:
     ax.grid(True, color=_FAINT, linewidth=0.4)
 
 
-def _bode(size: Axes, phase: Axes, frequencies: FloatArray, values: ComplexArray, colour: str, label: str) -> None:
-    """Size in dB and phase in degrees without jumps."""
+def _bode(size: Axes, phase: Axes, frequencies: FloatArray, values: ComplexArray, colour: str, label: str, *, above: str = "1") -> None:
+    """Size in dB above one unit and phase in degrees without jumps."""
     with np.errstate(divide="ignore"):
         level: Any = 20.0 * np.log10(np.abs(values))
     for ax in (size, phase):
@@ -133,6 +133,6 @@ def _bode(size: Axes, phase: Axes, frequencies: FloatArray, values: ComplexArray
         ax.set_xscale("log")
     size.plot(frequencies, level, color=colour, linewidth=1.4, label=label)
     phase.plot(frequencies, np.degrees(np.unwrap(np.angle(values))), color=colour, linewidth=1.4)
-    size.set_ylabel("size, dB")
+    size.set_ylabel("size, dB" if above == "1" else f"size, dB above 1 {above}")
     phase.set_ylabel("phase, deg")
     phase.set_xlabel("frequency, Hz")
