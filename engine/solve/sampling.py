@@ -9,9 +9,9 @@ from polewise.grammar.source import Span
 from polewise.solve import diagnosis
 
 INSTANTS_UNASKED = 1e6  # more need a choice (numerics.md)
-# Cost of one instant with the steps around it, for the message only: measured on ten converters with sampled control, see docs/.
-INSTANT_COST_S = 5e-6
-INSTANT_COST_PER_UNKNOWN_S = 1e-6
+# Cost of one instant with the steps around it, for the message only: 27 us were measured on ten converters with 40 kHz control (docs/benchmarks.md).
+INSTANT_COST_S = 7e-6
+INSTANT_COST_PER_UNKNOWN_S = 3e-7
 
 
 def count_instants(system: EquationSystem, run_for_s: float) -> float:
