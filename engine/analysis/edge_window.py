@@ -189,7 +189,7 @@ def carry_out_window(
         events=tuple(EventEntry(e.time_s, event_text(circuit, e.text, e.changes)) for e in summary.events if e.span.source.name != HIDDEN),
         counters=counters,
         elapsed_s=clock.perf_counter() - began,
-        warnings=summary.warnings,
+        warnings=tuple(w for w in summary.warnings if w.code != "event-after-end"),  # the study goes on behind the window
         remarks=(note,),
         beside=BesideWindow(window, averaged.recording),
     )
