@@ -28,6 +28,7 @@ from polewise.grammar.source import no_span
 from polewise.grammar.units import TIME, format_value
 from polewise.kernels.program import FloatArray
 from polewise.network.graph import Network
+from polewise.results.curve import AFTER
 from polewise.results.recording import Column, MemorySink, Recording, Sink, recorded_curve, row_blocks
 from polewise.results.result import EventEntry, RunFacts
 from polewise.results.study_run import COUNTERS_TOLD, TOLERANCE, Progress, RunWishes, StudyPlan, event_text
@@ -38,6 +39,7 @@ from polewise.solve.problem import DaeProblem, build_problem
 
 PREROLL_PERIODS = 3  # of the slowest pole, run before the window begins
 MATCH_ROUNDS = 12  # of moving the start until the means agree
+MATCH_REACH = 1.5  # swings of a state that its start may be moved: control that follows peaks leaves no start with the wanted mean
 MATCH_RELATIVE = 1e-5  # of a state's swing: closer agreement of the means is not looked for
 NO_COMMON_PERIODS = 20  # periods of the slowest pole over which means are compared where there is no common period
 TOLERANCE_EDGES = 1e-7  # relative, where neither the study nor the caller states one
@@ -83,14 +85,16 @@ def edge_system(circuit: Circuit, network: Network, study: str | None, outputs: 
     return assemble(circuit, network, study=study, outputs=outputs, picture="latched edges" if latched else "edges")
 
 
-class _After:
-    """A sink that drops what comes before an instant that the run hits exactly."""
+class OnlyWindow:
+    """A sink that passes on a window: from an instant that the run hits exactly, its jump included, up to the end, what jumps there left out."""
 
-    def __init__(self, sink: Sink, begin_s: float) -> None:
-        self.sink, self.begin_s = sink, begin_s - merge_distance(begin_s)
+    def __init__(self, sink: Sink, begin_s: float, end_s: float) -> None:
+        self.sink, self.begin_s, self.end_s = sink, begin_s - merge_distance(begin_s), end_s - merge_distance(end_s)
         self.open = False
 
     def write(self, rows: FloatArray) -> None:
+        """Take a block of rows."""
+        rows = rows[(rows[:, 0] < self.end_s) | (rows[:, 1] != AFTER)]
         if not self.open:
             # The row that ends a step at the instant belongs to the part before it unless nothing follows a jump.
             at = np.flatnonzero((rows[:, 0] >= self.begin_s) & (rows[:, 1] != 0))
@@ -165,7 +169,7 @@ def carry_out_window(
                 start=start,
                 stop_s=task.end_s,
                 tolerance=tolerance,
-                sink=_After(into, task.begin_s),
+                sink=OnlyWindow(into, task.begin_s, task.end_s),
                 progress=None if tell is None else lambda t, end: tell(Progress(t, end)),
                 should_stop=wishes.should_stop,
             )
@@ -309,6 +313,7 @@ class Stretch:
         target = np.array([wanted[name] for name in names])
         slope = np.eye(len(index))  # d mean/d start, learnt on the way
         x_before = off_before = np.zeros(0)
+        first, room = start.x[index].copy(), None
         for _ in range(MATCH_ROUNDS):
             mean, swing = self._means(probe, start, span_s, names)
             off = target - mean
@@ -323,8 +328,10 @@ class Stretch:
                 if length > 0.0:
                     slope += np.outer((off_before - off) - slope @ moved, moved) / length
             x_before, off_before = start.x[index].copy(), off
+            room = MATCH_REACH * swing if room is None else room
             x = start.x.copy()
-            x[index] += np.linalg.lstsq(slope, off, rcond=None)[0]
+            x[index] += np.linalg.lstsq(slope, off, rcond=1e-6)[0]
+            x[index] = np.clip(x[index], first - room, first + room)
             for k, sign in one_way:
                 x[k] = max(sign * x[k], 0.0) * sign  # a diode's choke never carries current backwards
             start = replace(start, x=x)

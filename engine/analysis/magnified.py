@@ -12,7 +12,7 @@ import numpy as np
 
 from polewise.analysis.carriers import Carriers, carriers_of
 from polewise.analysis.cycle_average import Window, average_curve
-from polewise.analysis.edge_window import BesideWindow, Stretch, WindowFacts
+from polewise.analysis.edge_window import BesideWindow, OnlyWindow, Stretch, WindowFacts
 from polewise.analysis.failures import edges_refused
 from polewise.analysis.overlay import Overlay, overlay
 from polewise.analysis.periodic import find_periodic, resting_snapshot
@@ -210,17 +210,17 @@ def magnify_settled(
     stretch = Stretch(circuit, network, None, carriers, tolerance, guard)
     more = stress_quantities(circuit)
     columns = (*(Column(q.name, q.dimension, q.is_condition, "kept") for q in kept), *stress_columns(circuit))
-    edges = stretch.edges((*kept, *more))
     try:
-        found = find_periodic(stretch, edges, snapshot)
+        found = find_periodic(stretch, stretch.edges((*kept, *more)), snapshot)
     except Chatter:
         stretch.latched = True
-        edges = stretch.edges((*kept, *more))
-        found = find_periodic(stretch, edges, snapshot)
+        found = find_periodic(stretch, stretch.edges((*kept, *more)), snapshot)
     sink = MemorySink(columns)
-    begin = found.start.time_s
+    # One period is run ahead, so that the edge with which the shown one begins is seen from both sides.
+    begin = found.start.time_s + stretch.span_s
     end = begin + periods * stretch.span_s
-    summary = transient.run(edges, start=found.start, stop_s=end, tolerance=tolerance, sink=sink)
+    edges = stretch.edges((*kept, *more), hit=(begin,))
+    summary = transient.run(edges, start=found.start, stop_s=end, tolerance=tolerance, sink=OnlyWindow(sink, begin, end))
     counters = {name.replace("_", " "): getattr(summary.counters, name) for name in COUNTERS_TOLD}
     facts = RunFacts(circuit.title, "settled", end, summary.end_s, summary.complete, None, (), counters, summary.counters.wall_s)
     window = WindowFacts(begin, end, begin, stretch.common_period_s, found.found, found.residual, found.note)

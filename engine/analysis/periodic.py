@@ -25,7 +25,9 @@ from polewise.solve.initial import Snapshot, StartState, settled_at
 from polewise.solve.operating_point import OperatingPoint
 from polewise.solve.problem import DaeProblem
 
-ROUNDS_MOST = 12  # of Newton's method
+ROUNDS_MOST = 25  # of Newton's method
+REACH_MOST = 20.0  # sizes of a state that a step may move it
+SHARE_LEAST = 1e-3  # of a step, where the whole one makes things worse
 STATES_MOST = 300  # more would take too many runs of a period; periods are run instead
 DIFFERENCE_RELATIVE = 1e-5  # of a state's size, to differentiate
 SIZE_LEAST = 1e-3  # smallest size of a state for that, SI
@@ -137,18 +139,28 @@ class _Shooting:
         z = self.place(start)
         slope = np.zeros((z.size, z.size))
         best, best_residual = z, np.inf
-        rounds = 0
-        for rounds in range(1, ROUNDS_MOST + 1):
+        rounds, share = 0, 1.0
+        whole: FloatArray = np.zeros(z.size)
+        for rounds in range(1, ROUNDS_MOST + 1):  # noqa: B007 (told in the note)
             end = self.after(start, z)
             size = np.maximum(np.abs(z), SIZE_LEAST)
             residual = float(np.max(np.abs(end - z) / size, initial=0.0))
-            improved = residual < 0.5 * best_residual
-            if residual < best_residual:
-                best, best_residual = z, residual
-            if residual < RESIDUAL_RELATIVE or (rounds > 3 and not improved):
+            if not np.isfinite(residual) or residual > best_residual:
+                share *= 0.25  # too far: back to the best one, a shorter step
+                if share < SHARE_LEAST:
+                    break
+                z = best + share * whole
+                continue
+            settled = best_residual < 1e3 * RESIDUAL_RELATIVE and residual > 0.5 * best_residual
+            best, best_residual = z, residual
+            if residual < RESIDUAL_RELATIVE or settled:
                 break
             slope = self._slope(start, z, end)
-            z = z + np.linalg.lstsq(np.eye(z.size) - slope, end - z, rcond=1e-13)[0]
+            share = 1.0
+            whole = np.asarray(np.linalg.lstsq(np.eye(z.size) - slope, end - z, rcond=1e-13)[0], dtype=np.float64)
+            if float(np.max(np.abs(whole) / size, initial=0.0)) > REACH_MOST:  # a period in which nothing switched tells no slope: run on
+                whole, best_residual = end - z, np.inf
+            z = z + whole
         found = best_residual < 1e3 * RESIDUAL_RELATIVE
         multipliers = np.linalg.eigvals(slope).astype(complex) if slope.any() else np.zeros(0, dtype=complex)
         note = f"periodic steady state by shooting in {rounds} rounds, repeating to {best_residual:.1g}"
