@@ -152,9 +152,20 @@ def _found(dial: _Dial, stand: Standpoint, name: str, unit: str, stable: float, 
             outside = middle
     if dial.at(outside) is None:
         return StabilityLimit(name, unit, inside, largest, complex(math.nan), "no operating point", None)
-    value = float(brentq(dial.abscissa, inside, outside, xtol=1e-15 * max(abs(inside), abs(outside)), rtol=8.9e-16))
+    if dial.abscissa(inside) < 0.0 < dial.abscissa(outside):
+        value = float(brentq(dial.abscissa, inside, outside, xtol=1e-15 * max(abs(inside), abs(outside)), rtol=8.9e-16))
+    else:
+        # No crossing to follow: a limit is reached and a mode stands at zero at once, or another branch begins. Close in on the last stable value.
+        for _ in range(FOLD_BISECTIONS):
+            middle = 0.5 * (inside + outside)
+            if dial.abscissa(middle) < 0.0:
+                inside = middle
+            else:
+                outside = middle
+        value = outside
     found = dial.at(value)
-    assert found is not None
+    if found is None:
+        return StabilityLimit(name, unit, inside, largest, complex(math.nan), "no operating point", None)
     place, _, eigenvalues = found
     breaking = complex(eigenvalues[int(np.argmax(eigenvalues.real))])
     if breaking.imag < 0.0:

@@ -22,6 +22,8 @@ from polewise.analysis.point import ComplexArray
 from polewise.analysis.response import transfer
 from polewise.analysis.spectrum import spectrum
 from polewise.analysis.standpoint import Standpoint
+from polewise.grammar import syntax
+from polewise.grammar.parser import parse
 from polewise.grammar.units import TIME, Dimension, unit_text
 from polewise.kernels.program import FloatArray
 
@@ -119,7 +121,44 @@ def tune(
     quantities = stands[0].quantity(signal).dimension, stands[0].quantity(fed).dimension
     if shape == "pi":
         notes.append("keep the block's other settings (low, high)")
-    return Tuned(shape, values, _text(shape, signal, _spelling(stands[0], fed), values, *quantities), tuple(margins), tuple(stable), tuple(notes))
+    return Tuned(
+        shape,
+        values,
+        _own_text(stands[0], signal, values, *quantities) or _text(shape, signal, _spelling(stands[0], fed), values, *quantities),
+        tuple(margins),
+        tuple(stable),
+        tuple(notes),
+    )
+
+
+def _own_text(stand: Standpoint, signal: str, values: dict[str, float], out: Dimension, fed: Dimension) -> str | None:
+    """The statement of a `pi_control` that stands in the netlist, with its gains replaced; None where the signal is no such block."""
+    known = stand.circuit.signals.get(signal)
+    if known is None or not {"kp", "ki"} <= values.keys():
+        return None
+    placement = _placement(parse(known.span.source)[0].statements, known.span.start)
+    if placement is None or placement.kind != "pi_control":
+        return None
+    per = out / fed
+    gains = {"kp": _with_unit(values["kp"], per), "ki": _with_unit(values["ki"], per / TIME)}
+    text, begin = placement.span.text, placement.span.start
+    for setting in sorted(placement.settings, key=lambda one: -one.span.start):
+        if setting.name in gains:
+            at = setting.value.span
+            text = text[: at.start - begin] + gains.pop(setting.name) + text[at.end - begin :]
+    return None if gains else text
+
+
+def _placement(statements: Sequence[syntax.Statement], start: int) -> syntax.Placement | None:
+    """The placement that begins there, wherever it is nested."""
+    for statement in statements:
+        if isinstance(statement, syntax.Placement) and statement.span.start == start:
+            return statement
+        if isinstance(statement, syntax.Assembly | syntax.Each):
+            found = _placement(statement.body, start)
+            if found is not None:
+                return found
+    return None
 
 
 def _spelling(stand: Standpoint, error: str) -> str:

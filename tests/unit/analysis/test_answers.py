@@ -202,3 +202,40 @@ def test_refusals_are_sentences() -> None:
         system.impedance("out", F, load=["supply"])
     with pytest.raises(polewise.PolewiseError, match="turn the phase"):
         system.tune("reg", crossover=20e3, phase_margin=120.0)
+
+
+def test_tuned_text_is_the_netlists_own_statement() -> None:
+    system = polewise.from_text(
+        """
+        reference gnd
+        supply: vin --[48 V]-- gnd
+        leg: pole(vin, gnd, x, duty = i_reg, rate = 100 kHz, upper = transistor(10 mohm), lower = diode(0.5 V, 8 mohm))
+        choke: x --[rl: 5 mohm]--[l: 22 uH]-- out
+        cap: out --[esr: 2 mohm]--[c: 1 mF]-- gnd
+        load: out --[3 ohm]-- gnd
+        i_reg: pi_control(10 A - choke.i, kp = 0.02 /A, ki = 150 /A/s, low = 0, high = 0.95)
+        """
+    )
+    text = system.tune("i_reg", crossover=7e3, phase_margin=60.0).text
+    assert text.startswith("i_reg: pi_control(10 A - choke.i, kp = ")
+    assert text.endswith(", low = 0, high = 0.95)")
+    assert "0.02 /A," not in text
+
+
+def test_a_limit_that_no_root_crosses_is_closed_in_on() -> None:
+    # The voltage loop asks for at most 30 A, so the stage carries 12 V * 30 A whatever its margins: beyond, nothing regulates.
+    system = polewise.from_text(
+        """
+        reference gnd
+        supply: vin --[48 V]-- gnd
+        leg: pole(vin, gnd, x, duty = i_reg, rate = 100 kHz, upper = transistor(10 mohm), lower = diode(0.5 V, 8 mohm))
+        choke: x --[rl: 5 mohm]--[l: 22 uH]-- out
+        cap: out --[esr: 2 mohm]--[c: 1 mF]-- gnd
+        board: out --[demand above 6 V]-- gnd
+        latch demand = 60 W
+        v_reg: pi_control(12 V - out.v, kp = 15 A/V, ki = 25000 A/V/s, low = 0 A, high = 30 A)
+        i_reg: pi_control(v_reg - choke.i, kp = 0.02 /A, ki = 150 /A/s, low = 0, high = 0.95)
+        """
+    )
+    limit = system.stability_limit("demand", 10.0, 5000.0)
+    assert limit.value == pytest.approx(360.0, rel=1e-6)
