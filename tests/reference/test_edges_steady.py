@@ -6,6 +6,7 @@ Electronics, 2nd ed. 2001, ch. 2; Kassakian, Schlecht & Verghese 1991. Interleav
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -147,7 +148,7 @@ def test_small_ripple_error_of_dc_10_falls_with_the_square_of_the_frequency() ->
         assert averaged == pytest.approx(formula, rel=1e-11)
         assert edges - averaged == pytest.approx(published, rel=2e-4)
         errors.append(edges - averaged)
-    assert [a / b for a, b in zip(errors, errors[1:])] == pytest.approx([4.0, 4.0, 4.0], rel=1e-3)
+    assert [a / b for a, b in itertools.pairwise(errors)] == pytest.approx([4.0, 4.0, 4.0], rel=1e-3)
 
 
 def test_sepic_of_dc_10() -> None:
