@@ -11,6 +11,7 @@ from polewise.terminal.answer_text import answer_lines
 from polewise.terminal.stress_text import window_lines
 from polewise.terminal.style import Style, harmless
 from polewise.terminal.tables import Heading, table, title_line
+from polewise.terminal.trust_text import wrapped
 
 _EVENTS_MAX = 24  # of the log; the whole of it is in the summary
 _HEADINGS = (
@@ -68,7 +69,7 @@ def result_lines(result: Result, style: Style) -> list[str]:
     counters = ", ".join(f"{number} {name}" for name, number in facts.counters.items() if number)
     lines = [title_line(facts.study, style), f"  {state}"]
     if counters and facts.planned_s > 0.0:
-        lines.append(style.paint(f"  {counters}", "faint"))
+        lines += wrapped(counters, 2, style, "faint")
     if facts.sampling == "mean":
         lines.append("  sampled blocks as their mean s-domain equivalents")
     if isinstance(result, EdgeWindow):

@@ -15,6 +15,7 @@ import warnings
 from pathlib import Path
 
 import diagram
+import edges
 import growth
 import headline
 import reading
@@ -24,6 +25,7 @@ PARTS = {
     "ten": ("Ten controlled converters, 50 ms with a load step", headline.report),
     "growth": ("Growth with the number of converters", growth.report),
     "samples": ("One sample instant at 40 kHz", samples.report),
+    "edges": ("Every edge: against the averaged run, and against a hand-written loop", edges.report),
     "reading": ("Reading, building, starting", reading.report),
     "diagram": ("Work and precision", diagram.report),
 }
