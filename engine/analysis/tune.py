@@ -31,6 +31,7 @@ Shape = Literal["pi", "lead", "one zero", "two zeros"]
 SHAPES: tuple[Shape, ...] = ("pi", "lead", "one zero", "two zeros")
 BOOST_MAX_DEG = {"pi": 90.0, "lead": 90.0, "one zero": 90.0, "two zeros": 180.0}
 POLISH_LIMIT = 60
+UNSTABLE_SHORTFALL = 1e3  # degrees; beyond any margin
 RESTING_RELATIVE = 1e-6  # modes this much slower than the crossover stand for integrators left idle
 
 
@@ -240,7 +241,12 @@ def _polish(shape: Shape, plants: Sequence[_Plant], start: dict[str, float], f: 
         return values
 
     def shortfall(x: FloatArray) -> float:
-        law = compensator(shape, built(x))
+        values = built(x)
+        # A margin counts only where every closed loop is stable; outside, the way back is downhill.
+        growth = max(_growth(_closed_modes(plant, shape, values, f), f) for plant in plants)
+        if growth >= 0.0:
+            return UNSTABLE_SHORTFALL * (1.0 + growth)
+        law = compensator(shape, values)
         worst = math.inf
         for curve in curves:
             t = curve * law(2j * np.pi * grid)
@@ -266,10 +272,19 @@ def _judge(plant: _Plant, shape: Shape, values: dict[str, float], law: Callable[
         return value
 
     margins = margins_of(gain, np.array([f / 1e3, f * 1e2]), poles)
-    closed = spectrum(_closed(plant.linear, shape, values)).values
+    return margins, unstable_count(_closed_modes(plant, shape, values, f)) == 0
+
+
+def _closed_modes(plant: _Plant, shape: Shape, values: dict[str, float], f: float) -> ComplexArray:
+    """Eigenvalues of the closed loop with the compensator in place of the one in the circuit."""
+    closed: ComplexArray = spectrum(_closed(plant.linear, shape, values)).values
     # The circuit's own compensator still follows the error without driving anything: its integrators stay at the origin.
-    moving = closed[np.abs(closed) > RESTING_RELATIVE * 2.0 * math.pi * f]
-    return margins, unstable_count(moving) == 0
+    return closed[np.abs(closed) > RESTING_RELATIVE * 2.0 * math.pi * f]
+
+
+def _growth(modes: ComplexArray, f: float) -> float:
+    """The largest real part in crossovers (rad/s)."""
+    return float(np.max(modes.real)) / (2.0 * math.pi * f) if len(modes) else -1.0
 
 
 def _closed(cut: LinearSystem, shape: Shape, values: dict[str, float]) -> LinearSystem:
