@@ -10,7 +10,7 @@ from polewise.analysis.linearise import LinearSystem, SparseArray
 from polewise.analysis.point import ComplexArray
 from polewise.kernels.program import FloatArray
 
-DENSE_LIMIT = 150  # up to here all frequencies are solved together as full matrices
+DENSE_LIMIT = 60  # up to here all frequencies are solved together as full matrices; beyond, sparse factors one by one are faster
 BATCH_ENTRIES = 4_000_000  # complex entries held at once in the dense way
 
 
