@@ -64,20 +64,22 @@ def trust_of(
     findings: list[Finding] = []
     notes: list[str] = []
     subjects: list[tuple[Subject, str]] = [("pole", c.pole) for c in carriers.each]
+    snapshot = end
     with guard:
         findings += find_beats(circuit, network, carriers, limits)
-        snapshot = end
-        try:
-            view = PointView(Standpoint(circuit, network, inputs, study), carriers)
-        except PolewiseError as error:
-            notes.append(f"loops, modes and conduction boundaries: there is no operating point ({error.diagnostic.headline})")
-        else:
+        for stand in _places(Standpoint(circuit, network, inputs, study), plan, end):
+            try:
+                view = PointView(stand, carriers)
+            except PolewiseError as error:
+                notes.append(f"loops, modes and conduction boundaries: there is no operating point ({error.diagnostic.headline})")
+                continue
             snapshot = view.snapshot if snapshot is None else snapshot
-            findings += boundary_findings(view, limits)
+            if not view.moves:
+                findings += boundary_findings(view, limits)
             for check in (loop_findings, mode_findings):
                 more, said = check(view, limits)
                 findings += more
-                notes += said
+                notes += [note for note in said if note not in notes]
     if snapshot is not None:
         more, said = ripple_findings(circuit, network, study, carriers, snapshot, limits, guard)
         findings += more
@@ -92,4 +94,28 @@ def trust_of(
         recorded = {c.name for c in result.recording.columns}
         watched = [w for w, _ in watched_quantities(circuit) if w.column in recorded]
         findings += pinned_findings(watched, result, carriers, limits, windows)
-    return put_together(study, subjects, findings, notes)
+    return put_together(study, subjects, _gravest(findings), notes)
+
+
+def _places(rest: Standpoint, plan: StudyPlan | None, end: Snapshot | None) -> list[Standpoint]:
+    """Where loops, modes and boundaries are looked at: the operating point, and where a study ended if something happened in it.
+
+    A study that starts cold or from another one need not have an operating point at its start, so only its end is looked at.
+    """
+    if plan is None or end is None:
+        return [rest]
+    then = replace(rest, snapshot=end)
+    if plan.study.start != "settled":
+        return [then]
+    eventful = plan.study.time_events or plan.study.condition_events or plan.circuit.time_events or plan.circuit.condition_events
+    return [rest, then] if eventful else [rest]
+
+
+def _gravest(findings: list[Finding]) -> list[Finding]:
+    """One finding for each check of a subject: what was found at several places is told once, at its worst."""
+    worst: dict[tuple[str, str, str], Finding] = {}
+    for finding in findings:
+        key = (finding.kind, finding.name, finding.check)
+        if key not in worst or (finding.trust, finding.nearness) > (worst[key].trust, worst[key].nearness):
+            worst[key] = finding
+    return list(worst.values())

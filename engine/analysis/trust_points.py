@@ -39,6 +39,8 @@ class PointView:
         system = stand.equations([stand.quantity(f"{c.pole}.{r}") for c in carriers.each for r in ("conduction", "mode", "ripple")])
         self.point = stand.point(system)
         self.system = system
+        laws = [u.residual for u in system.unknowns]
+        self.moves = system.time in system.graph.symbols_under(laws)  # the circuit reads `time`: this is an instant, no point of rest
         g = self.circuit.graph
         roots: list[Node] = []
         for c in carriers.each:
